@@ -115,9 +115,16 @@ def nearest_distance(x: Values, centre: float, k: int) -> float:
     low, high = 0, x.size - (k + 1)
     while low < high:
         start = (low + high) // 2
-        # The window moves up while its lower end is farther away than the value above it.
-        if distance(centre, x[start]) > distance(x[start + k + 1], centre):
+        # The window moves up while its lower end is farther away than the value above it;
+        # signed, so that a window of ties on one side still moves towards the centre.
+        if _signed(centre, x[start]) > _signed(x[start + k + 1], centre):
             low = start + 1
         else:
             high = start
     return max(distance(centre, x[low]), distance(x[low + k], centre))
+
+
+@compiled
+def _signed(a: float, b: float) -> float:
+    """a − b, 0 for equal infinities."""
+    return 0.0 if a == b else a - b

@@ -1,0 +1,179 @@
+"""Kernels are compiled by numba on first use and kept on disk for the next process."""
+
+import contextlib
+import functools
+import hashlib
+import os
+import sys
+import tempfile
+import threading
+import types
+from collections.abc import Callable, Iterator
+from pathlib import Path
+from typing import Any, Final
+
+from midspread.udfs.declaring import is_compiled
+
+_OPTIONS: Final = {"nogil": True, "error_model": "numpy"}
+_compiling = threading.RLock()
+_activity: list[str] = []
+
+
+def activity() -> str | None:
+    """What is being compiled at this moment, for a progress display; None when nothing is."""
+    return _activity[-1] if _activity else None
+
+
+@functools.cache
+def dispatcher(function: Callable[..., Any]) -> Any:
+    """The numba dispatcher of a marked function, with its marked callees compiled as well."""
+    import numba
+
+    return numba.njit(**_OPTIONS)(_with_compiled_callees(function, {}))
+
+
+def compile_driver(
+    template: Callable[..., Any],
+    replacements: dict[str, Callable[..., Any]],
+    name: str,
+    signature: str,
+) -> Callable[..., None]:
+    """Compile a loop over groups around one kernel.
+
+    Parameters
+    ----------
+    template : callable
+        The loop, which calls global names such as ``kernel``.
+    replacements : dict
+        The functions these global names stand for.
+    name : str
+        Name of the result on disk; one name always has one signature, so that processes that
+        fill the cache at once write the same content.
+    signature : str
+        numba's signature of the loop.
+
+    Returns
+    -------
+    callable
+        The compiled loop; it releases the GIL.
+    """
+    import numba
+
+    with _compiling:
+        _activity.append(name)
+        try:
+            function = _with_compiled_callees(template, replacements)
+            function.__name__ = function.__qualname__ = name
+            compiled = numba.njit(**_OPTIONS)(function)
+            folder = _cache_folder()
+            if folder is None:
+                compiled.compile(signature)
+            else:
+                compiled._cache = _driver_cache(function, folder)
+                with _only_one_process(folder):
+                    compiled.compile(signature)
+            return compiled  # type: ignore[no-any-return]
+        finally:
+            _activity.pop()
+
+
+def _with_compiled_callees(
+    function: Callable[..., Any], replacements: dict[str, Callable[..., Any]]
+) -> types.FunctionType:
+    """A copy of a function whose globals hold dispatchers in place of marked functions."""
+    assert isinstance(function, types.FunctionType)
+    names = {**function.__globals__, **replacements}
+    for name in function.__code__.co_names:
+        value = names.get(name)
+        if is_compiled(value) and value is not function:
+            names[name] = _bound_dispatcher(value, replacements)
+    copy = types.FunctionType(
+        function.__code__, names, function.__name__, function.__defaults__, function.__closure__
+    )
+    copy.__module__ = function.__module__
+    return copy
+
+
+def _bound_dispatcher(
+    function: Any, replacements: dict[str, Callable[..., Any]]
+) -> Any:
+    """A callee; one that itself calls a replaced name (an adapter) is made for this loop alone."""
+    if any(name in replacements for name in function.__code__.co_names):
+        import numba
+
+        return numba.njit(**_OPTIONS)(_with_compiled_callees(function, replacements))
+    return dispatcher(function)
+
+
+@functools.cache
+def _source_stamp() -> str:
+    """A digest of every source file of this package: kernels call helpers of other files."""
+    digest = hashlib.sha256()
+    root = Path(__file__).parent
+    for path in sorted(root.rglob("*.py")):
+        digest.update(str(path.relative_to(root)).encode())
+        digest.update(path.read_bytes())
+    return digest.hexdigest()[:16]
+
+
+@functools.cache
+def _cache_folder() -> Path | None:
+    """A folder for compiled kernels that this user can write, or None."""
+    if sys.platform == "win32":
+        base = Path(os.environ.get("LOCALAPPDATA", Path.home() / "AppData" / "Local"))
+    else:
+        base = Path(os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache")
+    for candidate in (base, Path(tempfile.gettempdir()) / f"midspread-{os.getuid()}"):
+        folder = candidate / "midspread" / f"kernels-{_source_stamp()}"
+        with contextlib.suppress(OSError):
+            folder.mkdir(parents=True, exist_ok=True, mode=0o700)
+            # Compiled code is run as it stands: take it only from a folder of this user's own.
+            if folder.stat().st_uid != os.getuid():
+                continue
+            tempfile.TemporaryFile(dir=folder).close()
+            return folder
+    return None
+
+
+@contextlib.contextmanager
+def _only_one_process(folder: Path) -> Iterator[None]:
+    """Hold the folder's lock: numba's index of compiled code is not made for two writers."""
+    try:
+        import fcntl
+    except ImportError:  # no flock here: the worst case is compiling twice
+        yield
+        return
+    with (folder / "lock").open("w") as lock:
+        fcntl.flock(lock, fcntl.LOCK_EX)
+        yield
+
+
+def _driver_cache(function: types.FunctionType, folder: Path) -> Any:
+    """numba's disk cache, kept in our folder and keyed by all of our sources."""
+    from numba.core import caching
+
+    class Locator(caching._CacheLocator):  # type: ignore[misc]
+        def get_cache_path(self) -> str:
+            return str(folder)
+
+        def get_source_stamp(self) -> str:
+            return _source_stamp()
+
+        def get_disambiguator(self) -> str:
+            return ""
+
+        @classmethod
+        def from_function(cls, _function: object, _file: object) -> "Locator":
+            return cls()
+
+    class Content(caching.CompileResultCacheImpl):  # type: ignore[misc]
+        _locator_classes = (Locator,)
+
+        def get_filename_base(self, _fullname: str, abiflags: str) -> str:
+            version = f"{sys.version_info.major}{sys.version_info.minor}"
+            return f"{function.__name__}.py{version}{abiflags}"
+
+    class DriverCache(caching.Cache):  # type: ignore[misc]
+        _impl_class = Content
+
+    return DriverCache(function)
