@@ -11,7 +11,7 @@ import os
 import threading
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Final
 
 import numpy as np
@@ -75,7 +75,7 @@ class Groups:
 
     values: Values
     offsets: Indices
-    weights: Values = _EMPTY
+    weights: Values = field(default_factory=lambda: _EMPTY)
 
     @property
     def lengths(self) -> Indices:

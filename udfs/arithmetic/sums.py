@@ -106,3 +106,24 @@ def sum_of_squares(x: Values, start: int, stop: int, centre: float) -> float:
         d0 += v
     deviation = d0 + d1
     return (s0 + s1) - deviation * deviation / (stop - start)
+
+
+@compiled
+def winsorized_sum_of_squares(x: Values, g: int) -> float:
+    """Σ (w_i − mean(w))² where w is x with the g lowest and g highest values pulled in."""
+    n = x.size
+    low, high = x[g], x[n - g - 1]
+    if low == high:
+        return 0.0
+    if math.isinf(low) or math.isinf(high):
+        return math.nan
+    # Deviations are taken from a value inside the data, then corrected for the mean.
+    centre = compensated_mean(x, g, n - g)
+    middle = compensated_sum_from(x, g, n - g, centre)
+    below, above = low - centre, high - centre
+    shift = (middle + g * (below + above)) / n
+    total = 0.0
+    for i in range(g, n - g):
+        v = (x[i] - centre) - shift
+        total += v * v
+    return total + g * ((below - shift) * (below - shift) + (above - shift) * (above - shift))

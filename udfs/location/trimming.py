@@ -1,5 +1,6 @@
 """Means of the middle part, and the trimean."""
 
+import math
 from typing import Final
 
 from midspread.udfs.arithmetic.order_statistics import (
@@ -101,9 +102,11 @@ def winsorized_mean(x: Values, share: float) -> float:
     if g == 0:
         return compensated_mean(x, 0, n)
     low, high = x[g], x[n - g - 1]
-    centre = x[n // 2]
     if low == high:
-        return centre
+        return low
+    centre = x[n // 2]
+    if math.isinf(low) or math.isinf(high):
+        return (g * low + g * high + compensated_sum_from(x, g, n - g, 0.0)) / n
     middle = compensated_sum_from(x, g, n - g, centre)
     return centre + (middle + g * ((low - centre) + (high - centre))) / n
 

@@ -1,0 +1,53 @@
+"""What all tests share: a connection with our functions, and a way to ask for one figure."""
+
+from collections.abc import Callable, Iterator, Sequence
+from typing import Any
+
+import duckdb
+import numpy as np
+import pytest
+
+from midspread.udfs import functions, register
+
+Estimate = Callable[..., Any]
+
+
+@pytest.fixture(scope="session")
+def connection() -> Iterator[duckdb.DuckDBPyConnection]:
+    """An in-memory DuckDB connection equipped with every function."""
+    with duckdb.connect() as opened:
+        register(opened)
+        yield opened
+
+
+@pytest.fixture(scope="session")
+def estimate(connection: duckdb.DuckDBPyConnection) -> Estimate:
+    """``estimate(name, x, w?, **parameters)``: one function on one group, computed through SQL.
+
+    NULL comes back as None; structs as dicts; lists of structs as lists of dicts.
+    """
+
+    def one_figure(name: str, *columns: Sequence[Any], **parameters: float) -> Any:
+        names = functions()[name].columns
+        frame = {}
+        for column, values in zip(names, columns, strict=True):
+            frame[column] = [None if v is None else float(v) for v in values]
+        arguments = [*names, *(f"{key} := {value!r}" for key, value in parameters.items())]
+        lists = ", ".join(f"unnest($values_{column}::DOUBLE[]) AS {column}" for column in names)
+        cursor = connection.cursor()
+        register(cursor)
+        row = cursor.execute(
+            f"SELECT {name}({', '.join(arguments)}) FROM (SELECT {lists})",
+            {f"values_{column}": values for column, values in frame.items()},
+        ).fetchone()
+        cursor.close()
+        assert row is not None
+        return row[0]
+
+    return one_figure
+
+
+@pytest.fixture
+def generator() -> np.random.Generator:
+    """Random numbers, the same ones in every run."""
+    return np.random.default_rng(20310307)

@@ -1,0 +1,336 @@
+"""The catalogue as DuckDB functions.
+
+DuckDB's Python interface registers scalar functions only. An aggregate is therefore a macro
+over a list: ``trimmed_mean(x, share)`` stands for ``_trimmed_mean(_values(x), share)``, where
+``_values(x)`` collects a group's non-NULL values and ``_trimmed_mean`` is an Arrow function over
+batches of such lists.
+"""
+
+import inspect
+from collections.abc import Callable, Sequence
+from typing import Any, Final
+
+import duckdb
+import numpy as np
+import pyarrow as pa
+
+from midspread.udfs.catalogue import functions
+from midspread.udfs.declaring import NULL, Function, Parameter, ParameterError, Values, null_mask
+from midspread.udfs.drivers import driver
+from midspread.udfs.grouped import Control, Groups, Task, row_numbers, run
+
+NUMBER_TYPES: Final = "a number (any integer type, DECIMAL, FLOAT or DOUBLE)"
+_OTHER_TYPES: Final = (
+    "VARCHAR",
+    "BOOLEAN",
+    "DATE",
+    "TIME",
+    "TIMESTAMP",
+    "TIMESTAMP WITH TIME ZONE",
+    "INTERVAL",
+    "BLOB",
+    "UUID",
+)
+
+
+def register(
+    connection: duckdb.DuckDBPyConnection,
+    *,
+    control: Control | None = None,
+    threads: int | None = None,
+) -> None:
+    """Equip a DuckDB connection with every function of the catalogue.
+
+    Parameters
+    ----------
+    connection : duckdb.DuckDBPyConnection
+        Any connection or cursor. Nothing is written to its database: the functions live in the
+        instance and their macros are temporary. Call it again on every further cursor.
+    control : Control, optional
+        Counts finished values and can stop running functions. The one given first serves all
+        connections of the same instance.
+    threads : int, optional
+        Threads that work on one batch; DuckDB's own setting when not given.
+
+    Examples
+    --------
+    >>> import duckdb
+    >>> connection = duckdb.connect()
+    >>> register(connection)
+    >>> connection.sql("SELECT trimmed_mean(x, 0.25) FROM (VALUES (1), (2), (4), (90)) t(x)")
+    """
+    if control is None:
+        control = Control()
+    if threads is None:
+        row = connection.execute("SELECT current_setting('threads')").fetchone()
+        threads = int(row[0]) if row else 1
+    binding = _Binding(connection, control, threads)
+    binding.register_shared()
+    for function in functions().values():
+        if function.kind == "aggregate":
+            binding.register_aggregate(function)
+    for function in functions().values():
+        if function.kind == "table":
+            connection.execute(table_macro(function))
+
+
+class _Binding:
+    def __init__(
+        self, connection: duckdb.DuckDBPyConnection, control: Control, threads: int
+    ) -> None:
+        self._connection = connection
+        self._control = control
+        self._threads = threads
+
+    def register_shared(self) -> None:
+        """What all functions rest on: the macros that collect values, the shared-sort function."""
+        self._connection.execute(
+            "CREATE OR REPLACE TEMP MACRO _values(x DOUBLE) AS list(x) FILTER (x IS NOT NULL)"
+        )
+        self._connection.execute(
+            "CREATE OR REPLACE TEMP MACRO _values_of_pairs(x DOUBLE, w DOUBLE) AS "
+            "list(x) FILTER (x IS NOT NULL AND w IS NOT NULL)"
+        )
+        self._create(
+            "_estimates", self._estimates, ["DOUBLE[]", "VARCHAR", "DOUBLE[]"], "DOUBLE[]"
+        )
+        from midspread.udfs.tables.summaries import SUMMARIES
+
+        for summary in SUMMARIES:
+            self._create(
+                summary.sql_name,
+                lambda lists, summary=summary: summary.answer(
+                    groups_of(lists), self._control, self._threads
+                ),
+                ["DOUBLE[]"],
+                summary.sql_type,
+            )
+
+    def register_aggregate(self, function: Function) -> None:
+        """Create the Arrow function and the macro that calls it."""
+        lists = ["DOUBLE[]"] * len(function.columns)
+        numbers = ["DOUBLE"] * len(function.parameters)
+
+        def answer(*arguments: Any) -> pa.Array:
+            return self._aggregate(function, arguments)
+
+        arguments = [*lists, *numbers]
+        # DuckDB compares the number of types with the number of parameters it finds by inspection.
+        answer.__signature__ = inspect.Signature(  # type: ignore[attr-defined]
+            [
+                inspect.Parameter(f"argument_{i}", inspect.Parameter.POSITIONAL_ONLY)
+                for i in range(len(arguments))
+            ]
+        )
+        self._create(f"_{function.name}", answer, arguments, _result_type(function))
+        self._connection.execute(aggregate_macro(function))
+
+    def _create(
+        self, name: str, function: Callable[..., Any], arguments: Sequence[str], result: str
+    ) -> None:
+        try:
+            self._connection.create_function(
+                name,
+                function,
+                list(arguments),  # type: ignore[arg-type]
+                result,  # type: ignore[arg-type]
+                type="arrow",  # type: ignore[arg-type]
+                null_handling="special",  # type: ignore[arg-type]
+            )
+        except duckdb.NotImplementedException as error:
+            if "already created" not in str(error):
+                raise
+
+    def _aggregate(self, function: Function, arguments: tuple[Any, ...]) -> pa.Array:
+        columns = len(function.columns)
+        groups = groups_of(*arguments[:columns])
+        if groups.weights.size:
+            _check_weights(function.name, groups.weights)
+        parameters = _parameter_rows(function, arguments[columns:])
+        lengths = groups.lengths
+        counts = np.ones_like(lengths)
+        if function.rows:
+            counts = _record_counts(function, lengths)
+        rows = row_numbers(counts)
+        out = np.full((int(rows[-1]), max(len(function.fields), 1)), NULL)
+        task = Task(driver(function), parameters, function.smallest_n, 0)
+        run(groups, [task], out, rows, self._control, self._threads)
+        if function.rows:
+            return _lists_of_records(function, out, rows)
+        if function.fields:
+            return _records(function, out, lengths < function.smallest_n)
+        return numbers_or_null(out[:, 0])
+
+    def _estimates(self, lists: Any, names: Any, parameters: Any) -> pa.Array:
+        """Several functions over one sort; see the shared-sort rewrite of the engine."""
+        groups = groups_of(lists)
+        count = len(groups.offsets) - 1
+        wanted = [functions()[name] for name in single_chunk(names)[0].as_py().split(",")]
+        given = _matrix(single_chunk(parameters), count)
+        out = np.full((count, len(wanted)), NULL)
+        tasks = []
+        row = 0
+        for column, function in enumerate(wanted):
+            own = given[row : row + len(function.parameters)]
+            row += len(function.parameters)
+            for parameter, values in zip(function.parameters, own, strict=True):
+                parameter.check(function.name, values, null_mask(values))
+            tasks.append(Task(driver(function), own, function.smallest_n, column))
+        run(groups, tasks, out, row_numbers(np.ones(count, np.int64)), self._control, self._threads)
+        offsets = np.arange(count + 1, dtype=np.int32) * len(wanted)
+        return pa.ListArray.from_arrays(pa.array(offsets), numbers_or_null(out.reshape(-1)))
+
+
+def single_chunk(array: Any) -> Any:
+    """The one Arrow array behind what DuckDB hands over."""
+    if isinstance(array, pa.ChunkedArray):
+        return array.chunk(0) if array.num_chunks == 1 else array.combine_chunks()
+    return array
+
+
+def groups_of(lists: Any, weights: Any = None) -> Groups:
+    """The groups behind Arrow lists; a NULL list is an empty group. Values are not copied."""
+    lists = single_chunk(lists)
+    offsets = lists.offsets.to_numpy().astype(np.int64)
+    values = _floats(lists.values)
+    if weights is None:
+        return Groups(values, offsets)
+    weights = single_chunk(weights)
+    return Groups(values, offsets, _floats(weights.values))
+
+
+def _floats(array: pa.Array) -> Values:
+    if array.null_count:
+        raise ParameterError("a list handed to a statistic must hold no NULL; filter them first.")
+    return array.to_numpy(zero_copy_only=True)  # type: ignore[no-any-return]
+
+
+def _matrix(lists: pa.Array, count: int) -> Values:
+    """Lists of equal length as a matrix, one column a group; NULL becomes the NULL marker."""
+    values = lists.values
+    numbers = values.to_numpy(zero_copy_only=False).astype(np.float64)
+    if values.null_count:
+        numbers[values.is_null().to_numpy(zero_copy_only=False)] = NULL
+    return np.ascontiguousarray(numbers.reshape(count, -1).T)
+
+
+def _parameter_rows(function: Function, arguments: Sequence[Any]) -> Values:
+    """Checked parameters, one row each, one column a group."""
+    rows = []
+    for parameter, argument in zip(function.parameters, arguments, strict=True):
+        array = single_chunk(argument)
+        missing = array.is_null().to_numpy(zero_copy_only=False)
+        values = array.to_numpy(zero_copy_only=False)
+        parameter.check(function.name, values, missing)
+        rows.append(values)
+    return np.ascontiguousarray(rows, dtype=np.float64) if rows else np.empty((0, 1))
+
+
+def _check_weights(function: str, weights: Values) -> None:
+    wrong = weights[weights < 0]
+    if wrong.size:
+        raise ParameterError(
+            f"{function}: weights must be 0 or more, got {wrong[0]:g}; "
+            f"leave such rows out or set their weight to 0."
+        )
+
+
+def _record_counts(function: Function, lengths: Any) -> Any:
+    assert function.rows is not None
+    distinct, inverse = np.unique(lengths, return_inverse=True)
+    counts = [0 if n < function.smallest_n else function.rows(int(n)) for n in distinct]
+    return np.array(counts, dtype=np.int64)[inverse]
+
+
+def numbers_or_null(numbers: Values) -> pa.Array:
+    """An Arrow column in which the kernels' NULL marker is NULL."""
+    return pa.array(numbers, mask=null_mask(numbers))
+
+
+def _field_array(function: Function, name: str, numbers: Values) -> pa.Array:
+    labels = function.labels.get(name)
+    if labels is None:
+        return numbers_or_null(np.ascontiguousarray(numbers))
+    return pa.array([None if np.isnan(v) else labels[int(v)] for v in numbers], pa.string())
+
+
+def _records(function: Function, out: Values, missing: Any = None) -> pa.StructArray:
+    arrays = [_field_array(function, name, out[:, i]) for i, name in enumerate(function.fields)]
+    mask = None if missing is None else pa.array(missing)
+    return pa.StructArray.from_arrays(arrays, names=list(function.fields), mask=mask)
+
+
+def _lists_of_records(function: Function, out: Values, rows: Any) -> pa.ListArray:
+    empty = np.diff(rows) == 0
+    return pa.ListArray.from_arrays(
+        pa.array(rows.astype(np.int32)), _records(function, out), mask=pa.array(empty)
+    )
+
+
+def _result_type(function: Function) -> str:
+    if not function.fields:
+        return "DOUBLE"
+    fields = ", ".join(
+        f'"{name}" {"VARCHAR" if name in function.labels else "DOUBLE"}' for name in function.fields
+    )
+    return f"STRUCT({fields})" + ("[]" if function.rows else "")
+
+
+def aggregate_macro(function: Function) -> str:
+    """The statement that creates an aggregate's macro.
+
+    A typed parameter takes every numeric type and nothing else; one more overload for each other
+    type answers with a sentence of ours.
+    """
+    parameters = [_macro_parameter(parameter) for parameter in function.parameters]
+    if function.columns == ("x", "w"):
+        collected = ["_values_of_pairs(x, w)", "_values_of_pairs(w, x)"]
+    else:
+        collected = ["_values(x)"]
+    names = [parameter.name for parameter in function.parameters]
+    call = f"_{function.name}({', '.join([*collected, *names])})"
+    overloads = [
+        f"({', '.join([*(f'{column} DOUBLE' for column in function.columns), *parameters])}) AS {call}"
+    ]
+    for wrong in range(len(function.columns)):
+        for other in _OTHER_TYPES:
+            types = ["DOUBLE"] * len(function.columns)
+            types[wrong] = other
+            columns = [f"{c} {t}" for c, t in zip(function.columns, types, strict=True)]
+            overloads.append(
+                f"({', '.join([*columns, *parameters])}) AS "
+                f"error({_quoted(wrong_type(function.name, function.columns[wrong], other))})"
+            )
+    return f"CREATE OR REPLACE TEMP MACRO {function.name}{', '.join(overloads)}"
+
+
+def wrong_type(function: str, column: str, given: str) -> str:
+    """The sentence about a column of a type that no statistic takes."""
+    return (
+        f"{function}: {column} must be {NUMBER_TYPES}, not {given}; "
+        f"turn it into a number first, for example CAST({column} AS DOUBLE) or epoch({column})."
+    )
+
+
+def table_macro(function: Function) -> str:
+    """The statement that creates a table function's macro."""
+    parameters = [*function.columns, *(_macro_parameter(p, typed=False) for p in function.parameters)]
+    return (
+        f"CREATE OR REPLACE TEMP MACRO {function.name}({', '.join(parameters)}) AS TABLE "
+        f"{function.sql}"
+    )
+
+
+def _macro_parameter(parameter: Parameter, *, typed: bool = True) -> str:
+    name = f'"{parameter.name}"' if parameter.name == "by" else parameter.name
+    declaration = f"{name} DOUBLE" if typed else name
+    default = parameter.default
+    if default is None:
+        return declaration
+    if isinstance(default, bool):
+        return f"{declaration} := {str(default).lower()}"
+    return f"{declaration} := {default}"
+
+
+def _quoted(text: str) -> str:
+    return "'" + text.replace("'", "''") + "'"
