@@ -46,7 +46,7 @@ def _over_groups(
     Group r of this batch holds ``values[starts[r] : starts[r] + lengths[r]]`` and answers in
     ``out[rows[groups[r]], column:]``, prefilled with NULL.
     """
-    for r in range(starts.size):
+    for r in range(groups.size):
         if control[STOP] != 0:
             return
         n = lengths[r]

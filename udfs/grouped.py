@@ -7,6 +7,7 @@ ever copied.
 """
 
 import functools
+import itertools
 import os
 import threading
 from collections.abc import Callable, Iterator, Sequence
@@ -21,8 +22,9 @@ from midspread.udfs.compiling import compile_driver
 from midspread.udfs.declaring import Values
 from midspread.udfs.drivers import DONE, STOP, Indices
 
-_PORTION: Final = 1 << 16  # values worked on at once by one thread
-_SMALL: Final = 512  # groups up to this size are padded into a matrix
+_PORTION: Final = 1 << 17  # values worked on at once by one thread
+_WIDTHS: Final = (8, 16, 32, 64, 96, 128, 256, 512)  # groups up to the last are padded to one of these
+_SMALL: Final = _WIDTHS[-1]
 _WORTH_A_THREAD: Final = 1 << 17
 _EMPTY: Final = np.empty(0)
 
@@ -176,19 +178,15 @@ def _work_off(
     """Sort one portion's groups and run the tasks on them."""
     for members, width in _layouts(lengths, start, stop):
         sizes = lengths[members]
-        if width:
-            starts = np.arange(members.size, dtype=np.int64) * width
-            scratch = np.full(members.size * width, np.nan)
-        else:
-            starts = np.concatenate(([0], np.cumsum(sizes)[:-1]))
-            scratch = np.empty(int(sizes.sum()))
+        starts = np.arange(members.size + 1) * width if width else row_numbers(sizes)
+        scratch = np.empty(int(starts[-1]))
         sources = groups.offsets[members]
         _gather()(groups.values, sources, sizes, scratch, starts)
         weights = _EMPTY
         if groups.weights.size:
-            weights = np.full_like(scratch, np.nan)
+            weights = np.empty_like(scratch)
             _gather()(groups.weights, sources, sizes, weights, starts)
-        _sort(scratch, weights, starts, sizes, width)
+        _sort(scratch, weights, starts, width)
         for task in tasks:
             task.run(
                 scratch,
@@ -212,23 +210,22 @@ def _layouts(lengths: Indices, start: int, stop: int) -> Iterator[tuple[Indices,
         yield np.array([start], dtype=np.int64), 0
         return
     widths = _width_of()[np.minimum(sizes, _SMALL + 1)]
-    for width in np.unique(widths):
-        yield np.flatnonzero(widths == width) + start, int(width)
+    for width in (0, *_WIDTHS):
+        members = np.flatnonzero(widths == width)
+        if members.size:
+            yield members + start, width
 
 
 @functools.cache
 def _width_of() -> Indices:
     """Matrix width for each small group size; 0 for the larger ones."""
-    widths = [8, 16, 24, 32, 48, 64, 96, 128, 192, 256, 384, _SMALL]
-    sizes = np.arange(_SMALL + 2)
-    chosen = np.array(widths, dtype=np.int64)[
-        np.minimum(np.searchsorted(widths, sizes), len(widths) - 1)
-    ]
-    chosen[_SMALL + 1] = 0
+    sizes = np.arange(_SMALL + 1)
+    chosen = np.zeros(_SMALL + 2, dtype=np.int64)
+    chosen[:-1] = np.array(_WIDTHS)[np.searchsorted(_WIDTHS, sizes)]
     return chosen
 
 
-def _sort(scratch: Values, weights: Values, starts: Indices, sizes: Indices, width: int) -> None:
+def _sort(scratch: Values, weights: Values, starts: Indices, width: int) -> None:
     """Sort each group in place; weights travel along, in an order of their own within ties."""
     if width:
         matrix = scratch.reshape(-1, width)
@@ -237,12 +234,11 @@ def _sort(scratch: Values, weights: Values, starts: Indices, sizes: Indices, wid
         else:
             matrix.sort(axis=1)
         return
-    for start, size in zip(starts.tolist(), sizes.tolist(), strict=True):
-        values = scratch[start : start + size]
+    for start, stop in itertools.pairwise(starts.tolist()):
         if weights.size:
-            _sort_with(values[np.newaxis, :], weights[np.newaxis, start : start + size])
+            _sort_with(scratch[np.newaxis, start:stop], weights[np.newaxis, start:stop])
         else:
-            values.sort()
+            scratch[start:stop].sort()
 
 
 def _sort_with(matrix: Values, weights: Values) -> None:
@@ -258,12 +254,16 @@ def _sort_with(matrix: Values, weights: Values) -> None:
 def _copy_groups(
     values: Values, sources: Indices, sizes: Indices, target: Values, starts: Indices
 ) -> None:
-    """Copy groups to their places; adding 0.0 turns −0.0, which sorts anywhere, into 0.0."""
+    """Copy group r to ``target[starts[r] : starts[r + 1]]`` and pad it with NaN, which sorts last.
+
+    Adding 0.0 turns −0.0, which would sort to either side of 0.0, into 0.0.
+    """
     for r in range(sources.size):
         source = sources[r]
         start = starts[r]
         for i in range(sizes[r]):
             target[start + i] = values[source + i] + 0.0
+        target[start + sizes[r] : starts[r + 1]] = np.nan
 
 
 @functools.cache
