@@ -39,7 +39,7 @@ QUERIES = [
     "DESCRIBE SELECT Sum(visit), visit AS V FROM visits",
     "SUMMARIZE visits",
     "VALUES (1, 'A'), (2, 'a')",
-    "SELECT route Route, visit FROM visits WHERE "Stop" LIKE 'R1' UNION ALL SELECT 1, 2 ORDER BY ALL",
+    "SELECT route Route, visit FROM visits WHERE NOT False UNION ALL SELECT 1, 2 ORDER BY ALL",
 ]
 
 Outcome = tuple[list[str], list[str], list[tuple[object, ...]]] | None
