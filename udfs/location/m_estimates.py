@@ -10,6 +10,7 @@ from midspread.udfs.arithmetic.order_statistics import (
     median_absolute_deviation,
     median_sorted,
 )
+from midspread.udfs.arithmetic.running import add
 from midspread.udfs.arithmetic.sums import compensated_mean, compensated_sum_from
 from midspread.udfs.arithmetic.windows import first_above, first_from
 from midspread.udfs.declaring import NULL, Parameter, Values, aggregate, compiled
@@ -129,26 +130,18 @@ def _moved_window(
     n = x.size
     total = lost = 0.0
     while low < n and x[low] - centre < offset - reach:
-        total, lost = _add(total, lost, centre - x[low])
+        total, lost = add(total, lost, centre - x[low])
         low += 1
     while low > 0 and x[low - 1] - centre >= offset - reach:
         low -= 1
-        total, lost = _add(total, lost, x[low] - centre)
+        total, lost = add(total, lost, x[low] - centre)
     while high < n and x[high] - centre <= offset + reach:
-        total, lost = _add(total, lost, x[high] - centre)
+        total, lost = add(total, lost, x[high] - centre)
         high += 1
     while high > 0 and x[high - 1] - centre > offset + reach:
         high -= 1
-        total, lost = _add(total, lost, centre - x[high])
+        total, lost = add(total, lost, centre - x[high])
     return low, high, total + lost
-
-
-@compiled
-def _add(total: float, lost: float, value: float) -> tuple[float, float]:
-    """Add a value to a running sum whose rounding errors gather in `lost`."""
-    new = total + value
-    part = new - total
-    return new, lost + ((total - (new - part)) + (value - part))
 
 
 @aggregate(
@@ -264,11 +257,11 @@ def _add_powers(
             s3 += y * square
             s4 += square * square
             s5 += y * (square * square)
-        total1, lost1 = _add(total1, lost1, sign * s1)
-        total2, lost2 = _add(total2, lost2, sign * s2)
-        total3, lost3 = _add(total3, lost3, sign * s3)
-        total4, lost4 = _add(total4, lost4, sign * s4)
-        total5, lost5 = _add(total5, lost5, sign * s5)
+        total1, lost1 = add(total1, lost1, sign * s1)
+        total2, lost2 = add(total2, lost2, sign * s2)
+        total3, lost3 = add(total3, lost3, sign * s3)
+        total4, lost4 = add(total4, lost4, sign * s4)
+        total5, lost5 = add(total5, lost5, sign * s5)
     powers[0] += sign * (stop - start)
     powers[1] = total1 + lost1
     powers[2] = total2 + lost2
