@@ -126,7 +126,6 @@ class Function:
     kernel: Callable[..., Any] | None = None
     rows: Callable[[int], int] | None = None
     labels: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
-    sql: str = ""
 
     @property
     def meaning(self) -> str:
@@ -241,40 +240,59 @@ def aggregate(
 
 def table_function(
     *,
-    name: str,
     columns: tuple[str, ...],
     parameters: tuple[Parameter, ...],
     fields: tuple[str, ...],
-    sql: str,
     formula: str,
     source: str,
     breakdown: str,
     cost: str,
     example: str,
-    description: str,
     smallest_n: int = 0,
     version: int = 1,
-) -> Function:
-    """Declare a table function; `sql` is the body of its table macro."""
-    function = Function(
-        name=name,
-        family="tables",
-        kind="table",
-        columns=columns,
-        parameters=parameters,
-        fields=fields,
-        formula=formula,
-        source=source,
-        breakdown=breakdown,
-        cost=cost,
-        smallest_n=smallest_n,
-        example=example,
-        description=inspect.cleandoc(description),
-        version=version,
-        sql=sql,
-    )
-    _TABLES[name] = function
-    return function
+) -> Callable[[Anything], Anything]:
+    """Declare a table function; the decorated function writes the query it stands for.
+
+    Parameters
+    ----------
+    columns : tuple of str
+        Required arguments: the table and the columns it works on.
+    parameters : tuple of Parameter
+        Optional arguments; a default that is text is an SQL literal.
+    fields : tuple of str
+        The result's columns, after the keys.
+    formula, source, breakdown, cost, example, smallest_n, version
+        As for `aggregate`.
+
+    Returns
+    -------
+    callable
+        The function unchanged. It takes all arguments as Python values, by name, and returns
+        SQL text; it raises ParameterError for what is not allowed.
+    """
+
+    def declare(writer: Anything) -> Anything:
+        name = writer.__name__
+        _TABLES[name] = Function(
+            name=name,
+            family="tables",
+            kind="table",
+            columns=columns,
+            parameters=parameters,
+            fields=fields,
+            formula=formula,
+            source=source,
+            breakdown=breakdown,
+            cost=cost,
+            smallest_n=smallest_n,
+            example=example,
+            description=inspect.cleandoc(writer.__doc__ or ""),
+            version=version,
+            kernel=writer,
+        )
+        return writer
+
+    return declare
 
 
 def declared() -> dict[str, Function]:

@@ -6,8 +6,10 @@ over a list: ``trimmed_mean(x, share)`` stands for ``_trimmed_mean(_values(x), s
 batches of such lists.
 """
 
+import functools
 import inspect
-from collections.abc import Callable, Sequence
+import json
+from collections.abc import Callable, Container, Iterable, Sequence
 from typing import Any, Final
 
 import duckdb
@@ -16,8 +18,9 @@ import pyarrow as pa
 
 from midspread.udfs.catalogue import functions
 from midspread.udfs.declaring import NULL, Function, Parameter, ParameterError, Values, null_mask
-from midspread.udfs.drivers import driver
+from midspread.udfs.drivers import driver, summary_driver
 from midspread.udfs.grouped import Control, Groups, Task, row_numbers, run
+from midspread.udfs.tables.robust_summary import DEEP_FIGURES, SUMMARY_FIELDS, summarise
 
 NUMBER_TYPES: Final = "a number (any integer type, DECIMAL, FLOAT or DOUBLE)"
 _OTHER_TYPES: Final = (
@@ -94,17 +97,26 @@ class _Binding:
         self._create(
             "_estimates", self._estimates, ["DOUBLE[]", "VARCHAR", "DOUBLE[]"], "DOUBLE[]"
         )
-        from midspread.udfs.tables.summaries import SUMMARIES
-
-        for summary in SUMMARIES:
+        number_macros = [
+            f"({'x ' + kind}, function_name, column_name) AS error(function_name || ': ' || "
+            f"column_name || ' must be {NUMBER_TYPES}, not {kind}; turn it into a number first, "
+            f"for example with CAST(' || column_name || ' AS DOUBLE).')"
+            for kind in _OTHER_TYPES
+        ]
+        self._connection.execute(
+            "CREATE OR REPLACE TEMP MACRO _numbers(x DOUBLE, function_name, column_name) AS "
+            f"list(x) FILTER (x IS NOT NULL), {', '.join(number_macros)}"
+        )
+        for name, deep in (("_summary", ()), ("_deep_summary", DEEP_FIGURES)):
             self._create(
-                summary.sql_name,
-                lambda lists, summary=summary: summary.answer(
-                    groups_of(lists), self._control, self._threads
-                ),
+                name,
+                functools.partial(self._summary, deep=deep),
                 ["DOUBLE[]"],
-                summary.sql_type,
+                _struct_type([*SUMMARY_FIELDS, *deep]),
             )
+        self._create(
+            "_table_query", write_table_query, ["VARCHAR", "VARCHAR"], "VARCHAR", kind="native"
+        )
 
     def register_aggregate(self, function: Function) -> None:
         """Create the Arrow function and the macro that calls it."""
@@ -115,26 +127,34 @@ class _Binding:
             return self._aggregate(function, arguments)
 
         arguments = [*lists, *numbers]
-        # DuckDB compares the number of types with the number of parameters it finds by inspection.
-        answer.__signature__ = inspect.Signature(  # type: ignore[attr-defined]
+        self._create(f"_{function.name}", answer, arguments, _result_type(function))
+        self._connection.execute(aggregate_macro(function))
+
+    def _create(
+        self,
+        name: str,
+        function: Callable[..., Any],
+        arguments: Sequence[str],
+        result: str,
+        kind: str = "arrow",
+    ) -> None:
+        def called(*given: Any) -> Any:
+            return function(*given)
+
+        # DuckDB compares the number of types with the parameters it finds by inspection.
+        called.__signature__ = inspect.Signature(  # type: ignore[attr-defined]
             [
                 inspect.Parameter(f"argument_{i}", inspect.Parameter.POSITIONAL_ONLY)
                 for i in range(len(arguments))
             ]
         )
-        self._create(f"_{function.name}", answer, arguments, _result_type(function))
-        self._connection.execute(aggregate_macro(function))
-
-    def _create(
-        self, name: str, function: Callable[..., Any], arguments: Sequence[str], result: str
-    ) -> None:
         try:
             self._connection.create_function(
                 name,
-                function,
+                called,
                 list(arguments),  # type: ignore[arg-type]
                 result,  # type: ignore[arg-type]
-                type="arrow",  # type: ignore[arg-type]
+                type=kind,  # type: ignore[arg-type]
                 null_handling="special",  # type: ignore[arg-type]
             )
         except duckdb.NotImplementedException as error:
@@ -179,6 +199,22 @@ class _Binding:
         run(groups, tasks, out, row_numbers(np.ones(count, np.int64)), self._control, self._threads)
         offsets = np.arange(count + 1, dtype=np.int32) * len(wanted)
         return pa.ListArray.from_arrays(pa.array(offsets), numbers_or_null(out.reshape(-1)))
+
+
+    def _summary(self, lists: Any, *, deep: tuple[str, ...]) -> pa.Array:
+        """The figures of robust_summary; the deep ones come from the functions' own loops."""
+        groups = groups_of(lists)
+        fields = [*SUMMARY_FIELDS, *deep]
+        count = len(groups.offsets) - 1
+        out = np.full((count, len(fields)), NULL)
+        no_parameters = np.empty((0, 1))
+        tasks = [Task(summary_driver("summary", summarise), no_parameters, 1, 0)]
+        for place, name in enumerate(deep, start=len(SUMMARY_FIELDS)):
+            function = functions()[name]
+            tasks.append(Task(driver(function), no_parameters, function.smallest_n, place))
+        run(groups, tasks, out, row_numbers(np.ones(count, np.int64)), self._control, self._threads)
+        arrays = [numbers_or_null(np.ascontiguousarray(out[:, i])) for i in range(len(fields))]
+        return pa.StructArray.from_arrays(arrays, names=fields)
 
 
 def single_chunk(array: Any) -> Any:
@@ -270,10 +306,12 @@ def _lists_of_records(function: Function, out: Values, rows: Any) -> pa.ListArra
 def _result_type(function: Function) -> str:
     if not function.fields:
         return "DOUBLE"
-    fields = ", ".join(
-        f'"{name}" {"VARCHAR" if name in function.labels else "DOUBLE"}' for name in function.fields
-    )
-    return f"STRUCT({fields})" + ("[]" if function.rows else "")
+    return _struct_type(function.fields, function.labels) + ("[]" if function.rows else "")
+
+
+def _struct_type(fields: Iterable[str], texts: Container[str] = ()) -> str:
+    listed = (f'"{name}" {"VARCHAR" if name in texts else "DOUBLE"}' for name in fields)
+    return f"STRUCT({', '.join(listed)})"
 
 
 def aggregate_macro(function: Function) -> str:
@@ -313,16 +351,30 @@ def wrong_type(function: str, column: str, given: str) -> str:
 
 
 def table_macro(function: Function) -> str:
-    """The statement that creates a table function's macro."""
-    parameters = [*function.columns, *(_macro_parameter(p, typed=False) for p in function.parameters)]
+    """The statement that creates a table function's macro.
+
+    The query it stands for is written by the function's own Python code while DuckDB plans.
+    """
+    arguments = [*function.columns, *(parameter.name for parameter in function.parameters)]
+    handed = ", ".join(f"{_quoted(name)}: {_identifier(name)}" for name in arguments)
+    parameters = [_identifier(name) for name in function.columns]
+    parameters += [_macro_parameter(parameter, typed=False) for parameter in function.parameters]
     return (
         f"CREATE OR REPLACE TEMP MACRO {function.name}({', '.join(parameters)}) AS TABLE "
-        f"{function.sql}"
+        f"SELECT * FROM query(_table_query({_quoted(function.name)}, "
+        f"CAST(to_json({{{handed}}}) AS VARCHAR)))"
     )
 
 
+def write_table_query(name: str, arguments: str) -> str:
+    """The SQL that a call of a table function stands for; arguments come as JSON."""
+    writer = functions()[name].kernel
+    assert writer is not None
+    return str(writer(**json.loads(arguments)))
+
+
 def _macro_parameter(parameter: Parameter, *, typed: bool = True) -> str:
-    name = f'"{parameter.name}"' if parameter.name == "by" else parameter.name
+    name = _identifier(parameter.name)
     declaration = f"{name} DOUBLE" if typed else name
     default = parameter.default
     if default is None:
@@ -330,6 +382,10 @@ def _macro_parameter(parameter: Parameter, *, typed: bool = True) -> str:
     if isinstance(default, bool):
         return f"{declaration} := {str(default).lower()}"
     return f"{declaration} := {default}"
+
+
+def _identifier(name: str) -> str:
+    return f'"{name}"'
 
 
 def _quoted(text: str) -> str:

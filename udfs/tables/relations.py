@@ -1,0 +1,106 @@
+"""What table functions share: their arguments turned into SQL text, every name quoted."""
+
+import re
+from collections.abc import Iterable, Sequence
+from typing import Final
+
+from midspread.udfs.declaring import Parameter, ParameterError
+
+BY: Final = Parameter("by", "columns whose values split the rows: a list or one name", "[]")
+
+_FILE_ENDINGS: Final = frozenset(
+    "parquet csv tsv txt json jsonl ndjson gz zst bz2 xlsx arrow arrows db duckdb".split()
+)
+_DOTTED_NAME: Final = re.compile(r"[^\W\d]\w*(\.[^\W\d]\w*){1,2}")
+_FUNCTION_CALL: Final = re.compile(r"[^\W\d]\w*(\.[^\W\d]\w*)*\s*\(.*\)", re.DOTALL)
+
+
+def quoted_name(name: str) -> str:
+    """A column or table name as an SQL identifier."""
+    return '"' + name.replace('"', '""') + '"'
+
+
+def quoted_text(text: str) -> str:
+    """A text as an SQL literal."""
+    return "'" + text.replace("'", "''") + "'"
+
+
+def relation(function: str, tbl: object) -> str:
+    """The table behind `tbl`: a table, view, CTE, file, glob, function call or subquery.
+
+    Text in parentheses, a call such as ``read_csv('f.csv')`` and a quoted name stand as they
+    are; a dotted name is split unless it ends like a file; all else is one name, which the
+    engine looks up among CTEs, tables, views and files.
+    """
+    if not isinstance(tbl, str) or not tbl.strip():
+        raise ParameterError(
+            f"{function}: tbl must be the name of a table, view or file, or a query in "
+            f"parentheses, got {tbl!r}; write for example {function}('dwell/*.parquet', …)."
+        )
+    text = tbl.strip()
+    if text.startswith(("(", '"')) or _FUNCTION_CALL.fullmatch(text):
+        return text
+    ending = text.rsplit(".", 1)[-1].lower()
+    if _DOTTED_NAME.fullmatch(text) and ending not in _FILE_ENDINGS:
+        return ".".join(quoted_name(part) for part in text.split("."))
+    return quoted_name(text)
+
+
+def column(function: str, argument: str, name: object) -> str:
+    """One column name, quoted."""
+    if not isinstance(name, str) or not name:
+        raise ParameterError(
+            f"{function}: {argument} must be the name of a column, got {name!r}; "
+            f"write for example {argument} := 'dwell_s'."
+        )
+    return quoted_name(name)
+
+
+def names(function: str, argument: str, given: object) -> list[str]:
+    """Column names given as a list, as one name, or as NULL for none."""
+    if given is None:
+        return []
+    listed = [given] if isinstance(given, str) else given
+    if not isinstance(listed, list) or not all(isinstance(n, str) and n for n in listed):
+        raise ParameterError(
+            f"{function}: {argument} must be a column name or a list of them, got {given!r}; "
+            f"write for example {argument} := ['route', 'day_part']."
+        )
+    repeated = {n for n in listed if listed.count(n) > 1}
+    if repeated:
+        raise ParameterError(
+            f"{function}: {argument} names {sorted(repeated)[0]} twice; name each column once."
+        )
+    return listed
+
+
+def keys(function: str, by: object, result_columns: Iterable[str]) -> list[str]:
+    """The columns to split by; a key named like a result column is refused."""
+    listed = names(function, "by", by)
+    taken = {name.lower() for name in result_columns}
+    for name in listed:
+        if name.lower() in taken:
+            raise ParameterError(
+                f"{function}: by names {name}, which is also a column of the result; rename it "
+                f"first, for example tbl := '(SELECT *, {name} AS {name}_key FROM …)'."
+            )
+    return listed
+
+
+def number_list(
+    function: str, argument: str, given: object, low: float, high: float
+) -> list[float]:
+    """A non-empty list of numbers within a range."""
+    listed = given if isinstance(given, list) else [given]
+    numbers = [float(v) for v in listed if isinstance(v, int | float) and not isinstance(v, bool)]
+    if len(numbers) != len(listed) or not numbers or not all(low <= v <= high for v in numbers):
+        raise ParameterError(
+            f"{function}: {argument} must be numbers from {low:g} to {high:g}, got {given!r}; "
+            f"write for example {argument} := [0, 0.1, 0.2]."
+        )
+    return numbers
+
+
+def joined(parts: Sequence[str]) -> str:
+    """Parts as the beginning of a list that goes on: each followed by a comma."""
+    return "".join(f"{part}, " for part in parts)

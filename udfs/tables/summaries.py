@@ -1,3 +1,0 @@
-"""Kernels behind the table functions: many figures of one group in a single pass."""
-
-SUMMARIES: tuple = ()
