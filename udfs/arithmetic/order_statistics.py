@@ -78,10 +78,13 @@ def quantile_7(x: Values, prob: float) -> float:
 
 @compiled
 def between(low: float, high: float, part: float) -> float:
-    """low + part · (high − low), equal infinities included."""
+    """low + part · (high − low) for 0 < part < 1, infinities and huge values included."""
     if low == high:
         return low
-    return low + part * (high - low)
+    gap = high - low
+    if math.isinf(gap):
+        return (1.0 - part) * low + part * high
+    return low + part * gap
 
 
 @compiled
