@@ -14,7 +14,7 @@ from typing import Any, Final
 
 from midspread.udfs.declaring import is_compiled
 
-_OPTIONS: Final = {"nogil": True, "error_model": "numpy"}
+_OPTIONS: Final[Any] = {"nogil": True, "error_model": "numpy"}
 _compiling = threading.RLock()
 _activity: list[str] = []
 
@@ -72,7 +72,7 @@ def compile_driver(
                 compiled._cache = _driver_cache(function, folder)
                 with _only_one_process(folder):
                     compiled.compile(signature)
-            return compiled  # type: ignore[no-any-return]
+            return compiled
         finally:
             _activity.pop()
 
@@ -94,9 +94,7 @@ def _with_compiled_callees(
     return copy
 
 
-def _bound_dispatcher(
-    function: Any, replacements: dict[str, Callable[..., Any]]
-) -> Any:
+def _bound_dispatcher(function: Any, replacements: dict[str, Callable[..., Any]]) -> Any:
     """A callee; one that itself calls a replaced name (an adapter) is made for this loop alone."""
     if any(name in replacements for name in function.__code__.co_names):
         import numba
@@ -152,7 +150,7 @@ def _driver_cache(function: types.FunctionType, folder: Path) -> Any:
     """numba's disk cache, kept in our folder and keyed by all of our sources."""
     from numba.core import caching
 
-    class Locator(caching._CacheLocator):  # type: ignore[misc]
+    class Locator(caching._CacheLocator):
         def get_cache_path(self) -> str:
             return str(folder)
 
@@ -166,14 +164,15 @@ def _driver_cache(function: types.FunctionType, folder: Path) -> Any:
         def from_function(cls, _function: object, _file: object) -> "Locator":
             return cls()
 
-    class Content(caching.CompileResultCacheImpl):  # type: ignore[misc]
-        _locator_classes = (Locator,)
+    class Content(caching.CompileResultCacheImpl):
+        _locator_classes: Any = [Locator]  # noqa: RUF012 - numba reads it from the class
 
         def get_filename_base(self, _fullname: str, abiflags: str) -> str:
             version = f"{sys.version_info.major}{sys.version_info.minor}"
             return f"{function.__name__}.py{version}{abiflags}"
 
-    class DriverCache(caching.Cache):  # type: ignore[misc]
-        _impl_class = Content
+    class DriverCache(caching.Cache):
+        _impl_class: Any = Content
 
-    return DriverCache(function)
+    make: Any = DriverCache
+    return make(function)

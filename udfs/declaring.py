@@ -80,10 +80,11 @@ class Parameter:
         return f"{kind} from {low} to {high}"
 
     def check(self, function: str, values: Values, missing: npt.NDArray[np.bool_]) -> None:
-        """Raise ParameterError, naming the function and the range, unless all values are allowed."""
+        """Raise ParameterError, naming function and range, unless all values are allowed."""
         if missing.any():
             raise ParameterError(
-                f"{function}: {self.name} must be {self.allowed}, got NULL; give each group a value."
+                f"{function}: {self.name} must be {self.allowed}, got NULL; "
+                f"give each group a value."
             )
         ok = (values > self.low) if self.low_open else (values >= self.low)
         ok &= (values < self.high) if self.high_open else (values <= self.high)

@@ -15,7 +15,6 @@ from typing import Any, Final
 import duckdb
 import numpy as np
 import pyarrow as pa
-
 from midspread.udfs.catalogue import functions
 from midspread.udfs.declaring import NULL, Function, Parameter, ParameterError, Values, null_mask
 from midspread.udfs.drivers import driver, summary_driver
@@ -94,9 +93,7 @@ class _Binding:
             "CREATE OR REPLACE TEMP MACRO _values_of_pairs(x DOUBLE, w DOUBLE) AS "
             "list(x) FILTER (x IS NOT NULL AND w IS NOT NULL)"
         )
-        self._create(
-            "_estimates", self._estimates, ["DOUBLE[]", "VARCHAR", "DOUBLE[]"], "DOUBLE[]"
-        )
+        self._create("_estimates", self._estimates, ["DOUBLE[]", "VARCHAR", "DOUBLE[]"], "DOUBLE[]")
         number_macros = [
             f"({'x ' + kind}, function_name, column_name) AS error(function_name || ': ' || "
             f"column_name || ' must be {NUMBER_TYPES}, not {kind}; turn it into a number first, "
@@ -149,16 +146,18 @@ class _Binding:
             ]
         )
         try:
-            self._connection.create_function(
+            create: Any = self._connection.create_function
+            create(
                 name,
                 called,
-                list(arguments),  # type: ignore[arg-type]
-                result,  # type: ignore[arg-type]
-                type=kind,  # type: ignore[arg-type]
-                null_handling="special",  # type: ignore[arg-type]
+                list(arguments),
+                result,
+                type=kind,
+                null_handling="special",
             )
-        except duckdb.NotImplementedException as error:
-            if "already created" not in str(error):
+        except (duckdb.NotImplementedException, duckdb.CatalogException) as error:
+            # Another connection of the same instance has created it.
+            if "already" not in str(error):
                 raise
 
     def _aggregate(self, function: Function, arguments: tuple[Any, ...]) -> pa.Array:
@@ -199,7 +198,6 @@ class _Binding:
         run(groups, tasks, out, row_numbers(np.ones(count, np.int64)), self._control, self._threads)
         offsets = np.arange(count + 1, dtype=np.int32) * len(wanted)
         return pa.ListArray.from_arrays(pa.array(offsets), numbers_or_null(out.reshape(-1)))
-
 
     def _summary(self, lists: Any, *, deep: tuple[str, ...]) -> pa.Array:
         """The figures of robust_summary; the deep ones come from the functions' own loops."""
@@ -327,9 +325,8 @@ def aggregate_macro(function: Function) -> str:
         collected = ["_values(x)"]
     names = [parameter.name for parameter in function.parameters]
     call = f"_{function.name}({', '.join([*collected, *names])})"
-    overloads = [
-        f"({', '.join([*(f'{column} DOUBLE' for column in function.columns), *parameters])}) AS {call}"
-    ]
+    numbers = [f"{column} DOUBLE" for column in function.columns]
+    overloads = [f"({', '.join([*numbers, *parameters])}) AS {call}"]
     for wrong in range(len(function.columns)):
         for other in _OTHER_TYPES:
             types = ["DOUBLE"] * len(function.columns)

@@ -17,13 +17,21 @@ from typing import Final
 
 import numpy as np
 import numpy.typing as npt
-
 from midspread.udfs.compiling import compile_driver
 from midspread.udfs.declaring import Values
 from midspread.udfs.drivers import DONE, STOP, Indices
 
 _PORTION: Final = 1 << 17  # values worked on at once by one thread
-_WIDTHS: Final = (8, 16, 32, 64, 96, 128, 256, 512)  # groups up to the last are padded to one of these
+_WIDTHS: Final = (
+    8,
+    16,
+    32,
+    64,
+    96,
+    128,
+    256,
+    512,
+)  # small groups are padded to one of these
 _SMALL: Final = _WIDTHS[-1]
 _WORTH_A_THREAD: Final = 1 << 17
 _EMPTY: Final = np.empty(0)

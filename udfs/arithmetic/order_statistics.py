@@ -103,9 +103,7 @@ def median_absolute_deviation(x: Values, centre: float) -> float:
     n = x.size
     if n % 2 == 1:
         return nearest_distance(x, centre, n // 2)
-    return midpoint(
-        nearest_distance(x, centre, n // 2 - 1), nearest_distance(x, centre, n // 2)
-    )
+    return midpoint(nearest_distance(x, centre, n // 2 - 1), nearest_distance(x, centre, n // 2))
 
 
 @compiled

@@ -15,7 +15,8 @@ from midspread.udfs.location.trimming import SHARE, cut_from_each_tail
         "g highest x_(n−g), g = ⌊share · n⌋; at share 0.5 every value is the median and it is 0"
     ),
     source=(
-        "Wilcox 2017, Introduction to Robust Estimation and Hypothesis Testing, 4th ed., Academic Press"
+        "Wilcox 2017, Introduction to Robust Estimation and Hypothesis Testing, 4th ed., "
+        "Academic Press"
     ),
     breakdown="share",
     cost="O(n log n) time, O(n) memory",

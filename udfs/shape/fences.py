@@ -10,11 +10,12 @@ FENCE_FIELDS: Final = ("lower", "upper")
 
 @aggregate(
     family="shape",
-    parameters=(
-        Parameter("k", "fourth spreads beyond the fourths", default=1.5, low=0.0, low_open=False),
-    ),
+    parameters=(Parameter("k", "fourth spreads beyond the fourths", default=1.5, low=0.0),),
     fields=FENCE_FIELDS,
-    formula="lower = F_L − k · d, upper = F_U + k · d, d = F_U − F_L, fourths at depth (⌊(n+1)/2⌋ + 1)/2",
+    formula=(
+        "lower = F_L − k · d, upper = F_U + k · d, d = F_U − F_L, "
+        "fourths at depth (⌊(n+1)/2⌋ + 1)/2"
+    ),
     source="Tukey 1977, Exploratory Data Analysis, Addison-Wesley",
     breakdown="0.25",
     cost="O(n log n) time, O(n) memory",

@@ -9,7 +9,8 @@ from midspread.udfs.declaring import Parameter, ParameterError
 BY: Final = Parameter("by", "columns whose values split the rows: a list or one name", "[]")
 
 _FILE_ENDINGS: Final = frozenset(
-    "parquet csv tsv txt json jsonl ndjson gz zst bz2 xlsx arrow arrows db duckdb".split()
+    {"parquet", "csv", "tsv", "txt", "json", "jsonl", "ndjson", "gz", "zst", "bz2", "xlsx"}
+    | {"arrow", "arrows", "db", "duckdb"}
 )
 _DOTTED_NAME: Final = re.compile(r"[^\W\d]\w*(\.[^\W\d]\w*){1,2}")
 _FUNCTION_CALL: Final = re.compile(r"[^\W\d]\w*(\.[^\W\d]\w*)*\s*\(.*\)", re.DOTALL)

@@ -17,7 +17,15 @@ from midspread.udfs.location.m_estimates import huber_location
 from midspread.udfs.location.trimming import trimmed_mean, winsorized_mean
 from midspread.udfs.scale.winsorized import trimmed_mean_se, winsorized_sd
 from midspread.udfs.shape.skewness import bowley_skew, moors_kurtosis, octile_skew
-from midspread.udfs.tables.relations import BY, column, joined, keys, quoted_name, quoted_text, relation
+from midspread.udfs.tables.relations import (
+    BY,
+    column,
+    joined,
+    keys,
+    quoted_name,
+    quoted_text,
+    relation,
+)
 
 _FIGURES: Final = (
     "minimum",
@@ -104,20 +112,21 @@ def summarise(x: Values, out: Values) -> None:
 _SHOWN: Final = ("n", "n_null", "n_nan", *_FIGURES, "n_outside", "note")
 
 _NOTE: Final = """concat_ws('; ',
-    CASE WHEN _midspread_n = 0 THEN 'no values' END,
-    CASE WHEN _midspread_n BETWEEN 1 AND 9 THEN 'fewer than 10 values' END,
-    CASE WHEN _midspread_rows - _midspread_n > _midspread_n AND _midspread_n > 0
+    CASE WHEN _m_n = 0 THEN 'no values' END,
+    CASE WHEN _m_n BETWEEN 1 AND 9 THEN 'fewer than 10 values' END,
+    CASE WHEN _m_rows - _m_n > _m_n AND _m_n > 0
          THEN 'more than half of the rows are NULL' END,
-    CASE WHEN _midspread_s.n_nan > 0 THEN 'NaN among the values, so every figure is NaN' END,
-    CASE WHEN _midspread_s.n_infinite > 0 THEN 'infinite values' END,
-    CASE WHEN _midspread_s.n_nan = 0 AND _midspread_n > 1 AND _midspread_s.minimum = _midspread_s.maximum
+    CASE WHEN _m_s.n_nan > 0 THEN 'NaN among the values, so every figure is NaN' END,
+    CASE WHEN _m_s.n_infinite > 0 THEN 'infinite values' END,
+    CASE WHEN _m_s.n_nan = 0 AND _m_n > 1 AND _m_s.minimum = _m_s.maximum
          THEN 'all values are equal'
-         WHEN _midspread_s.n_nan = 0 AND _midspread_s.mad_scale = 0 AND _midspread_n > 1
+         WHEN _m_s.n_nan = 0 AND _m_s.mad_scale = 0 AND _m_n > 1
          THEN 'half of the values or more are equal, so mad_scale is 0' END,
-    CASE WHEN _midspread_s.n_nan = 0 AND _midspread_s.lower_fourth = _midspread_s.upper_fourth AND _midspread_s.minimum < _midspread_s.maximum
+    CASE WHEN _m_s.n_nan = 0 AND _m_s.lower_fourth = _m_s.upper_fourth
+              AND _m_s.minimum < _m_s.maximum
          THEN 'the fourths are equal, so the fences have no width' END,
-    CASE WHEN _midspread_n >= 10 AND _midspread_s.n_outside * 10 > _midspread_n
-         AND _midspread_s.lower_fourth < _midspread_s.upper_fourth
+    CASE WHEN _m_n >= 10 AND _m_s.n_outside * 10 > _m_n
+         AND _m_s.lower_fourth < _m_s.upper_fourth
          THEN 'more than a tenth of the values lie outside the fences' END)"""
 
 
@@ -170,18 +179,18 @@ def robust_summary(*, tbl: object, value: object, by: object, deep: object) -> s
     measured = column(function, "value", value)
     collected = f"_numbers({measured}, {quoted_text(function)}, {quoted_text(str(value))})"
     kind = "_deep_summary" if deep else "_summary"
-    figures = joined([f'_midspread_s."{name}"' for name in _FIGURES])
-    more = "".join(f', _midspread_s."{name}"' for name in DEEP_FIGURES) if deep else ""
+    figures = joined([f'_m_s."{name}"' for name in _FIGURES])
+    more = "".join(f', _m_s."{name}"' for name in DEEP_FIGURES) if deep else ""
     order = f"ORDER BY {', '.join(grouped)}" if grouped else ""
     group = f"GROUP BY {', '.join(grouped)}" if grouped else ""
     return f"""
 WITH _midspread_source AS (SELECT * FROM {relation(function, tbl)}),
 _midspread_groups AS (
-    SELECT {joined(grouped)}count(*) AS _midspread_rows, count({measured}) AS _midspread_n,
-        {kind}({collected}) AS _midspread_s
+    SELECT {joined(grouped)}count(*) AS _m_rows, count({measured}) AS _m_n,
+        {kind}({collected}) AS _m_s
     FROM _midspread_source {group}
 )
-SELECT {joined(grouped)}_midspread_n AS n, _midspread_rows - _midspread_n AS n_null,
-    CAST(coalesce(_midspread_s.n_nan, 0) AS BIGINT) AS n_nan, {figures}
-    CAST(_midspread_s.n_outside AS BIGINT) AS n_outside, {_NOTE} AS note{more}
+SELECT {joined(grouped)}_m_n AS n, _m_rows - _m_n AS n_null,
+    CAST(coalesce(_m_s.n_nan, 0) AS BIGINT) AS n_nan, {figures}
+    CAST(_m_s.n_outside AS BIGINT) AS n_outside, {_NOTE} AS note{more}
 FROM _midspread_groups {order}"""

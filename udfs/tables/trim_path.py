@@ -29,7 +29,9 @@ _COMPUTED: Final = ("trimmed_mean", "trimmed_mean_se", "winsorized_mean")
         ),
     ),
     fields=_FIELDS,
-    formula="trimmed_mean, trimmed_mean_se and winsorized_mean at each share; n_kept = n − 2⌊share · n⌋",
+    formula=(
+        "trimmed_mean, trimmed_mean_se and winsorized_mean at each share; n_kept = n − 2⌊share · n⌋"
+    ),
     source="Tukey & McLaughlin 1963, Sankhyā A 25, 331–352",
     breakdown="share",
     cost="O(n log n) time, one sort a group",
