@@ -236,7 +236,7 @@ def groups_of(lists: Any, weights: Any = None) -> Groups:
 def _floats(array: pa.Array) -> Values:
     if array.null_count:
         raise ParameterError("a list handed to a statistic must hold no NULL; filter them first.")
-    return array.to_numpy(zero_copy_only=True)  # type: ignore[no-any-return]
+    return array.to_numpy(zero_copy_only=True)
 
 
 def _matrix(lists: pa.Array, count: int) -> Values:
