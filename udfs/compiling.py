@@ -96,11 +96,17 @@ def _with_compiled_callees(
 
 def _bound_dispatcher(function: Any, replacements: dict[str, Callable[..., Any]]) -> Any:
     """A callee; one that itself calls a replaced name (an adapter) is made for this loop alone."""
-    if any(name in replacements for name in function.__code__.co_names):
-        import numba
+    replaced = [name for name in function.__code__.co_names if name in replacements]
+    if not replaced:
+        return dispatcher(function)
+    import numba
 
-        return numba.njit(**_OPTIONS)(_with_compiled_callees(function, replacements))
-    return dispatcher(function)
+    copy = _with_compiled_callees(function, replacements)
+    # Loops compiled by different processes are linked by name: one name, one content. numba's own
+    # numbering starts again in each process and cannot tell the copies of one adapter apart.
+    stands_for = "_".join(replacements[name].__name__ for name in replaced)
+    copy.__name__ = copy.__qualname__ = f"{function.__name__}_of_{stands_for}"
+    return numba.njit(**_OPTIONS)(copy)
 
 
 @functools.cache
