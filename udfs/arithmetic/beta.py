@@ -9,7 +9,6 @@ import math
 from typing import Final
 
 import numpy as np
-
 from midspread.udfs.declaring import Values, compiled
 
 NEGLIGIBLE: Final = 1e-20
@@ -26,7 +25,7 @@ def beta_masses(a: float, b: float, masses: Values) -> tuple[int, int]:
     Parameters
     ----------
     a, b : float
-        Parameters of the distribution, above 0, not both below 1.
+        Parameters of the distribution, above 0; a + b = n + 1, as order statistics have it.
     masses : array
         n ≥ 2 cells; those that are not negligible are filled.
 
@@ -42,9 +41,9 @@ def beta_masses(a: float, b: float, masses: Values) -> tuple[int, int]:
         masses[1] = _beta_end(b, a, 0.5)
         return 0, 2
     # Start at the mode, or as near to it as leaves a cell's width to 0 and to 1.
-    mode = (a - 1.0) / (a + b - 2.0)
+    mode = (a - 1.0) / (n - 1)
     start = min(max(int(math.floor(mode * n)), 1), n - 2)
-    integral, left, right = _beta_cell(a, b, (2 * start + 1) * half, half)
+    integral, left, right = _beta_cell(a, n, start)
     masses[start] = largest = integral
 
     first = start
@@ -53,7 +52,7 @@ def beta_masses(a: float, b: float, masses: Values) -> tuple[int, int]:
         if first == 1:
             mass = edge * _beta_end(a, b, 2.0 * half)
         else:
-            integral, before, after = _beta_cell(a, b, (2 * first - 1) * half, half)
+            integral, before, after = _beta_cell(a, n, first - 1)
             mass = edge / after * integral
             edge *= before / after
         if mass < NEGLIGIBLE * largest:
@@ -73,7 +72,7 @@ def beta_masses(a: float, b: float, masses: Values) -> tuple[int, int]:
         if stop == n - 1:
             mass = edge * _beta_end(b, a, 2.0 * half)
         else:
-            integral, before, after = _beta_cell(a, b, (2 * stop + 1) * half, half)
+            integral, before, after = _beta_cell(a, n, stop)
             mass = edge / before * integral
             edge *= after / before
         if mass < NEGLIGIBLE * largest:
@@ -85,18 +84,21 @@ def beta_masses(a: float, b: float, masses: Values) -> tuple[int, int]:
 
 
 @compiled
-def _beta_cell(a: float, b: float, middle: float, half: float) -> tuple[float, float, float]:
-    """A beta density over middle ± half, in units of the density at the middle.
+def _beta_cell(a: float, n: int, i: int) -> tuple[float, float, float]:
+    """A beta density over cell i of n, in units of the density at the cell's middle.
 
     Returns its integral in half-widths and the density at the lower and the upper end. The cell
-    must keep a cell's width away from 0 and 1.
+    must be neither the first nor the last.
 
     With x = middle + half · s the density g obeys x (1−x) g' = half (a−1 − (a+b−2) x) g, which
     is a recurrence of three terms for its Taylor coefficients in s.
     """
+    half = 0.5 / n
+    middle = (2 * i + 1) * half
     stretch = half / (middle * (1.0 - middle))
-    slope = stretch * ((a - 1.0) - (a + b - 2.0) * middle)
-    bend = stretch * half * (a + b - 2.0)
+    # a − 1 − (a+b−2) middle, with a + b = n + 1 put in so that nothing cancels.
+    slope = stretch * ((a - 1.5 - i) + middle)
+    bend = stretch * half * (n - 1)
     skew = stretch * (1.0 - 2.0 * middle)
     curve = stretch * half
     term, following = 1.0, slope
