@@ -4,6 +4,7 @@ DuckDB runs such a statement as several ones and therefore shows no syntax tree 
 listed behind each ON expression it is a plain query again, and its tree is otherwise the same.
 """
 
+import re
 from typing import Final
 
 import duckdb
@@ -11,6 +12,7 @@ from midspread.engine.parsing import NotParsed, Token, Tree, brackets, parse, to
 
 _OPENED: Final = "(/* _midspread_pivot */ "
 _LISTED: Final = ") IN ('_midspread_listed_value')"
+_INSERTED: Final = re.compile(f"{re.escape(_OPENED)}|{re.escape(_LISTED)}")
 
 _ENDS_ON: Final = ("USING", "GROUP", "ORDER", "LIMIT", "OFFSET", "UNION", "INTERSECT", "EXCEPT")
 
@@ -57,9 +59,9 @@ def parse_with_pivots(connection: duckdb.DuckDBPyConnection, text: str) -> Tree:
             raise error from None
 
 
-def with_values_from_data(text: str) -> str:
-    """Undo `without_listed_values`."""
-    return text.replace(_OPENED, "").replace(_LISTED, "")
+def insertions(text: str) -> list[tuple[int, int]]:
+    """What `without_listed_values` put into a text, as ranges of the text."""
+    return [found.span() for found in _INSERTED.finditer(text)]
 
 
 def _unlisted(found: tuple[Token, ...], pivot: int) -> list[tuple[int, int]]:

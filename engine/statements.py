@@ -182,6 +182,17 @@ def _created(text: str, start: int, found: tuple[Token, ...]) -> Statement | Non
     return Statement(text, start, kind, "CREATE", name, body, is_expression)
 
 
+def view_body(sql: str) -> str:
+    """The query in a statement that creates a view, as the engine's catalogue keeps it."""
+    found = tokens(sql)
+    around = brackets(found)
+    first = next(
+        (i + 1 for i, token in enumerate(found) if token.says("AS") and around[i] == -1), 0
+    )
+    last = -1 if found[-1].text != ";" else -2
+    return sql[found[first].start : found[last].stop]
+
+
 def _last_of_dotted(found: tuple[Token, ...], index: int) -> str:
     while index + 2 < len(found) and found[index + 1].text == ".":
         index += 2

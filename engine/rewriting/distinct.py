@@ -1,0 +1,49 @@
+"""DISTINCT in our functions.
+
+Macros take no DISTINCT; the function behind the macro is given a list of distinct values instead.
+"""
+
+from midspread.engine.errors import MidspreadError
+from midspread.engine.rewriting.edits import Edit
+from midspread.engine.rewriting.query import Call, Query
+
+
+def distinct(query: Query) -> list[Edit]:
+    """Hand over each value once; calls under OVER are left to `window_call`.
+
+    ``trimmed_mean(DISTINCT x, 0.1)`` becomes
+    ``_trimmed_mean(list_distinct(_values(x)), _number(0.1))``.
+    """
+    edits = []
+    for call in query.calls:
+        if call.is_distinct:
+            _check(call)
+            if not call.is_window:
+                edits.append(_handed_over(call))
+    return edits
+
+
+def _check(call: Call) -> None:
+    name = call.function.name
+    if len(call.function.columns) > 1:
+        raise MidspreadError(
+            f"{name}: DISTINCT is for functions of one column, and {name} takes "
+            f"{' and '.join(call.function.columns)}; select the distinct rows first: "
+            f"FROM (SELECT DISTINCT ... FROM ...)."
+        )
+    if not call.is_plain or call.columns() is None or call.parameters() is None:
+        raise MidspreadError(
+            f"{name}: DISTINCT needs the plain form; write {name}(DISTINCT x"
+            f"{''.join(f', {p.name} := ...' for p in call.function.parameters)})."
+        )
+
+
+def _handed_over(call: Call) -> Edit:
+    columns = call.columns() or []
+    given = [
+        f"_number({argument.text if argument else parameter.default})"
+        for parameter, argument in call.parameters() or ()
+    ]
+    values = f"list_distinct(_values({columns[0].text}))"
+    text = f"_{call.function.name}({', '.join([values, *given])})"
+    return Edit(call.start, call.stop, text)

@@ -1,0 +1,37 @@
+"""Our functions under OVER with an order, a frame, or whatever else `over_partition` leaves.
+
+DuckDB takes a macro under OVER only when its body is a single aggregate; the function behind the
+macro is given the window's list instead.
+"""
+
+from midspread.engine.errors import MidspreadError
+from midspread.engine.rewriting.edits import Edit
+from midspread.engine.rewriting.query import Call, Query
+
+
+def window_call(query: Query) -> list[Edit]:
+    """Collect each row's window and hand it over.
+
+    ``mad_scale(x) OVER (ORDER BY day)`` becomes
+    ``_mad_scale(list(_number(x)) FILTER (WHERE (x) IS NOT NULL) OVER (ORDER BY day))``.
+    """
+    return [_handed_over(query, call) for call in query.calls if call.is_window]
+
+
+def _handed_over(query: Query, call: Call) -> Edit:
+    name = call.function.name
+    columns, parameters = call.columns(), call.parameters()
+    if not call.is_plain or columns is None or parameters is None or call.node["ignore_nulls"]:
+        raise MidspreadError(
+            f"{name}: OVER needs the plain form; write {call.function.signature} OVER (...)."
+        )
+    over = query.text[query.tokens[call.closing].stop : call.stop]
+    present = " AND ".join(f"({column.text}) IS NOT NULL" for column in columns)
+    given = [f"list(_number({column.text})) FILTER (WHERE {present}){over}" for column in columns]
+    if call.is_distinct:
+        given = [f"list_distinct({values})" for values in given]
+    given += [
+        f"_number({argument.text if argument else parameter.default})"
+        for parameter, argument in parameters
+    ]
+    return Edit(call.start, call.stop, f"_{name}({', '.join(given)})")
