@@ -1,0 +1,128 @@
+"""What a running command says beside its result: notices and progress, on stderr."""
+
+import sys
+from types import TracebackType
+from typing import TYPE_CHECKING, Self
+
+import click
+from midspread.cli.numbers import count_text
+
+if TYPE_CHECKING:
+    from midspread.engine.session import Progress
+    from rich.console import Console
+    from rich.progress import Progress as ProgressDisplay
+
+# Whatever is quicker needs no bar.
+BAR_AFTER_SECONDS = 0.5
+# A pipe has no width; what is read later in an editor or a mail is best at this one.
+PIPE_WIDTH = 100
+
+
+class Screen:
+    """Notices, and a progress line that shows itself only at a terminal and only for long work.
+
+    Parameters
+    ----------
+    quiet : bool
+        Whether notices are left out.
+    """
+
+    def __init__(self, *, quiet: bool = False) -> None:
+        self._quiet = quiet
+        self._is_terminal = sys.stderr.isatty()
+        self._display: ProgressDisplay | None = None
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        self.clear()
+
+    def notice(self, words: str) -> None:
+        """One line of words for the user."""
+        self.clear()
+        if not self._quiet:
+            click.echo(click.style(f"· {words}", dim=True), err=True)
+
+    def progress(self, made: "Progress") -> None:
+        """Show how far a query is; the session calls this every now and then."""
+        if made.seconds >= BAR_AFTER_SECONDS:
+            self.show(made.fraction, made.elements)
+
+    def show(self, fraction: float | None, elements: int = 0, label: str | None = None) -> None:
+        """Bring the progress line up to date.
+
+        Parameters
+        ----------
+        fraction : float or None
+            Share done; None where nobody knows.
+        elements : int
+            Values handled so far.
+        label : str, optional
+            What is going on; by default what the kernels are doing.
+        """
+        if not self._is_terminal:
+            return
+        if self._display is None:
+            self._display = _new_display()
+            self._display.start()
+            self._display.add_task("", total=None, done="")
+        known = fraction is not None and 0 < fraction <= 1
+        self._display.update(
+            self._display.task_ids[0],
+            description=label or _current_work(),
+            total=1.0 if known else None,
+            completed=fraction if known else 0.0,
+            done=_done(fraction if known else None, elements),
+        )
+
+    def clear(self) -> None:
+        """Take the progress line away."""
+        if self._display is not None:
+            self._display.stop()
+            self._display = None
+
+
+def result_console() -> "Console":
+    """Where results go when they are meant for the eye."""
+    from rich.console import Console
+
+    class Results(Console):
+        def on_broken_pipe(self) -> None:
+            raise BrokenPipeError  # rich would end the process by itself
+
+    width = None if sys.stdout.isatty() else PIPE_WIDTH
+    return Results(width=width, highlight=False, emoji=False, markup=False)
+
+
+def _current_work() -> str:
+    from midspread.udfs.compiling import activity
+
+    compiling = activity()
+    return f"compiling {compiling.strip('_')}, only once" if compiling else "working"
+
+
+def _done(fraction: float | None, elements: int) -> str:
+    if fraction is not None:
+        return f"{fraction:4.0%}"
+    return f"{count_text(elements, 'value')}" if elements else ""
+
+
+def _new_display() -> "ProgressDisplay":
+    from rich.console import Console
+    from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
+
+    return Progress(
+        TextColumn("  {task.description}", style="dim"),
+        BarColumn(bar_width=28, style="grey37", complete_style="cyan", pulse_style="cyan"),
+        TextColumn("{task.fields[done]}", style="dim"),
+        TimeElapsedColumn(),
+        console=Console(stderr=True, highlight=False),
+        transient=True,
+        refresh_per_second=8,
+    )
