@@ -102,13 +102,12 @@ def build(
     try:
         with folders.staging(folder) as staged:
             report(0.0)
-            _write_warehouse(staged / "warehouse.duckdb", visits)
-            _write_months(staged / "dwell", visits, min(workers, 12), report)
+            _write_all(staged, visits, min(workers, 12), report)
             try:
                 folders.publish(staged, folder, visits)
-            except OSError:
+            except (OSError, DemoError):
                 # another build may have finished first: its demo is as good as ours
-                if not folders.holds_demo(folder, visits):
+                if not _is_built(folder, visits):
                     raise
     except (OSError, duckdb.Error) as error:
         reason = str(error).splitlines()[0].rstrip(". ")
@@ -129,45 +128,43 @@ def _check_visits(visits: int) -> None:
         )
 
 
-def _write_warehouse(path: Path, visits: int) -> None:
-    with duckdb.connect(":memory:", config={"threads": 1}) as connection:
-        equip(connection, visits)
-        connection.execute(
-            f"ATTACH {_quoted(path)} AS warehouse (STORAGE_VERSION '{WAREHOUSE_FORMAT}')"
-        )
-        for table, query in WAREHOUSE_TABLES.items():
-            connection.execute(f"CREATE TABLE warehouse.{table} AS {query}")
-        connection.execute("DETACH warehouse")
+def _is_built(folder: Path, visits: int) -> bool:
+    try:
+        return folders.holds_demo(folder, visits)
+    except DemoError:
+        return False
 
 
-def _write_months(dwell: Path, visits: int, workers: int, report: Callable[[float], None]) -> None:
-    """Write the twelve files, whole months side by side.
+def _write_all(staged: Path, visits: int, workers: int, report: Callable[[float], None]) -> None:
+    """Write the warehouse and the twelve months, several side by side.
 
     The calling thread runs no query, so Ctrl-C and whatever `report` raises reach it at once.
     """
-    dwell.mkdir()
-    months = _Months(dwell, visits)
+    (staged / "dwell").mkdir()
+    writer = _Writer(staged, visits)
     pool = ThreadPoolExecutor(workers, thread_name_prefix="larkmoor")
     pending: set[Future[None]] = set()
     try:
-        pending |= {pool.submit(months.write, month) for month in range(1, 13)}
+        pending.add(pool.submit(writer.write_warehouse))
+        pending |= {pool.submit(writer.write_month, month) for month in range(1, 13)}
+        everything = len(pending)
         while pending:
             # a short wait at a time: on Windows a longer one would hold Ctrl-C up
             done, pending = wait(pending, timeout=0.2, return_when=FIRST_COMPLETED)
             _raise_first(done)
             if done:
                 # 1.0 is for the caller to report, once the folder is in place
-                report(min((12 - len(pending)) / 12, 0.99))
+                report(min((everything - len(pending)) / everything, 0.99))
     except BaseException:
         pool.shutdown(wait=False, cancel_futures=True)
-        while pending:
+        while pending := {future for future in pending if not future.done()}:
             # again and again: an interrupt that comes before its query starts is lost
-            months.stop()
-            _, pending = wait(pending, timeout=0.05)
+            writer.stop()
+            wait(pending, timeout=0.05)
         raise
     finally:
         pool.shutdown()
-        months.close()
+        writer.close()
 
 
 def _raise_first(futures: Iterable[Future[None]]) -> None:
@@ -175,35 +172,50 @@ def _raise_first(futures: Iterable[Future[None]]) -> None:
         future.result()
 
 
-class _Months:
-    """Writes months, each worker on an engine of its own so that none waits for another."""
+class _Writer:
+    """Writes the parts, each worker on an engine of its own so that none waits for another."""
 
-    def __init__(self, dwell: Path, visits: int) -> None:
-        self._dwell = dwell
+    def __init__(self, staged: Path, visits: int) -> None:
+        self._staged = staged
         self._visits = visits
         self._local = threading.local()
         self._connections: list[duckdb.DuckDBPyConnection] = []
         self._stopped = False
 
-    def write(self, month: int) -> None:
-        connection = self._connection()
+    def write_warehouse(self) -> None:
+        path = _quoted(self._staged / "warehouse.duckdb")
+        self._run(
+            f"ATTACH {path} AS warehouse (STORAGE_VERSION '{WAREHOUSE_FORMAT}')",
+            *(
+                f"CREATE TABLE warehouse.{table} AS {query}"
+                for table, query in WAREHOUSE_TABLES.items()
+            ),
+            "DETACH warehouse",
+        )
+
+    def write_month(self, month: int) -> None:
         first = f"DATE '{truth.YEAR}-{month:02d}-01'"
-        path = self._dwell / f"{truth.YEAR}-{month:02d}.parquet"
-        if self._stopped:
-            return
-        connection.execute(
+        path = _quoted(self._staged / "dwell" / f"{truth.YEAR}-{month:02d}.parquet")
+        self._run(
             f"COPY (SELECT {', '.join(VISIT_COLUMNS)} "
             f"FROM larkmoor_visits({first}, last_day({first})) ORDER BY visit) "
-            f"TO {_quoted(path)} (FORMAT parquet, COMPRESSION zstd)"
+            f"TO {path} (FORMAT parquet, COMPRESSION zstd)"
         )
+
+    def _run(self, *statements: str) -> None:
+        connection = self._connection()
+        for statement in statements:
+            if self._stopped:
+                return
+            connection.execute(statement)
 
     def _connection(self) -> duckdb.DuckDBPyConnection:
         connection: duckdb.DuckDBPyConnection | None = getattr(self._local, "connection", None)
         if connection is None:
-            # one thread each: months run side by side, and a file never depends on scheduling
+            # one thread each: parts run side by side, and a file never depends on scheduling
             connection = duckdb.connect(
                 ":memory:",
-                config={"threads": 1, "temp_directory": str(self._dwell.parents[1] / "spill")},
+                config={"threads": 1, "temp_directory": str(self._staged.parent / "spill")},
             )
             self._connections.append(connection)
             equip(connection, self._visits)
