@@ -50,8 +50,7 @@ def test_finds_known_modes(estimate, generator, name, parameters, mode):
     # Modes by the textbook formulas exp(mu − sigma²), (shape − 1) scale, mu; the median of 25
     # samples, since one estimate varies much
     found = [
-        estimate("half_sample_mode", getattr(generator, name)(*parameters, 2000))
-        for _ in range(25)
+        estimate("half_sample_mode", getattr(generator, name)(*parameters, 2000)) for _ in range(25)
     ]
     spread = np.subtract(*np.percentile(getattr(generator, name)(*parameters, 2000), [75, 25]))
     assert abs(np.median(found) - mode) < 0.15 * spread

@@ -17,8 +17,13 @@ def column(package, name, label="dat"):
 
 @pytest.mark.parametrize(
     "x",
-    [column("MASS", "chem"), column("MASS", "abbey"), column("datasets", "rivers")]
-    + [column("boot", "darwin", "y"), column("HistData", "Michelson", "velocity")],
+    [
+        column("MASS", "chem"),
+        column("MASS", "abbey"),
+        column("datasets", "rivers"),
+        column("boot", "darwin", "y"),
+        column("HistData", "Michelson", "velocity"),
+    ],
 )
 def test_is_what_scipy_gives(estimate, x):
     found = estimate("l_moments", x)

@@ -33,7 +33,8 @@ def mad_scale(x):
 @pytest.mark.parametrize(
     ("name", "k", "expected"),
     [
-        # R 4.2.2, robustbase 0.95-0: huberM(x, k, s = mad(x, constant = 1/qnorm(0.75)), tol = 1e-15)
+        # R 4.2.2, robustbase 0.95-0:
+        # huberM(x, k, s = mad(x, constant = 1/qnorm(0.75)), tol = 1e-15)
         ("chem", 1.345, 3.216251971597484),
         ("chem", 1.5, 3.206723813182866),
         ("abbey", 1.345, 11.4371679922672),

@@ -4,7 +4,6 @@ import math
 from typing import Final
 
 import numpy as np
-
 from midspread.udfs.arithmetic.order_statistics import (
     NORMAL_QUARTILE,
     median_absolute_deviation,
@@ -165,7 +164,7 @@ def _moved_window(
     example="bisquare_location(dwell_s)",
 )
 def bisquare_location(x: Values, c: float) -> float:
-    """Location by the bisquare M-estimate: values count less the farther out, and not at all past c.
+    """Location by the bisquare M-estimate: values count less the farther out, past c not at all.
 
     Parameters
     ----------
