@@ -107,13 +107,15 @@ def _print_entry(console: "Console", function: "Function") -> None:
     from midspread.cli.reference import entry_lines, example_query
     from midspread.cli.sample import ABOUT, with_sample
     from midspread.cli.screen import Screen
-    from midspread.cli.tables import FAINT, print_lines, print_table
+    from midspread.cli.tables import FAINT, INDENT, print_lines, print_table
+    from midspread.cli.wrapping import wrapped
     from rich.text import Text
 
     print_lines(console, entry_lines(function, console.width))
     query = example_query(function)
-    lines = [Text(), Text(f"Example, over {ABOUT}", style=FAINT), Text(f"  {query}", style="bold")]
-    print_lines(console, [*lines, Text()])
+    about = wrapped(f"Example, over {ABOUT}", console.width - INDENT)
+    print_lines(console, [Text(), *(Text(line, style=FAINT) for line in about)])
+    print_lines(console, [Text(f"  {query}", style="bold"), Text()])
     with Screen(quiet=True) as screen, Settings().session(screen, use_store=False) as session:
         answer = session.query(with_sample(query))
     print_table(console, answer.table)

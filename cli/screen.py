@@ -1,6 +1,8 @@
 """What a running command says beside its result: notices and progress, on stderr."""
 
 import sys
+import time
+from collections.abc import Callable
 from types import TracebackType
 from typing import TYPE_CHECKING, Self
 
@@ -51,34 +53,34 @@ class Screen:
 
     def progress(self, made: "Progress") -> None:
         """Show how far a query is; the session calls this every now and then."""
-        if made.seconds >= BAR_AFTER_SECONDS:
-            self.show(made.fraction, made.elements)
+        if self._is_terminal and made.seconds >= BAR_AFTER_SECONDS:
+            self._show(_current_work(), made.fraction, made.elements, made.seconds)
 
-    def show(self, fraction: float | None, elements: int = 0, label: str | None = None) -> None:
-        """Bring the progress line up to date.
+    def building(self, what: str) -> Callable[[float], None]:
+        """A function that shows what share of something is done."""
+        started = time.monotonic()
 
-        Parameters
-        ----------
-        fraction : float or None
-            Share done; None where nobody knows.
-        elements : int
-            Values handled so far.
-        label : str, optional
-            What is going on; by default what the kernels are doing.
-        """
-        if not self._is_terminal:
-            return
+        def show(fraction: float) -> None:
+            if self._is_terminal:
+                self._show(what, fraction, 0, time.monotonic() - started)
+
+        return show
+
+    def _show(self, work: str, fraction: float | None, elements: int, seconds: float) -> None:
+        known = fraction is not None and 0 < fraction <= 1
+        done = f"{fraction:4.0%}" if known else count_text(elements, "value") if elements else ""
         if self._display is None:
             self._display = _new_display()
+            self._display.add_task("", total=None, done="", clock="")
             self._display.start()
-            self._display.add_task("", total=None, done="")
-        known = fraction is not None and 0 < fraction <= 1
         self._display.update(
             self._display.task_ids[0],
-            description=label or _current_work(),
+            description=work,
             total=1.0 if known else None,
             completed=fraction if known else 0.0,
-            done=_done(fraction if known else None, elements),
+            done=done,
+            clock=f"{seconds:.0f} s",
+            refresh=True,
         )
 
     def clear(self) -> None:
@@ -107,21 +109,15 @@ def _current_work() -> str:
     return f"compiling {compiling.strip('_')}, only once" if compiling else "working"
 
 
-def _done(fraction: float | None, elements: int) -> str:
-    if fraction is not None:
-        return f"{fraction:4.0%}"
-    return f"{count_text(elements, 'value')}" if elements else ""
-
-
 def _new_display() -> "ProgressDisplay":
     from rich.console import Console
-    from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
+    from rich.progress import BarColumn, Progress, TextColumn
 
     return Progress(
         TextColumn("  {task.description}", style="dim"),
         BarColumn(bar_width=28, style="grey37", complete_style="cyan", pulse_style="cyan"),
         TextColumn("{task.fields[done]}", style="dim"),
-        TimeElapsedColumn(),
+        TextColumn("{task.fields[clock]}", style="dim"),
         console=Console(stderr=True, highlight=False),
         transient=True,
         refresh_per_second=8,

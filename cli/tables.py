@@ -87,12 +87,17 @@ def excerpt(table: "pa.Table", most_rows: int = MOST_ROWS) -> Excerpt:
 
 
 def print_table(
-    console: Console, table: "pa.Table", most_rows: int = MOST_ROWS, remark: str = ""
+    console: Console,
+    table: "pa.Table",
+    most_rows: int = MOST_ROWS,
+    *,
+    note: str | None = None,
+    remark: str = "",
 ) -> None:
-    """Print a result with the number of its rows below, and a remark after it."""
+    """Print a result, and below it the number of its rows or another note, then a remark."""
     part = excerpt(table, most_rows)
     print_lines(console, laid_out(part, console.width))
-    print_lines(console, [Text(part.note + remark, style=FAINT)])
+    print_lines(console, [Text((note or part.note) + remark, style=FAINT)])
 
 
 def print_lines(console: Console, lines: Iterable[Text]) -> None:
@@ -234,7 +239,7 @@ def _bands(part: Excerpt, widths: Sequence[int], room: int) -> list[Text]:
         chosen = [*range(keys), *range(start, stop)]
         shares = [widths[i] for i in chosen]
         if _total(shares) > room:  # one column alone is wider than what the keys leave
-            shares[-1] = max(NARROWEST_TEXT, room - _total(shares[:-1]) - GAP)
+            shares[-1] = room - (_total(shares[:-1]) + GAP if keys else 0)
         if lines:
             lines.append(Text())
         lines += _grid(part, [columns[i] for i in chosen], shares)
@@ -244,9 +249,10 @@ def _bands(part: Excerpt, widths: Sequence[int], room: int) -> list[Text]:
 
 def _key_count(columns: Sequence[Column], widths: Sequence[int], room: int) -> int:
     """How many leading columns every band repeats: names and dates, up to half the room."""
+    most = min(room // 2, room - GAP - NARROWEST_TEXT)
     count = 0
     for column in columns[: min(3, len(columns) - 1)]:
-        if column.is_number or column.is_measure or _total(widths[: count + 1]) > room // 2:
+        if column.is_number or column.is_measure or _total(widths[: count + 1]) > most:
             break
         count += 1
     return count

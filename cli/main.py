@@ -1,0 +1,95 @@
+"""The command ``midspread``."""
+
+import os
+import sys
+from collections.abc import Sequence
+from typing import Any, NoReturn
+
+import click
+from midspread.cli.complaints import DONE, report
+from midspread.cli.functions import functions
+from midspread.cli.help import WIDEST, write_command_list, write_options, write_usage
+from midspread.cli.query import query
+from midspread.cli.show import show
+from midspread.cli.store import store
+from midspread.cli.tour import tour
+
+COMMANDS = (tour, query, functions, show, store)
+
+
+class Application(click.Group):
+    """The group of all commands; every way it can end gives one sentence and an exit code."""
+
+    def main(  # type: ignore[override]
+        self,
+        args: Sequence[str] | None = None,
+        prog_name: str | None = None,  # noqa: ARG002  the name is always ours
+        **extra: Any,
+    ) -> NoReturn:
+        """Run a command line and exit."""
+        given = list(sys.argv[1:] if args is None else args)
+        if os.environ.get("NO_COLOR"):
+            extra["color"] = False
+        extra.pop("standalone_mode", None)
+        context: click.Context | None = None
+        try:
+            with self.make_context("midspread", given, **extra) as context:
+                self.invoke(context)
+                sys.stdout.flush()
+            code = DONE
+        except SystemExit:
+            raise
+        except BaseException as error:
+            code = report(error, _command_name(error, context))
+        sys.exit(code)
+
+    def format_help(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+        """Write the help of the whole program."""
+        write_usage(ctx, formatter)
+        self.format_help_text(ctx, formatter)
+        write_command_list(
+            formatter,
+            [(name, command.get_short_help_str(WIDEST)) for name, command in self.commands.items()],
+        )
+        write_options(self, ctx, formatter)
+        formatter.write(
+            "\nmidspread COMMAND --help explains a command and shows an example; "
+            "midspread tour is the place to begin.\n"
+        )
+
+
+def _command_name(error: BaseException, context: click.Context | None) -> str:
+    own = getattr(error, "ctx", None)
+    if own is not None and own.parent is not None:
+        return str(own.info_name)
+    return (context.invoked_subcommand or "") if context is not None else ""
+
+
+@click.group(
+    cls=Application,
+    commands={str(command.name): command for command in COMMANDS},
+    context_settings={"help_option_names": ["--help"], "max_content_width": WIDEST},
+    invoke_without_command=True,
+)
+@click.version_option(package_name="midspread", message="midspread %(version)s")
+@click.pass_context
+def application(ctx: click.Context) -> None:
+    """Robust statistics by group, in SQL, over large local files.
+
+    What is typical when some rows are wild, how much the values spread, how they are shaped:
+    trimmed means, robust scales and summaries as SQL functions beside AVG and MEDIAN.
+    """
+    if ctx.invoked_subcommand is None:
+        click.echo(ctx.get_help())
+
+
+def main() -> NoReturn:
+    """Run the command line of this process."""
+    for stream in (sys.stdout, sys.stderr):
+        if not stream.isatty() and hasattr(stream, "reconfigure"):
+            stream.reconfigure(encoding="utf-8")
+    application.main()
+
+
+if __name__ == "__main__":
+    main()

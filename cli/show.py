@@ -1,0 +1,145 @@
+"""``midspread show``: what there is, and what a file or table holds."""
+
+from collections.abc import Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import click
+from midspread.cli.cells import visible
+from midspread.cli.help import HelpfulCommand
+from midspread.cli.numbers import count_text, size_text
+from midspread.cli.options import Settings, attach_option, engine_options
+from midspread.cli.screen import Screen, result_console
+from midspread.engine.errors import UsageError
+
+if TYPE_CHECKING:
+    from midspread.engine.session import Session
+    from rich.console import Console
+
+FIRST_ROWS = 10
+# Rows of these are counted by looking at the file's own records, at once.
+_COUNTED_ENDINGS = frozenset({".parquet", ".duckdb", ".db", ".ddb"})
+_DUCKDB_MARK = b"DUCK"
+_DUCKDB_MARK_AT = 8
+
+
+@click.command(
+    cls=HelpfulCommand,
+    examples=(
+        'midspread show "dwell/*.parquet"',
+        "midspread show warehouse.duckdb",
+        "midspread show --attach warehouse=warehouse.duckdb warehouse.routes",
+    ),
+)
+@click.argument("name", metavar="[FILE or TABLE]", required=False)
+@attach_option
+@engine_options
+def show(name: str | None, sources: Mapping[str, Path], settings: Settings) -> None:
+    """What there is, or what a file or table holds.
+
+    Without a name: the store of kept answers and the sources given with --attach. With the name of
+    a file, a pattern in quotes, or a table: its columns with their types, and its first rows.
+    Files are only read.
+    """
+    console = result_console()
+    if name is None:
+        _show_what_there_is(console, settings, sources)
+    elif not name.strip():
+        raise UsageError("show: the name is empty; give a file, a pattern in quotes, or a table.")
+    elif _is_database(Path(name)):
+        _show_database(console, Path(name), settings)
+    else:
+        _show_rows(console, name, sources, settings)
+
+
+def _is_database(path: Path) -> bool:
+    try:
+        with path.open("rb") as file:
+            start = file.read(_DUCKDB_MARK_AT + len(_DUCKDB_MARK))
+    except OSError:
+        return False
+    return start[_DUCKDB_MARK_AT:] == _DUCKDB_MARK
+
+
+def _show_database(console: "Console", path: Path, settings: Settings) -> None:
+    from midspread.cli.tables import print_table
+
+    with (
+        Screen() as screen,
+        settings.session(screen, sources={"shown": path}, use_store=False) as session,
+    ):
+        answer = session.query(
+            "SELECT schema_name AS schema, table_name AS name, 'table' AS kind, "
+            "column_count AS columns, estimated_size AS rows "
+            "FROM duckdb_tables() WHERE database_name = 'shown' AND NOT internal "
+            "UNION ALL SELECT schema_name, view_name, 'view', column_count, NULL "
+            "FROM duckdb_views() WHERE database_name = 'shown' AND NOT internal "
+            "ORDER BY ALL"
+        )
+    _head(console, str(path), "a database")
+    print_table(console, answer.table, most_rows=0)
+    if answer.table.num_rows:
+        first = answer.table.column("name")[0].as_py()
+        _remark(console, f"One of them: midspread show --attach wh={path} wh.{first}")
+
+
+def _show_rows(
+    console: "Console", name: str, sources: Mapping[str, Path], settings: Settings
+) -> None:
+    from midspread.cli.tables import print_table
+    from midspread.udfs.tables.relations import relation
+
+    source = relation("show", name)
+    with (
+        Screen() as screen,
+        settings.session(screen, sources=sources, use_store=False) as session,
+    ):
+        columns = session.query(f"SELECT column_name, column_type FROM (DESCRIBE FROM {source})")
+        rows = session.query(f"FROM {source} LIMIT {FIRST_ROWS}")
+        count = _row_count(session, name, source)
+    _head(console, name, count)
+    print_table(console, columns.table, most_rows=0, note=count_text(columns.table.num_rows, "column"))
+    console.print()
+    print_table(console, rows.table, note=f"the first {count_text(rows.table.num_rows, 'row')}")
+
+
+def _row_count(session: "Session", name: str, source: str) -> str:
+    ending = Path(name).suffix.lower()
+    if ending and ending not in _COUNTED_ENDINGS and Path(name).parent.is_dir():
+        return ""
+    rows = session.query(f"SELECT count(*) FROM {source}").rows()
+    return count_text(int(str(rows[0][0])), "row")
+
+
+def _show_what_there_is(
+    console: "Console", settings: Settings, sources: Mapping[str, Path]
+) -> None:
+    from midspread.cli.store import store_lines
+    from midspread.cli.tables import HEAD, print_lines
+    from rich.text import Text
+
+    lines = [Text("The store of kept answers", style=HEAD), *store_lines(settings.store), Text()]
+    lines.append(Text("Sources", style=HEAD))
+    if not sources:
+        lines.append(Text("none; name a database file with --attach NAME=PATH"))
+    for name, path in sources.items():
+        state = size_text(path.stat().st_size) if path.is_file() else "missing"
+        lines.append(Text(f"{visible(name)}  {visible(str(path))}, {state}"))
+    print_lines(console, lines)
+
+
+def _head(console: "Console", name: str, about: str) -> None:
+    from midspread.cli.tables import FAINT, HEAD, print_lines
+    from rich.text import Text
+
+    line = Text(visible(name), style=HEAD)
+    if about:
+        line.append(f"  {about}", style=f"not bold {FAINT}")
+    print_lines(console, [line, Text()])
+
+
+def _remark(console: "Console", words: str) -> None:
+    from midspread.cli.tables import FAINT, print_lines
+    from rich.text import Text
+
+    print_lines(console, [Text(), Text(words, style=FAINT)])

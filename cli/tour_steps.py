@@ -1,0 +1,147 @@
+"""What the tour shows: plain words and the SQL that goes with them.
+
+Every query runs in the demo's folder, with the small warehouse attached under its name.
+"""
+
+from dataclasses import dataclass
+from typing import Final
+
+WAREHOUSE: Final = "warehouse"
+
+
+@dataclass(frozen=True)
+class Step:
+    """One step of the tour.
+
+    Attributes
+    ----------
+    title : str
+        What is asked.
+    words : str
+        What to know before looking at the answer.
+    sql : str
+        The query, as one would type it.
+    lesson : str
+        What the answer says, true of the demo at any size.
+    is_repeat : bool
+        Whether the same was asked before, so that the kept answer is shown.
+    """
+
+    title: str
+    words: str
+    sql: str
+    lesson: str
+    is_repeat: bool = False
+
+
+MEAN_AND_ROBUST: Final = """\
+SELECT route,
+       count(dwell_s)             AS n,
+       avg(dwell_s)               AS mean,
+       trimmed_mean(dwell_s, 0.1) AS trimmed_mean,
+       stddev(dwell_s)            AS sd,
+       mad_scale(dwell_s)         AS mad_scale
+FROM 'dwell/*.parquet'
+GROUP BY route
+ORDER BY trimmed_mean DESC"""
+
+STEPS: Final = (
+    Step(
+        "What the values are, before any estimate",
+        "Dwell is how long a bus stands at a stop, in seconds. Look for missing values, zeros and "
+        "values repeated where none should repeat.",
+        "SELECT * FROM value_profile('dwell/*.parquet', columns := ['dwell_s'], by := 'payment')",
+        "Zeros, and one and the same value of nearly two hours over and over: clocks that stuck.",
+    ),
+    Step(
+        "The mean beside the mean of the middle part",
+        "trimmed_mean cuts a tenth of the values from each end and averages the rest; mad_scale "
+        "is a spread that wild values cannot move, equal to the sd on normal data.",
+        MEAN_AND_ROBUST,
+        "A few stuck clocks double the mean and make the sd twenty times too large; the robust "
+        "figures hold.",
+    ),
+    Step(
+        "How much has to be cut",
+        "The same mean for route L3, cutting more and more. Where it still moves, wild values "
+        "decide it; where it has settled, the middle does.",
+        """\
+SELECT share, n_kept, trimmed_mean, se
+FROM trim_path('dwell/*.parquet', 'dwell_s', by := 'route')
+WHERE route = 'L3'""",
+        "Cutting one value in twenty from each end does most of it; se, the standard error, falls "
+        "from seconds to hundredths.",
+    ),
+    Step(
+        "Every route at every time of the day",
+        "robust_summary gives one row a group with two dozen figures; here a few of them, for the "
+        "slowest groups. Beyond the fences lie values that deserve a look, not wrong ones.",
+        """\
+SELECT route, day_part, n, median, trimmed_mean_10, mad_scale, fence_upper, n_outside
+FROM robust_summary('dwell/*.parquet', 'dwell_s', by := ['route', 'day_part'])
+ORDER BY trimmed_mean_10 DESC
+LIMIT 8""",
+        "The Schools Circular, L7, stands out in the afternoon, when the pupils leave all at once.",
+    ),
+    Step(
+        "One vehicle among 120",
+        "How much longer each visit took than its route's trimmed mean (OVER works on every "
+        "function), then what is typical of each vehicle, joined to the warehouse.",
+        """\
+WITH visits AS (
+    SELECT vehicle,
+           dwell_s - trimmed_mean(dwell_s, 0.1) OVER (PARTITION BY route) AS excess_s
+    FROM 'dwell/*.parquet'
+)
+SELECT vehicle, model, depot, count(excess_s) AS n, trimmed_mean(excess_s, 0.1) AS excess_s
+FROM visits JOIN warehouse.vehicles USING (vehicle)
+GROUP BY ALL
+ORDER BY excess_s DESC
+LIMIT 5""",
+        "V158 is out by itself: its clock drifts, a little more every day.",
+    ),
+    Step(
+        "Tap readers against cash boxes",
+        "FILTER works as it does on avg: the trimmed mean with each way of paying.",
+        """\
+SELECT route,
+       trimmed_mean(dwell_s) FILTER (WHERE payment = 'cash box')   AS cash_box,
+       trimmed_mean(dwell_s) FILTER (WHERE payment = 'tap reader') AS tap_reader,
+       tap_reader / cash_box                                       AS ratio
+FROM 'dwell/*.parquet'
+GROUP BY route
+ORDER BY ratio""",
+        "Readers save a tenth to a fifth on most routes, and on L9 nothing at all.",
+    ),
+    Step(
+        "Each route with a limit of its own",
+        "A parameter may differ by group. On L3 layovers were booked as dwell, always at the upper "
+        "end, so more is cut there.",
+        """\
+WITH limits(route, share) AS (VALUES ('L1', 0.05), ('L3', 0.25), ('L9', 0.1))
+SELECT name, share, trimmed_mean(dwell_s, share) AS trimmed_mean,
+       trimmed_mean_se(dwell_s, share) AS se
+FROM 'dwell/*.parquet' JOIN limits USING (route) JOIN warehouse.routes USING (route)
+GROUP BY name, share
+ORDER BY name""",
+        "Three routes, three shares, one query.",
+    ),
+    Step(
+        "Asked again",
+        "The second question once more, typed in another way. Nothing it rests on has changed.",
+        MEAN_AND_ROBUST.replace("\n      ", "").replace("GROUP BY", "group by")
+        + " -- slowest first",
+        "The answer was kept; any change to the files would have it computed anew.",
+        is_repeat=True,
+    ),
+)
+
+# Command lines to copy at the end; the folder is the demo's.
+NEXT: Final = (
+    """midspread query "FROM robust_summary('dwell/*.parquet', 'dwell_s', by := 'stop')" """
+    "--out stops.xlsx",
+    """midspread query --attach warehouse=warehouse.duckdb "SELECT name, trimmed_mean(dwell_s) """
+    """FROM 'dwell/*.parquet' JOIN warehouse.routes USING (route) GROUP BY name\"""",
+    "midspread show warehouse.duckdb",
+    "midspread functions outlier",
+)
