@@ -1,8 +1,11 @@
 """Sums whose digits hold: compensated, over a slice of sorted values."""
 
 import math
+from typing import Final
 
 from midspread.udfs.declaring import Values, compiled
+
+_BLOCK: Final = 64
 
 
 @compiled
@@ -89,23 +92,44 @@ def sum_of_squares(x: Values, start: int, stop: int, centre: float) -> float:
 
     The corrected two-pass form of Chan, Golub & LeVeque 1983.
     """
-    s0 = s1 = 0.0
-    d0 = d1 = 0.0
-    i = start
-    while i + 2 <= stop:
-        v = x[i] - centre
-        s0 += v * v
-        d0 += v
-        v = x[i + 1] - centre
-        s1 += v * v
-        d1 += v
-        i += 2
-    if i < stop:
-        v = x[i] - centre
-        s0 += v * v
-        d0 += v
-    deviation = d0 + d1
-    return (s0 + s1) - deviation * deviation / (stop - start)
+    squares, deviation = squares_from(x, start, stop, centre, 0.0)
+    return squares - deviation * deviation / (stop - start)
+
+
+@compiled
+def squares_from(
+    x: Values, start: int, stop: int, origin: float, shift: float
+) -> tuple[float, float]:
+    """Σ v² and Σ v of v = (x[i] − origin) − shift over start ≤ i < stop.
+
+    Squares are added plainly within a block, two sums side by side; blocks join a compensated
+    total. The plain Σ v is meant as a small correction.
+    """
+    total = lost = deviation = 0.0
+    first = start
+    while first < stop:
+        end = min(first + _BLOCK, stop)
+        s0 = s1 = d0 = d1 = 0.0
+        i = first
+        while i + 2 <= end:
+            v = (x[i] - origin) - shift
+            s0 += v * v
+            d0 += v
+            v = (x[i + 1] - origin) - shift
+            s1 += v * v
+            d1 += v
+            i += 2
+        if i < end:
+            v = (x[i] - origin) - shift
+            s0 += v * v
+            d0 += v
+        total, error = _two_sum(total, s0 + s1)
+        lost += error
+        deviation += d0 + d1
+        first = end
+    if math.isnan(lost):  # squares too large for a double: the total is infinite, or NaN itself
+        return total, deviation
+    return total + lost, deviation
 
 
 @compiled
@@ -122,8 +146,5 @@ def winsorized_sum_of_squares(x: Values, g: int) -> float:
     middle = compensated_sum_from(x, g, n - g, centre)
     below, above = low - centre, high - centre
     shift = (middle + g * (below + above)) / n
-    total = 0.0
-    for i in range(g, n - g):
-        v = (x[i] - centre) - shift
-        total += v * v
-    return total + g * ((below - shift) * (below - shift) + (above - shift) * (above - shift))
+    squares, _ = squares_from(x, g, n - g, centre, shift)
+    return squares + g * ((below - shift) * (below - shift) + (above - shift) * (above - shift))
