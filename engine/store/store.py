@@ -1,0 +1,343 @@
+"""The store's file: made once, attached only for the moment something is read or written."""
+
+import contextlib
+import os
+import secrets
+import time
+from collections.abc import Iterator
+from pathlib import Path
+
+import duckdb
+from midspread.engine.errors import NotAStore, StoreDamaged, StoreError, StoreTooNew
+from midspread.engine.store.layout import ALIAS, FORMAT, PROGRAM, STORAGE_VERSION, creating
+from midspread.engine.store.locking import busy, lock_path, locked, not_writable, retry
+from midspread.engine.store.quoting import literal, quoted
+
+# Our own commands hold the store for moments; another program may hold it for hours.
+WAIT_FOR_OURS_S = 60.0
+WAIT_FOR_OTHERS_S = 3.0
+_MAGIC = b"DUCK"
+_CONFIG: dict[str, str | bool | int | float | list[str]] = {
+    "threads": 1,
+    "temp_directory": "",
+    "autoinstall_known_extensions": False,
+    "autoload_known_extensions": False,
+}
+_FULL = ("no space left", "file too large", "disk quota", "disk full", "not enough space")
+_FORBIDDEN = ("permission denied", "read-only file system", "access is denied")
+_BROKEN = ("corrupt", "checksum", "could not read", "deserializ", "invalidated", "replay")
+_HELD = ("set lock on file", "already attached", "already open", "used by another process")
+
+
+class Store:
+    """The local store.
+
+    Make one with :meth:`open`. Threads may share it. It holds no file open between uses.
+
+    Attributes
+    ----------
+    path : Path
+        The database file, absolute, links resolved.
+    """
+
+    def __init__(self, path: Path) -> None:
+        self.path = Path(os.path.realpath(path))
+        self._engine: duckdb.DuckDBPyConnection | None = None
+
+    @classmethod
+    def open(cls, path: Path, *, create: bool = True) -> "Store":
+        """Open a store, making it when it is missing.
+
+        Parameters
+        ----------
+        path : Path
+            The database file.
+        create : bool
+            Whether to make it when it is missing.
+
+        Returns
+        -------
+        Store
+
+        Raises
+        ------
+        NotAStore
+            The path holds something else; it is left as it is.
+        StoreDamaged, StoreTooNew, StoreBusy
+            It cannot be read now; it is left as it is.
+        StoreNotWritable
+            It is missing and cannot be made.
+        StoreError
+            It is missing and `create` is False, or the disk is full.
+        """
+        store = cls(path)
+        if not store.path.exists():
+            if not create:
+                raise StoreError(
+                    f"There is no store at {store.path}; a query makes one, or name another with "
+                    "--store."
+                )
+            store._create()
+        had_lock = lock_path(store.path).exists()
+        try:
+            with store.reading():
+                pass
+        except StoreError:
+            if not had_lock:
+                lock_path(store.path).unlink(missing_ok=True)
+            raise
+        return store
+
+    @contextlib.contextmanager
+    def reading(self, wait_s: float = WAIT_FOR_OURS_S) -> Iterator[duckdb.DuckDBPyConnection]:
+        """Attach the store read-only for the length of a block.
+
+        Parameters
+        ----------
+        wait_s : float
+            How long to wait for other commands of ours, in seconds.
+
+        Yields
+        ------
+        duckdb.DuckDBPyConnection
+            The store is the database ``store`` there. Fetch results inside the block.
+        """
+        self._check_before_locking()
+        with locked(self.path, shared=True, wait_s=wait_s), self._attached("READ_ONLY") as engine:
+            yield engine
+
+    @contextlib.contextmanager
+    def writing(self, wait_s: float = WAIT_FOR_OURS_S) -> Iterator[duckdb.DuckDBPyConnection]:
+        """Attach the store for the length of a block, which is one transaction.
+
+        It is committed when the block ends and rolled back when it raises.
+
+        Parameters
+        ----------
+        wait_s : float
+            How long to wait for other commands of ours, in seconds.
+
+        Yields
+        ------
+        duckdb.DuckDBPyConnection
+            The store is the database ``store`` there.
+        """
+        self._check_before_locking()
+        with locked(self.path, shared=False, wait_s=wait_s), self._attached("READ_WRITE") as engine:
+            engine.execute("BEGIN")
+            try:
+                yield engine
+                engine.execute("COMMIT")
+            except BaseException:
+                with contextlib.suppress(duckdb.Error):
+                    engine.execute("ROLLBACK")
+                raise
+
+    def close(self) -> None:
+        """Give the engine's memory back; the store may be used again."""
+        if self._engine is not None:
+            self._engine.close()
+            self._engine = None
+
+    @contextlib.contextmanager
+    def exclusively(self, wait_s: float = WAIT_FOR_OURS_S) -> Iterator[duckdb.DuckDBPyConnection]:
+        """Keep everybody of ours out for the length of a block; nothing is attached.
+
+        Parameters
+        ----------
+        wait_s : float
+            How long to wait for other commands of ours, in seconds.
+
+        Yields
+        ------
+        duckdb.DuckDBPyConnection
+            An engine to attach files to.
+        """
+        self._check_before_locking()
+        with locked(self.path, shared=False, wait_s=wait_s):
+            try:
+                yield self._private_engine()
+            finally:
+                self.close()
+
+    def _private_engine(self) -> duckdb.DuckDBPyConnection:
+        if self._engine is None:
+            self._engine = duckdb.connect(config=_CONFIG)
+        return self._engine
+
+    @contextlib.contextmanager
+    def _attached(self, mode: str) -> Iterator[duckdb.DuckDBPyConnection]:
+        engine = self._private_engine()
+        clean = False
+        try:
+            self._attach(engine, mode)
+            self._check_format(engine)
+            yield engine
+            engine.execute(f"DETACH {quoted(ALIAS)}")
+            clean = True
+        except duckdb.Error as error:
+            raise self.error_of(error) from error
+        finally:
+            if not clean:
+                # After a failed commit or checkpoint an engine may refuse all else: drop it.
+                self.close()
+
+    def _attach(self, engine: duckdb.DuckDBPyConnection, mode: str) -> None:
+        sql = f"ATTACH {literal(str(self.path))} AS {quoted(ALIAS)} (TYPE duckdb, {mode})"
+
+        def attempt() -> bool:
+            self._check_beginning()
+            try:
+                engine.execute(sql)
+            except duckdb.Error as error:
+                if _is_held(error):
+                    return False
+                raise
+            return True
+
+        if not retry(attempt, time.monotonic() + WAIT_FOR_OTHERS_S):
+            raise busy(self.path)
+
+    def _check_before_locking(self) -> None:
+        """Make no lock beside something that is no store.
+
+        Where there is a lock there was a store. Closing a file drops the engine's lock on it when
+        another thread has it attached, so it is not opened here for nothing.
+        """
+        if not lock_path(self.path).exists():
+            self._check_beginning()
+
+    def _check_beginning(self) -> None:
+        """Refuse what is no database at all, before the engine touches it."""
+        try:
+            with self.path.open("rb") as file:
+                beginning = file.read(12)
+        except FileNotFoundError:
+            raise StoreError(
+                f"The store {self.path} is gone; ask again and a new one is made, or name another "
+                "with --store."
+            ) from None
+        except IsADirectoryError:
+            raise self._not_a_store("is a folder") from None
+        except OSError as error:
+            if self.path.is_dir():
+                raise self._not_a_store("is a folder") from None
+            raise StoreError(
+                f"The store {self.path} cannot be read ({error.strerror}); allow reading it, or "
+                "name another store with --store."
+            ) from error
+        if beginning[8:12] != _MAGIC:
+            raise self._not_a_store("is some other file")
+
+    def _check_format(self, engine: duckdb.DuckDBPyConnection) -> None:
+        try:
+            about = dict(
+                engine.execute(f"SELECT name, value FROM {quoted(ALIAS)}.ledger.about").fetchall()
+            )
+        except (duckdb.CatalogException, duckdb.BinderException):
+            about = {}
+        if about.get("program") != PROGRAM:
+            raise self._not_a_store("is a database of another program")
+        found = about.get("format") or ""
+        if not found.isdigit():
+            raise self._damaged("it does not say its format")
+        if int(found) > FORMAT:
+            raise StoreTooNew(
+                f"The store {self.path} was written by a newer Midspread (format {found}, this one "
+                f"reads up to {FORMAT}); update Midspread, or name another store with --store."
+            )
+
+    def _create(self) -> None:
+        if not self.path.parent.is_dir():
+            raise not_writable(self.path)
+        had_lock = lock_path(self.path).exists()
+        fresh = self.path.with_name(f".{self.path.name}.{secrets.token_hex(6)}.new")
+        with locked(self.path, shared=False, wait_s=WAIT_FOR_OURS_S):
+            if self.path.exists():  # another command was faster
+                return
+            try:
+                self._write_empty(fresh)
+                publish(fresh, self.path)
+            except (duckdb.Error, OSError) as error:
+                if not had_lock:
+                    lock_path(self.path).unlink(missing_ok=True)
+                raise self.error_of(error) from error
+            finally:
+                self.close()
+                remove_database(fresh)
+
+    def _write_empty(self, path: Path) -> None:
+        engine = self._private_engine()
+        engine.execute(
+            f"ATTACH {literal(str(path))} AS fresh"
+            f" (TYPE duckdb, STORAGE_VERSION {literal(STORAGE_VERSION)})"
+        )
+        engine.execute("BEGIN")
+        for statement in creating("fresh"):
+            engine.execute(statement)
+        engine.execute("COMMIT")
+        engine.execute("DETACH fresh")
+
+    def error_of(self, error: Exception) -> StoreError:
+        """Turn an error of the engine or the system about this store into ours."""
+        if isinstance(error, StoreError):
+            return error
+        text = str(error)
+        lower = text.casefold()
+        if any(words in lower for words in _FULL):
+            return StoreError(
+                f"The disk is too full for the store {self.path}, which is as it was; make room, "
+                "or name a store on another disk with --store."
+            )
+        if any(words in lower for words in _FORBIDDEN):
+            return not_writable(self.path)
+        if _is_held(error):
+            return busy(self.path)
+        if "version number" in lower or "newer version" in lower:
+            return StoreTooNew(
+                f"The store {self.path} was written by a newer database engine; update DuckDB "
+                "(pip install --upgrade duckdb), or name another store with --store."
+            )
+        if "not a valid duckdb database" in lower:
+            return self._not_a_store("is some other file")
+        if isinstance(error, OSError):
+            return StoreError(f"The store {self.path} could not be written: {error.strerror}.")
+        first_line = text.splitlines()[0].rstrip(".") if text else type(error).__name__
+        broken = isinstance(error, duckdb.InternalException | duckdb.FatalException)
+        if broken or any(words in lower for words in _BROKEN):
+            return self._damaged(first_line)
+        return StoreError(f"The store {self.path} could not be used: {first_line}.")
+
+    def _damaged(self, why: str) -> StoreDamaged:
+        return StoreDamaged(
+            f"The store {self.path} is damaged and was left as it is ({why}); restore a copy, or "
+            "move it away and the next query makes a new one."
+        )
+
+    def _not_a_store(self, why: str) -> NotAStore:
+        return NotAStore(
+            f"{self.path} {why}, not a store of Midspread, and was left as it is; name another "
+            "path with --store or MIDSPREAD_STORE."
+        )
+
+
+def publish(fresh: Path, path: Path) -> None:
+    """Give a finished file its name, refusing to replace another."""
+    try:
+        os.link(fresh, path)
+    except FileExistsError:
+        raise
+    except OSError:  # a file system without hard links; our lock keeps others of ours away
+        if path.exists():
+            raise FileExistsError(f"{path} exists") from None
+        fresh.rename(path)
+
+
+def remove_database(path: Path) -> None:
+    """Remove a database of ours with what may stand beside it."""
+    for name in (path.name, path.name + ".wal"):
+        path.with_name(name).unlink(missing_ok=True)
+
+
+def _is_held(error: Exception) -> bool:
+    return any(words in str(error).casefold() for words in _HELD)
