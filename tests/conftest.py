@@ -34,13 +34,10 @@ def estimate(connection: duckdb.DuckDBPyConnection) -> Estimate:
             frame[column] = [None if v is None else float(v) for v in values]
         arguments = [*names, *(f"{key} := {value!r}" for key, value in parameters.items())]
         lists = ", ".join(f"unnest($values_{column}::DOUBLE[]) AS {column}" for column in names)
-        cursor = connection.cursor()
-        register(cursor)
-        row = cursor.execute(
+        row = connection.execute(
             f"SELECT {name}({', '.join(arguments)}) FROM (SELECT {lists})",
             {f"values_{column}": values for column, values in frame.items()},
         ).fetchone()
-        cursor.close()
         assert row is not None
         return row[0]
 
