@@ -1,0 +1,174 @@
+"""Tables of one number per pair of values, never stored: sums, differences, ratios.
+
+Every table grows along its rows. Row i has the columns ``first_column(kind, i)`` to
+``b.size - 1`` and holds
+
+========== =================== ======================================
+kind       entry (i, j)        pairs
+========== =================== ======================================
+SUMS       a[i] + b[j]         i ≤ j, with a = b ascending
+DIFFERENCES b[j] − a[i]        i < j, with a = b ascending
+RATIOS     b[j] / a[i]         all, a and b positive and ascending
+========== =================== ======================================
+
+All values are finite. Rounding keeps the order of the exact entries, so the tables grow along
+the rows, and from row to row in one direction, as computed too. A count of the entries up to a
+bound is therefore one walk along a staircase.
+"""
+
+from typing import Final
+
+import numpy as np
+import numpy.typing as npt
+from midspread.udfs.declaring import Values, compiled
+
+SUMS: Final = 0
+DIFFERENCES: Final = 1
+RATIOS: Final = 2
+
+Places = npt.NDArray[np.int32]
+"""One column number for each row: a staircase through a table (32 bits: memory is the limit)."""
+
+
+@compiled
+def entry(kind: int, a: Values, b: Values, i: int, j: int) -> float:
+    """The number of the pair (i, j)."""
+    if kind == SUMS:
+        return a[i] + b[j]
+    if kind == DIFFERENCES:
+        return b[j] - a[i]
+    return b[j] / a[i]
+
+
+@compiled
+def first_column(kind: int, i: int) -> int:
+    """The first column of row i."""
+    if kind == SUMS:
+        return i
+    if kind == DIFFERENCES:
+        return i + 1
+    return 0
+
+
+@compiled
+def count_sums(
+    x: Values, low: float, high: float, ends_low: Places, ends_high: Places
+) -> tuple[int, int]:
+    """Count the sums ≤ low and those ≤ high; low ≤ high.
+
+    ``ends_low[i]`` becomes the first column of row i whose entry exceeds low, ``ends_high[i]``
+    the same for high. The two walks go side by side because each step waits for its comparison;
+    both take exactly n steps, from the top right corner to the diagonal.
+    """
+    n = x.size
+    i, j, count = 0, n - 1, 0
+    p, q, count_high = 0, n - 1, 0
+    for _ in range(n):
+        within = int(x[i] + x[j] <= low)
+        within_high = int(x[p] + x[q] <= high)
+        ends_low[i] = j + 1
+        ends_high[p] = q + 1
+        count += within * (j + 1 - i)
+        count_high += within_high * (q + 1 - p)
+        i += within
+        j += within - 1
+        p += within_high
+        q += within_high - 1
+    for row in range(i, n):
+        ends_low[row] = row
+    for row in range(p, n):
+        ends_high[row] = row
+    return count, count_high
+
+
+@compiled
+def count_differences(
+    x: Values, low: float, high: float, ends_low: Places, ends_high: Places
+) -> tuple[int, int]:
+    """Do for differences what `count_sums` does for sums; high ≥ 0.
+
+    The walks are windows whose two ends both move upwards.
+    """
+    n = x.size
+    bound = max(low, 0.0)
+    i, j, count = 0, 0, 0
+    p, q, count_high = 0, 0, 0
+    while q < n:  # the wider window arrives first
+        within = int(x[j] - x[i] <= bound)
+        within_high = int(x[q] - x[p] <= high)
+        ends_low[i] = j
+        ends_high[p] = q
+        count += (1 - within) * (j - i - 1)
+        count_high += (1 - within_high) * (q - p - 1)
+        i += 1 - within
+        j += within
+        p += 1 - within_high
+        q += within_high
+    while j < n:
+        within = int(x[j] - x[i] <= bound)
+        ends_low[i] = j
+        count += (1 - within) * (j - i - 1)
+        i += 1 - within
+        j += within
+    for row in range(p, n):
+        ends_high[row] = n
+        count_high += n - row - 1
+    for row in range(i, n):
+        ends_low[row] = n
+        count += n - row - 1
+    if low < 0.0:
+        for row in range(n):
+            ends_low[row] = row + 1
+        count = 0
+    return count, count_high
+
+
+@compiled
+def count_ratios(
+    a: Values, b: Values, low: float, high: float, ends_low: Places, ends_high: Places
+) -> tuple[int, int]:
+    """Do for ratios what `count_sums` does for sums: larger divisors reach farther."""
+    rows, columns = a.size, b.size
+    i, j, count = 0, 0, 0
+    p, q, count_high = 0, 0, 0
+    while q < columns and i < rows:
+        within = int(b[j] / a[i] <= low)
+        within_high = int(b[q] / a[p] <= high)
+        ends_low[i] = j
+        ends_high[p] = q
+        count += (1 - within) * j
+        count_high += (1 - within_high) * q
+        i += 1 - within
+        j += within
+        p += 1 - within_high
+        q += within_high
+    while j < columns and i < rows:
+        within = int(b[j] / a[i] <= low)
+        ends_low[i] = j
+        count += (1 - within) * j
+        i += 1 - within
+        j += within
+    while q < columns and p < rows:
+        within_high = int(b[q] / a[p] <= high)
+        ends_high[p] = q
+        count_high += (1 - within_high) * q
+        p += 1 - within_high
+        q += within_high
+    for row in range(i, rows):
+        ends_low[row] = columns
+    for row in range(p, rows):
+        ends_high[row] = columns
+    return count + (rows - i) * columns, count_high + (rows - p) * columns
+
+
+@compiled
+def neighbours(kind: int, a: Values, b: Values, ends: Places) -> tuple[float, float]:
+    """The largest entry before a staircase and the smallest behind it."""
+    largest, smallest = -np.inf, np.inf
+    for i in range(a.size):
+        before = ends[i] - 1
+        if before >= first_column(kind, i):
+            largest = max(largest, entry(kind, a, b, i, before))
+        if before + 1 < b.size:
+            smallest = min(smallest, entry(kind, a, b, i, before + 1))
+    return largest, smallest
