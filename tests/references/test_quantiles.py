@@ -148,6 +148,13 @@ def test_quantile_is_what_r_gives(estimate, x, prob, expected):
     assert found == pytest.approx(expected, rel=1e-14)
 
 
+def test_rounding_does_not_reach_the_next_value(estimate):
+    # R 4.2.2: quantile(c(1, 2, 3, Inf, Inf), 0.5, type = 8) is 3 although 1/3 + 0.5 (n + 1/3) is
+    # just above 3 in double; quantile(c(-Inf, 2, 3), 0.5, type = 8) is 2, just below
+    assert estimate("quantile_hf", [1, 2, 3, float("inf"), float("inf")], prob=0.5, kind=8) == 3
+    assert estimate("quantile_hf", [-float("inf"), 2, 3], prob=0.5, kind=8) == 2
+
+
 @pytest.mark.parametrize("kind", range(1, 10))
 def test_quantile_is_what_numpy_and_scipy_give(estimate, generator, kind):
     for n in (1, 2, 7, 50):

@@ -131,6 +131,7 @@ def test_digits_hold_under_a_large_shift(generator):
     [
         ([(4.0, 0.3)], 4.0),
         ([(4.0, 5e-324), (6.0, 0.0)], 4.0),
+        ([(2.0, 0.0), (4.0, 5e-324)], 4.0),
         ([(4.0, 1.0), (6.0, 1.0)], 5.0),
         ([(4.0, 1.0), (6.0, math.inf)], math.nan),
         ([(math.inf, 1.0), (math.inf, 2.0)], math.inf),
