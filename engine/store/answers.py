@@ -26,7 +26,7 @@ LIMIT_SETTING = "answers_limit"
 LARGEST_SHARE = 4
 # A use younger than this is as good as now: noting every one would make a writer of every reader.
 USE_GRAIN = timedelta(minutes=1)
-_SHELF_BYTES = 4 << 20
+_SHELF_BYTES = 2 << 20
 _PART_BYTES = 16 << 20
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 _SIZE = re.compile(r"^\s*(\d+(?:\.\d+)?)\s*([kmgt]?)(i?)b?\s*$", re.IGNORECASE)
@@ -174,10 +174,8 @@ class Answers:
                 return False
             _drop(engine, "key = $1", [key])
             _make_room(engine, most - size)
-            shelf = _open_shelf(engine)
-            answer = engine.execute(
-                "SELECT coalesce(max(answer), 0) + 1 FROM store.ledger.answers"
-            ).fetchall()[0][0]
+            answer = _next_number(engine)
+            shelf = _open_shelf(engine, answer)
             engine.execute(
                 "INSERT INTO store.ledger.answers"
                 " SELECT $answer, $key, $sql, now(), now(), $rows, $bytes, $shelf, $version",
@@ -311,8 +309,17 @@ def _drop(
     return len(rows)
 
 
-def _open_shelf(engine: duckdb.DuckDBPyConnection) -> int:
-    """Give a shelf with room; a new one where all are full."""
+def _next_number(engine: duckdb.DuckDBPyConnection) -> int:
+    """Give a number never given before in this store."""
+    number: int = engine.execute(
+        "UPDATE store.ledger.about SET value = (value::BIGINT + 1)::VARCHAR WHERE name = 'numbered'"
+        " RETURNING value::BIGINT"
+    ).fetchall()[0][0]
+    return number
+
+
+def _open_shelf(engine: duckdb.DuckDBPyConnection, number: int) -> int:
+    """Give a shelf with room; a new one of the given number where all are full."""
     rows = engine.execute(
         "SELECT shelf FROM store.ledger.answers GROUP BY shelf HAVING sum(bytes) < $1"
         " ORDER BY shelf DESC LIMIT 1",
@@ -321,8 +328,5 @@ def _open_shelf(engine: duckdb.DuckDBPyConnection) -> int:
     if rows:
         shelf: int = rows[0][0]
         return shelf
-    shelf = engine.execute(
-        "SELECT coalesce(max(shelf), 0) + 1 FROM store.ledger.answers"
-    ).fetchall()[0][0]
-    engine.execute(creating_shelf(shelf))
-    return shelf
+    engine.execute(creating_shelf(number))
+    return number

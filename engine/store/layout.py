@@ -23,7 +23,7 @@ def creating(alias: str) -> list[str]:
         f"CREATE SCHEMA {database}.answers",
         f"CREATE TABLE {database}.ledger.about (name VARCHAR NOT NULL, value VARCHAR)",
         f"INSERT INTO {database}.ledger.about VALUES ('program', {literal(PROGRAM)}),"
-        f" ('format', {literal(str(FORMAT))}), ('made', now()::VARCHAR)",
+        f" ('format', {literal(str(FORMAT))}), ('made', now()::VARCHAR), ('numbered', '0')",
         f"CREATE TABLE {database}.ledger.answers ("
         "answer BIGINT NOT NULL, key VARCHAR NOT NULL, sql VARCHAR NOT NULL,"
         " kept TIMESTAMPTZ NOT NULL, last_used TIMESTAMPTZ NOT NULL, row_count BIGINT NOT NULL,"
