@@ -34,12 +34,11 @@ def estimate(connection: duckdb.DuckDBPyConnection) -> Estimate:
             frame[column] = [None if v is None else float(v) for v in values]
         arguments = [*names, *(f"{key} := {value!r}" for key, value in parameters.items())]
         lists = ", ".join(f"unnest($values_{column}::DOUBLE[]) AS {column}" for column in names)
-        row = connection.execute(
+        ((figure,),) = connection.execute(
             f"SELECT {name}({', '.join(arguments)}) FROM (SELECT {lists})",
             {f"values_{column}": values for column, values in frame.items()},
-        ).fetchone()
-        assert row is not None
-        return row[0]
+        ).fetchall()  # all of it: an unfinished result would block the connection
+        return figure
 
     return one_figure
 
