@@ -134,6 +134,14 @@ def _whole_record_x0(
 
 
 @compiled
+def _ranked_record(
+    x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int
+) -> None:
+    """For a kernel whose values may be ranks: the parameters hold the number behind each rank."""
+    kernel(x, p[0], out[rows[g], c:])
+
+
+@compiled
 def _list_x0(x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int) -> None:
     answer = out[rows[g] : rows[g + 1], :]
     if _not_a_number(x, w):
@@ -165,6 +173,11 @@ def driver(function: Function) -> Callable[..., None]:
 def summary_driver(name: str, function: Callable[..., None]) -> Callable[..., None]:
     """The compiled loop of a kernel ``(x, out)`` that handles NaN by itself."""
     return _compiled_loop(name, function, _whole_record_x0)
+
+
+def ranked_driver(name: str, function: Callable[..., None]) -> Callable[..., None]:
+    """The compiled loop of a kernel ``(x, points, out)`` that handles NaN by itself."""
+    return _compiled_loop(name, function, _ranked_record)
 
 
 @functools.cache

@@ -19,6 +19,7 @@ from midspread.udfs.catalogue import functions
 from midspread.udfs.declaring import NULL, Function, Parameter, ParameterError, Values, null_mask
 from midspread.udfs.drivers import driver, summary_driver
 from midspread.udfs.grouped import Control, Groups, Task, row_numbers, run
+from midspread.udfs.profile_binding import COUNTS_TYPE, PROFILE_MACROS, ProfileFunctions
 from midspread.udfs.tables.robust_summary import DEEP_FIGURES, SUMMARY_FIELDS, summarise
 
 NUMBER_TYPES: Final = "a number (any integer type, DECIMAL, FLOAT or DOUBLE)"
@@ -114,6 +115,11 @@ class _Binding:
         self._create(
             "_table_query", write_table_query, ["VARCHAR", "VARCHAR"], "VARCHAR", kind="native"
         )
+        profile = ProfileFunctions(self._control, self._threads)
+        self._create("_value_counts", profile.value_counts, None, COUNTS_TYPE)
+        self._create("_longest_run", profile.longest_run, ["DOUBLE[]"], "BIGINT")
+        for macro in PROFILE_MACROS:
+            self._connection.execute(macro)
 
     def register_aggregate(self, function: Function) -> None:
         """Create the Arrow function and the macro that calls it."""
@@ -131,26 +137,29 @@ class _Binding:
         self,
         name: str,
         function: Callable[..., Any],
-        arguments: Sequence[str],
+        arguments: Sequence[str] | None,
         result: str,
         kind: str = "arrow",
     ) -> None:
+        """Create a scalar function; without argument types it takes any number of any type."""
+
         def called(*given: Any) -> Any:
             return function(*given)
 
-        # DuckDB compares the number of types with the parameters it finds by inspection.
-        called.__signature__ = inspect.Signature(  # type: ignore[attr-defined]
-            [
-                inspect.Parameter(f"argument_{i}", inspect.Parameter.POSITIONAL_ONLY)
-                for i in range(len(arguments))
-            ]
-        )
+        if arguments is not None:
+            # DuckDB compares the number of types with the parameters it finds by inspection.
+            called.__signature__ = inspect.Signature(  # type: ignore[attr-defined]
+                [
+                    inspect.Parameter(f"argument_{i}", inspect.Parameter.POSITIONAL_ONLY)
+                    for i in range(len(arguments))
+                ]
+            )
         try:
             create: Any = self._connection.create_function
             create(
                 name,
                 called,
-                list(arguments),
+                None if arguments is None else list(arguments),
                 result,
                 type=kind,
                 null_handling="special",
