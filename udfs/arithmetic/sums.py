@@ -6,6 +6,7 @@ from typing import Final
 from midspread.udfs.declaring import Values, compiled
 
 _BLOCK: Final = 64
+_SMALL_UNIT: Final = 2.0**-64
 
 
 @compiled
@@ -76,14 +77,39 @@ def _two_sum(a: float, b: float) -> tuple[float, float]:
 
 @compiled
 def compensated_mean(x: Values, start: int, stop: int) -> float:
-    """Mean of x[start:stop], taken around the middle value so that a common shift costs no digits.
+    """Mean of x[start:stop]; undefined for an empty slice, which the callers exclude."""
+    return mean_with_tails(x, start, stop, 0)
 
-    Undefined for an empty slice; the callers exclude it.
+
+@compiled
+def mean_with_tails(x: Values, start: int, stop: int, more: int) -> float:
+    """Mean of x[start:stop] when its first and its last value count so many times more.
+
+    Values within a factor of 2 of the middle one are added as differences from it, which are
+    exact: a common shift costs no digits, and equal values have themselves as their mean.
     """
-    centre = x[(start + stop) // 2]
-    if math.isinf(centre):
-        return compensated_sum(x, start, stop) / (stop - start)
-    return centre + compensated_sum_from(x, start, stop, centre) / (stop - start)
+    low, middle, high = x[start], x[(start + stop) // 2], x[stop - 1]
+    near = (middle / 2 <= low and high / 2 <= middle) or (middle <= low / 2 and high <= middle / 2)
+    origin = middle if near and not math.isinf(middle) else 0.0
+    total = compensated_sum_from(x, start, stop, origin)
+    if more > 0:
+        total += more * ((low - origin) + (high - origin))
+    mean = origin + total / (stop - start + 2 * more)
+    if not math.isfinite(mean) and math.isfinite(low) and math.isfinite(high):
+        mean = _mean_of_huge(x, start, stop, more)
+    # The last rounding must not carry the mean past the values.
+    return low if mean < low else high if mean > high else mean
+
+
+@compiled
+def _mean_of_huge(x: Values, start: int, stop: int, more: int) -> float:
+    """The mean of values whose sum is too large for a double."""
+    total = lost = 0.0
+    for i in range(start, stop):
+        total, error = _two_sum(total, x[i] * _SMALL_UNIT)
+        lost += error
+    total += more * (x[start] * _SMALL_UNIT + x[stop - 1] * _SMALL_UNIT)
+    return (total + lost) / (stop - start + 2 * more) / _SMALL_UNIT
 
 
 @compiled

@@ -1,6 +1,5 @@
 """Means of the middle part, and the trimean."""
 
-import math
 from typing import Final
 
 from midspread.udfs.arithmetic.order_statistics import (
@@ -9,7 +8,7 @@ from midspread.udfs.arithmetic.order_statistics import (
     midpoint,
     upper_fourth,
 )
-from midspread.udfs.arithmetic.sums import compensated_mean, compensated_sum_from
+from midspread.udfs.arithmetic.sums import compensated_mean, mean_with_tails
 from midspread.udfs.declaring import Parameter, Values, aggregate, compiled
 
 SHARE: Final = Parameter(
@@ -99,16 +98,7 @@ def winsorized_mean(x: Values, share: float) -> float:
     g = cut_from_each_tail(n, share)
     if share == 0.5 or 2 * g >= n:
         return median_sorted(x)
-    if g == 0:
-        return compensated_mean(x, 0, n)
-    low, high = x[g], x[n - g - 1]
-    if low == high:
-        return low
-    centre = x[n // 2]
-    if math.isinf(low) or math.isinf(high):
-        return (g * low + g * high + compensated_sum_from(x, g, n - g, 0.0)) / n
-    middle = compensated_sum_from(x, g, n - g, centre)
-    return centre + (middle + g * ((low - centre) + (high - centre))) / n
+    return mean_with_tails(x, g, n - g, g)
 
 
 @aggregate(

@@ -1,10 +1,27 @@
 """Winsorized standard deviation, and the standard error of a trimmed mean that rests on it."""
 
 import math
+from typing import Final
 
 from midspread.udfs.arithmetic.sums import winsorized_sum_of_squares
-from midspread.udfs.declaring import NULL, Values, aggregate
+from midspread.udfs.declaring import NULL, Values, aggregate, compiled
 from midspread.udfs.location.trimming import SHARE, cut_from_each_tail
+
+_LARGE: Final = 2.0**400
+_SMALL: Final = 2.0**-400
+_RESCALING: Final = 2.0**700
+
+
+@compiled
+def winsorized_deviation(x: Values, g: int, divisor: float) -> float:
+    """√(Σ (w_i − mean(w))² / divisor), w being x with the g lowest and g highest pulled in."""
+    spread = x[x.size - g - 1] - x[g]
+    # Squares leave the range of a double long before the values do.
+    if spread > _LARGE:
+        return math.sqrt(winsorized_sum_of_squares(x / _RESCALING, g) / divisor) * _RESCALING
+    if 0.0 < spread < _SMALL:
+        return math.sqrt(winsorized_sum_of_squares(x * _RESCALING, g) / divisor) / _RESCALING
+    return math.sqrt(winsorized_sum_of_squares(x, g) / divisor)
 
 
 @aggregate(
@@ -46,7 +63,7 @@ def winsorized_sd(x: Values, share: float) -> float:
     if share == 0.5:
         return 0.0
     g = cut_from_each_tail(n, share)
-    return math.sqrt(winsorized_sum_of_squares(x, g) / (n - 1))
+    return winsorized_deviation(x, g, n - 1.0)
 
 
 @aggregate(
@@ -84,4 +101,4 @@ def trimmed_mean_se(x: Values, share: float) -> float:
     if share == 0.5 or h < 2:
         return NULL
     # (n − 1) of the standard deviation cancels against the (n − 1) of the factor.
-    return math.sqrt(winsorized_sum_of_squares(x, g) / (h * (h - 1.0)))
+    return winsorized_deviation(x, g, h * (h - 1.0))
