@@ -15,7 +15,7 @@ from midspread.demo_db.generator import VISIT_COLUMNS, equip
 FEWEST_VISITS, MOST_VISITS = 1_000, 100_000_000
 # Old enough for every DuckDB 1.x client to open the file.
 WAREHOUSE_FORMAT = "v1.0.0"
-# More workers than this gain little and each holds a month in memory.
+# More workers than this gain little.
 MOST_WORKERS = 4
 
 WAREHOUSE_TABLES = {
@@ -194,11 +194,13 @@ class _Writer:
         )
 
     def write_month(self, month: int) -> None:
+        # No ORDER BY, whose sort would hold the month in memory: one thread streams the visits in
+        # the order of their numbers.
         first = f"DATE '{truth.YEAR}-{month:02d}-01'"
         path = _quoted(self._staged / "dwell" / f"{truth.YEAR}-{month:02d}.parquet")
         self._run(
             f"COPY (SELECT {', '.join(VISIT_COLUMNS)} "
-            f"FROM larkmoor_visits({first}, last_day({first})) ORDER BY visit) "
+            f"FROM larkmoor_visits({first}, last_day({first}))) "
             f"TO {path} (FORMAT parquet, COMPRESSION zstd)"
         )
 
@@ -215,7 +217,11 @@ class _Writer:
             # one thread each: parts run side by side, and a file never depends on scheduling
             connection = duckdb.connect(
                 ":memory:",
-                config={"threads": 1, "temp_directory": str(self._staged.parent / "spill")},
+                config={
+                    "threads": 1,
+                    # else the visits, whose number the planner cannot guess, end up in hash tables
+                    "disabled_optimizers": "join_order,build_side_probe_side",
+                },
             )
             self._connections.append(connection)
             equip(connection, self._visits)

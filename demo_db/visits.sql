@@ -54,14 +54,18 @@ FROM spells
 WHERE larkmoor_uniform(spell_key, $salt_stuck) < stuck_share;
 
 CREATE OR REPLACE TEMP MACRO larkmoor_visits(from_day, to_day) AS TABLE
-WITH numbered AS (
+WITH stepped AS (
+    SELECT *, unnest(range(visits_of_day)) AS step
+    FROM larkmoor_calendar
+    WHERE day BETWEEN from_day AND to_day
+),
+numbered AS (
     SELECT
-        calendar.day,
-        calendar.day_index,
-        (calendar.visits_before + steps.step + 1)::INTEGER AS visit,
-        (steps.step * 100 // calendar.visits_of_day)::INTEGER AS day_hundredth
-    FROM larkmoor_calendar AS calendar, unnest(range(calendar.visits_of_day)) AS steps(step)
-    WHERE calendar.day BETWEEN from_day AND to_day
+        day,
+        day_index,
+        (visits_before + step + 1)::INTEGER AS visit,
+        (step * 100 // visits_of_day)::INTEGER AS day_hundredth
+    FROM stepped
 ),
 keyed AS (
     SELECT *, larkmoor_mixed(visit::UBIGINT) AS key FROM numbered

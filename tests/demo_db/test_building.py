@@ -66,12 +66,16 @@ def test_layout(demo: Demo) -> None:
     ]
 
 
-def test_rows_stand_in_order_of_visit_and_day(demo: Demo) -> None:
-    with duckdb.connect(":memory:") as connection:
-        rows = connection.execute(
-            "SELECT visit, day FROM read_parquet(?)", [str(demo.folder / "dwell/2031-03.parquet")]
-        ).fetchall()
-    assert rows == sorted(rows)
+def test_every_file_stands_in_order_of_visit_and_day(demo: Demo) -> None:
+    visits: list[int] = []
+    for file in sorted((demo.folder / "dwell").iterdir()):
+        with duckdb.connect(":memory:", config={"threads": 1}) as connection:
+            rows = connection.execute("SELECT visit, day FROM read_parquet(?)", [str(file)])
+            pairs = rows.fetchall()
+        assert pairs == sorted(pairs)
+        assert [day for _, day in pairs] == sorted(day for _, day in pairs)
+        visits += [visit for visit, _ in pairs]
+    assert visits == list(range(1, demo.visits + 1))
 
 
 def test_progress_rises_from_0_to_1(tmp_path: Path) -> None:
@@ -252,7 +256,7 @@ except DemoError as error:
 @pytest.mark.skipif(sys.platform == "win32", reason="sends SIGINT to a child")
 def test_ctrl_c_stops_at_once_and_leaves_nothing(tmp_path: Path) -> None:
     child = subprocess.Popen(
-        [sys.executable, "-c", BUILD_IN_CHILD, str(tmp_path / "demo"), "20000000"],
+        [sys.executable, "-c", BUILD_IN_CHILD, str(tmp_path / "demo"), "100000000"],
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         text=True,
@@ -265,7 +269,7 @@ def test_ctrl_c_stops_at_once_and_leaves_nothing(tmp_path: Path) -> None:
     _, error = child.communicate(timeout=60)
     assert "KeyboardInterrupt" in error
     assert child.returncode != 0
-    assert time.monotonic() - asked < 20, "far less than the build would take"
+    assert time.monotonic() - asked < 10, "a month of this size alone takes longer"
     assert not list(tmp_path.iterdir())
 
 

@@ -85,20 +85,51 @@ def test_closed_forms_of_truth_agree_with_each_other_and_the_clean_data(
 
 
 @pytest.mark.parametrize("payment", [truth.CASH_BOX, truth.TAP_READER])
-def test_share_of_stuck_clocks(truth_connection: Connection, payment: str) -> None:
-    n, at_zero, stuck_open = one_row(
+def test_share_of_stuck_spells(truth_connection: Connection, payment: str) -> None:
+    last = truth.FIRST_DAY + dt.timedelta(truth.DAYS_IN_YEAR)
+    with_cash_box = sum(
+        ((bus.reader_fitted or last) - truth.FIRST_DAY).days for bus in truth.VEHICLES
+    )
+    with_reader = len(truth.VEHICLES) * truth.DAYS_IN_YEAR - with_cash_box
+    days = with_cash_box if payment == truth.CASH_BOX else with_reader
+    spells = days * len(truth.DAY_PARTS)
+    at_zero, stuck_open = one_row(
         truth_connection,
-        "SELECT count(*), avg((dwell_s = 0)::INTEGER), avg((dwell_s > 3600)::INTEGER) "
-        f"FROM visits WHERE payment = '{payment}' AND dwell_s IS NOT NULL AND stop <> 'L6-08'",
+        "SELECT count_if(kind = 'stuck at zero'), count_if(kind = 'stuck open') "
+        "FROM larkmoor_stuck_spell JOIN warehouse.vehicles USING (vehicle) "
+        f"WHERE coalesce(day >= reader_fitted, false) = ('{payment}' = 'tap reader')",
     )
     share = truth.STUCK_SHARE[payment]
     for got, stated in (
-        (at_zero, share * truth.STUCK_AT_ZERO_PART),
-        (stuck_open, share * (1 - truth.STUCK_AT_ZERO_PART)),
+        (at_zero / spells, share * truth.STUCK_AT_ZERO_PART),
+        (stuck_open / spells, share * (1 - truth.STUCK_AT_ZERO_PART)),
     ):
-        assert stated > 0
-        # a clock sticks for spells of several visits, so the share varies more than by single rows
-        assert abs(got - stated) < 2 * five_errors_of_share(stated, n)
+        assert abs(got - stated) < five_errors_of_share(stated, spells) < stated / 2
+
+
+def test_share_of_stuck_visits(truth_connection: Connection) -> None:
+    rows = truth_connection.execute(
+        "SELECT payment, count(*), avg((dwell_s = 0)::INTEGER), avg((dwell_s > 3600)::INTEGER) "
+        "FROM visits WHERE dwell_s IS NOT NULL AND stop <> 'L6-08' GROUP BY payment"
+    ).fetchall()
+    assert len(rows) == 2
+    for payment, n, at_zero, stuck_open in rows:
+        for got, part in (
+            (at_zero, truth.STUCK_AT_ZERO_PART),
+            (stuck_open, 1 - truth.STUCK_AT_ZERO_PART),
+        ):
+            stated = truth.STUCK_SHARE[payment] * part
+            # spells of more than one visit make the share vary a little more
+            assert abs(got - stated) < 1.5 * five_errors_of_share(stated, n)
+
+
+def test_faults_strike_whatever_the_dwell(scored: Connection) -> None:
+    rows = scored.execute("SELECT fault, avg(z), count(*) FROM scored GROUP BY fault").fetchall()
+    assert {fault for fault, *_ in rows} == {
+        *(None, "missing", "stuck at zero", "stuck open", "layover", "drift", "rounded"),
+    }
+    for fault, mean, n in rows:
+        assert abs(mean) < 5 / math.sqrt(n), fault
 
 
 def test_stuck_open_values(truth_connection: Connection) -> None:
