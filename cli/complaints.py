@@ -101,6 +101,9 @@ def _as_clause(message: str) -> str:
 
 
 def _say(sentence: str, command: str) -> None:
+    if command and sentence.startswith("query: "):
+        # The engine speaks of queries; another command that makes one speaks of itself.
+        sentence = f"{command}: {sentence.removeprefix('query: ')}"
     own = command and sentence.startswith(f"{command}: ")
     line = f"midspread {sentence}" if own else f"midspread: {sentence}"
     # Anything not printable, a lone surrogate of a file name included, must not raise here.

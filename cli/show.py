@@ -1,6 +1,8 @@
 """``midspread show``: what there is, and what a file or table holds."""
 
-from collections.abc import Mapping
+import contextlib
+import re
+from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -10,7 +12,7 @@ from midspread.cli.help import HelpfulCommand
 from midspread.cli.numbers import count_text, size_text
 from midspread.cli.options import Settings, attach_option, engine_options
 from midspread.cli.screen import Screen, result_console
-from midspread.engine.errors import UsageError
+from midspread.engine.errors import MidspreadError, UsageError
 
 if TYPE_CHECKING:
     from midspread.engine.session import Session
@@ -19,6 +21,7 @@ if TYPE_CHECKING:
 FIRST_ROWS = 10
 # Rows of these are counted by looking at the file's own records, at once.
 _COUNTED_ENDINGS = frozenset({".parquet", ".duckdb", ".db", ".ddb"})
+_POSITION = re.compile(r" \(line \d+, column \d+\)")
 _DUCKDB_MARK = b"DUCK"
 _DUCKDB_MARK_AT = 8
 
@@ -91,6 +94,7 @@ def _show_rows(
 
     source = relation("show", name)
     with (
+        _without_position(),
         Screen() as screen,
         settings.session(screen, sources=sources, use_store=False) as session,
     ):
@@ -98,9 +102,20 @@ def _show_rows(
         rows = session.query(f"FROM {source} LIMIT {FIRST_ROWS}")
         count = _row_count(session, name, source)
     _head(console, name, count)
-    print_table(console, columns.table, most_rows=0, note=count_text(columns.table.num_rows, "column"))
+    print_table(
+        console, columns.table, most_rows=0, note=count_text(columns.table.num_rows, "column")
+    )
     console.print()
     print_table(console, rows.table, note=f"the first {count_text(rows.table.num_rows, 'row')}")
+
+
+@contextlib.contextmanager
+def _without_position() -> Iterator[None]:
+    """Errors that do not point into SQL which the user never wrote."""
+    try:
+        yield
+    except MidspreadError as error:
+        raise type(error)(_POSITION.sub("", str(error))) from None
 
 
 def _row_count(session: "Session", name: str, source: str) -> str:

@@ -1,8 +1,121 @@
-"""``midspread store``: the store of kept answers."""
-import click
+"""``midspread store``: where kept answers are, how much room they take, keeping it in order."""
+
+from datetime import datetime
 from pathlib import Path
-from rich.text import Text
-def store_lines(p: Path | None) -> list[Text]: return []
-@click.command()
-def store() -> None:
-    """x"""
+from typing import TYPE_CHECKING
+
+import click
+from midspread.cli.cells import visible
+from midspread.cli.help import HelpfulCommand
+from midspread.cli.numbers import count_text, size_text
+from midspread.cli.options import store_option
+
+if TYPE_CHECKING:
+    from midspread.engine.store.store import Store
+    from rich.text import Text
+
+ACTIONS = ("check", "pack", "clear-answers")
+
+
+@click.command(
+    cls=HelpfulCommand,
+    examples=("midspread store", "midspread store check", "midspread store clear-answers"),
+)
+@click.argument("action", metavar="[check or pack or clear-answers]", required=False)
+@store_option
+def store(action: str | None, store: Path | None) -> None:
+    """Where the store of kept answers is, and what it holds.
+
+    check reads all of it and says what is wrong; pack gives back the room of answers dropped since;
+    clear-answers drops every kept answer. The environment variable MIDSPREAD_STORE names a store,
+    MIDSPREAD_ANSWERS_LIMIT the room its answers may take.
+    """
+    if action is None:
+        from midspread.cli.screen import result_console
+        from midspread.cli.tables import print_lines
+
+        print_lines(result_console(), store_lines(store))
+        return
+    if action not in ACTIONS:
+        raise click.UsageError(
+            f"there is no {action!r}; it takes {', '.join(ACTIONS[:-1])} or {ACTIONS[-1]}, or "
+            "nothing to say what the store holds"
+        )
+    from midspread.engine.store.store import Store
+
+    opened = Store.open(_place(store), create=False)
+    try:
+        {"check": _check, "pack": _pack, "clear-answers": _clear}[action](opened)
+    finally:
+        opened.close()
+
+
+def store_lines(named: Path | None) -> "list[Text]":
+    """What to say about the store, whether it exists yet or not."""
+    from midspread.cli.tables import FAINT
+    from rich.text import Text
+
+    path = _place(named)
+    if not path.exists():
+        return [Text(visible(str(path))), Text("not there yet: the first query makes it")]
+    from midspread.engine.store.housekeeping import report
+    from midspread.engine.store.store import Store
+
+    opened = Store.open(path, create=False)
+    try:
+        found = report(opened)
+    finally:
+        opened.close()
+    facts = {
+        "place": visible(str(found.path)),
+        "file": size_text(found.file_bytes),
+        "answers": count_text(found.answers, "kept answer"),
+        "room": f"{size_text(found.answer_bytes)} of at most {size_text(found.limit_bytes)}",
+    }
+    if found.oldest is not None and found.newest is not None:
+        facts["kept"] = f"from {_when(found.oldest)} to {_when(found.newest)}"
+    lines = []
+    for name, words in facts.items():
+        lines.append(Text(name.ljust(9), style=FAINT))
+        lines[-1].append(words, style="not dim")
+    return lines
+
+
+def _place(named: Path | None) -> Path:
+    from midspread.engine.store.finding import find_store
+
+    return find_store(Path(), named)
+
+
+def _when(moment: datetime) -> str:
+    return moment.astimezone().strftime("%Y-%m-%d %H:%M")
+
+
+def _check(opened: "Store") -> None:
+    from midspread.engine.errors import StoreDamaged
+    from midspread.engine.store.answers import Answers
+    from midspread.engine.store.housekeeping import check
+
+    faults = check(opened)
+    for fault in faults:
+        click.echo(visible(fault))
+    if faults:
+        raise StoreDamaged(
+            f"store: {count_text(len(faults), 'fault')} in {opened.path}; "
+            "midspread store clear-answers drops what is kept, and queries compute it anew."
+        )
+    answers = count_text(Answers(opened).count(), "kept answer")
+    click.echo(f"{visible(str(opened.path))} is sound: {answers} read.")
+
+
+def _pack(opened: "Store") -> None:
+    from midspread.engine.store.housekeeping import pack
+
+    click.echo(f"{size_text(pack(opened))} given back by {visible(str(opened.path))}.")
+
+
+def _clear(opened: "Store") -> None:
+    from midspread.engine.store.answers import Answers
+
+    dropped = count_text(Answers(opened).clear(), "kept answer")
+    click.echo(f"{dropped} dropped from {visible(str(opened.path))}.")

@@ -248,11 +248,12 @@ def _bands(part: Excerpt, widths: Sequence[int], room: int) -> list[Text]:
 
 
 def _key_count(columns: Sequence[Column], widths: Sequence[int], room: int) -> int:
-    """How many leading columns every band repeats: names and dates, up to half the room."""
+    """How many leading columns every band repeats: names, dates or a number of the row."""
     most = min(room // 2, room - GAP - NARROWEST_TEXT)
     count = 0
     for column in columns[: min(3, len(columns) - 1)]:
-        if column.is_number or column.is_measure or _total(widths[: count + 1]) > most:
+        is_key = not column.is_measure and (count == 0 or not column.is_number)
+        if not is_key or _total(widths[: count + 1]) > most:
             break
         count += 1
     return count

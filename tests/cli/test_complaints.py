@@ -42,9 +42,7 @@ def test_a_surprise_gives_one_line_and_says_what_to_do(
     assert "MIDSPREAD_DEBUG=1" in said
 
 
-def test_the_traceback_comes_only_when_asked_for(
-    run: Run, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_the_traceback_comes_only_when_asked_for(run: Run, monkeypatch: pytest.MonkeyPatch) -> None:
     def surprise(*_arguments: object) -> None:
         raise ZeroDivisionError("division by zero")
 
@@ -62,7 +60,10 @@ def test_the_traceback_comes_only_when_asked_for(
     [
         (["qury"], "there is no command qury; did you mean query?"),
         (["zzz"], "there is no command zzz; see midspread --help."),
-        (["query", "--fromat", "csv"], "query: there is no option --fromat; did you mean --format?"),
+        (
+            ["query", "--fromat", "csv"],
+            "query: there is no option --fromat; did you mean --format?",
+        ),
         (["query", "--zzz"], "query: there is no option --zzz; see midspread query --help."),
         (["query", "--format", "yaml", "SELECT 1"], "query: --format: 'yaml' is not one of"),
         (["query", "--format"], "query: option '--format' requires an argument"),
