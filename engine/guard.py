@@ -16,7 +16,7 @@ from midspread.engine.harmless import (
     REFUSED_TABLE_FUNCTIONS,
     REFUSED_VOLATILE_FUNCTIONS,
 )
-from midspread.engine.parsing import Node, NotParsed, Tree, function_name, nodes, parse
+from midspread.engine.parsing import Node, NotParsed, Tree, function_name, nodes, one_value, parse
 from midspread.engine.pivoting import parse_with_pivots, without_listed_values
 from midspread.engine.statements import Kind, Statement
 
@@ -111,17 +111,20 @@ class Guard:
         elif statement.kind is not Kind.USE:
             if statement.kind in (Kind.VIEW, Kind.MACRO):
                 self._check_name(statement)
-            self.check_tree(self._tree(statement))
+            self.check_tree(self._tree(statement), in_macro=statement.kind is Kind.MACRO)
 
-    def check_tree(self, tree: Tree) -> None:
-        """Raise RefusedStatement unless a query only reads."""
+    def check_tree(self, tree: Tree, *, in_macro: bool = False) -> None:
+        """Raise RefusedStatement unless a query only reads.
+
+        Within a macro a bare name may be a parameter, and stand for any text.
+        """
         for node in nodes(tree.root):
             kind = node.get("type")
             if isinstance(kind, str) and kind.endswith("_NODE") and kind not in _QUERY_NODES:
                 word = kind.split("_")[0]
                 raise refusal(word, f"{word} inside WITH")
             if kind == "TABLE_FUNCTION":
-                self._check_table_function(node["function"])
+                self._check_table_function(node["function"], in_macro)
             elif (name := function_name(node)) and _is_refused_function(name):
                 raise RefusedStatement(
                     f"query refuses {name}(): it would change something outside the answer; "
@@ -156,7 +159,7 @@ class Guard:
                 f"choose another name."
             )
 
-    def _check_table_function(self, call: Node) -> None:
+    def _check_table_function(self, call: Node, in_macro: bool) -> None:
         name = function_name(call) or ""
         if name in REFUSED_TABLE_FUNCTIONS or self._is_unknown_builtin(name):
             raise RefusedStatement(
@@ -164,16 +167,18 @@ class Guard:
                 f"leave it out."
             )
         if name == "query":
-            self._check_text(name, call, "")
+            self._check_text(name, call, "", in_macro)
         elif name in self._own_tables:
-            self._check_text(name, call, "FROM ")
+            self._check_text(name, call, "FROM ", in_macro)
 
-    def _check_text(self, name: str, call: Node, before: str) -> None:
+    def _check_text(self, name: str, call: Node, before: str, in_macro: bool) -> None:
         """Judge SQL that a function is given as text."""
         given = next((a for a in call["arguments"] if a["name"] in ("", "tbl")), None)
         if given is None:
             return
         text = _constant_text(given["expression"])
+        if text is None and before and not in_macro and _is_name(given["expression"]):
+            return
         if text is None:
             example = f"{name}('visits', ...)" if before else "the query itself in parentheses"
             raise RefusedStatement(
@@ -193,11 +198,12 @@ class Guard:
     def _is_unknown_builtin(self, name: str) -> bool:
         if name in HARMLESS_TABLE_FUNCTIONS or name in self._own_tables:
             return False
-        found = self._connection.execute(
+        found = one_value(
+            self._connection,
             "SELECT 1 FROM duckdb_functions() "
             "WHERE lower(function_name) = ? AND function_type = 'table' LIMIT 1",
             [name],
-        ).fetchone()
+        )
         return found is not None
 
 
@@ -233,6 +239,10 @@ def _constant_text(node: Any) -> str | None:
     if isinstance(literal, dict) and literal.get("kind") == "STRING":
         return str(literal.get("text"))
     return None
+
+
+def _is_name(node: Node) -> bool:
+    return node.get("class") == "COLUMN_REF"
 
 
 def _is_sql(table: str) -> bool:

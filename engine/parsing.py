@@ -6,7 +6,7 @@ guarded and rewritten; each call in it carries the place of its text.
 
 import json
 import sys
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -117,6 +117,15 @@ def literal(text: str) -> str:
     return "'" + text.replace("'", "''") + "'"
 
 
+def one_value(
+    connection: duckdb.DuckDBPyConnection, sql: str, parameters: Sequence[object] = ()
+) -> Any:
+    """The one value that a query gives; None when it gives no row."""
+    # A result that is not fetched to its end would bar the connection for relations.
+    rows = connection.execute(sql, list(parameters)).fetchall()
+    return rows[0][0] if rows else None
+
+
 @dataclass(frozen=True)
 class Tree:
     """DuckDB's syntax tree of one query and the text it was read from."""
@@ -144,9 +153,7 @@ def parse(connection: duckdb.DuckDBPyConnection, text: str) -> Tree:
     NotParsed
         When the text is no SQL, no query, or one whose tree DuckDB cannot show.
     """
-    row = connection.execute("SELECT json_serialize_sql(?::VARCHAR)", [text]).fetchone()
-    assert row is not None
-    answer = _loads(row[0])
+    answer = _loads(one_value(connection, "SELECT json_serialize_sql(?::VARCHAR)", [text]))
     offsets = ByteOffsets(text)
     if answer.get("error"):
         raise _not_parsed(answer, offsets)
@@ -196,11 +203,10 @@ def expression_text(connection: duckdb.DuckDBPyConnection, node: Node) -> str:
         "qualify": None,
     }
     statement = {"error": False, "statements": [{"node": select, "named_param_map": []}]}
-    row = connection.execute(
-        "SELECT json_deserialize_sql(?::JSON)", [json.dumps(statement)]
-    ).fetchone()
-    assert row is not None
-    return str(row[0]).removeprefix("SELECT ")
+    select_text = one_value(
+        connection, "SELECT json_deserialize_sql(?::JSON)", [json.dumps(statement)]
+    )
+    return str(select_text).removeprefix("SELECT ")
 
 
 def nodes(root: Any) -> Iterator[Node]:

@@ -12,6 +12,7 @@ import duckdb
 from midspread.engine.pivoting import insertions
 from midspread.engine.rewriting.catalog import Catalog
 from midspread.engine.rewriting.column_names import column_names
+from midspread.engine.rewriting.direct_call import direct_call
 from midspread.engine.rewriting.distinct import distinct
 from midspread.engine.rewriting.edits import Edit, apply, origin, without_overlaps
 from midspread.engine.rewriting.filter_clause import filter_clause
@@ -37,11 +38,14 @@ class Rule:
         Whether DuckDB would refuse the query without it; other rules only make it faster.
     repeats : bool
         Whether its edits may call for the rule again.
+    only_in_macros : bool
+        Whether it is for the bodies of macros only.
     """
 
     edits: Callable[[Query, Catalog], Sequence[Edit]]
     is_needed: bool
     repeats: bool = True
+    only_in_macros: bool = False
 
 
 RULES: Final[tuple[Rule, ...]] = (
@@ -52,6 +56,7 @@ RULES: Final[tuple[Rule, ...]] = (
     Rule(lambda query, _: distinct(query), is_needed=True),
     Rule(lambda query, _: window_call(query), is_needed=True),
     Rule(shared_sort, is_needed=False),
+    Rule(lambda query, _: direct_call(query), is_needed=True, only_in_macros=True),
 )
 
 
@@ -86,6 +91,8 @@ def rewrite(
     functions: Mapping[str, Function],
     *,
     faster: bool = True,
+    keep_names: bool = True,
+    in_macro: bool = False,
 ) -> Rewritten:
     """Apply the rules to one query.
 
@@ -99,6 +106,10 @@ def rewrite(
         Our functions by name.
     faster : bool
         Whether to apply rules that DuckDB does not need as well.
+    keep_names : bool
+        Whether the columns of the query keep their names.
+    in_macro : bool
+        Whether the query is the body of a macro.
 
     Raises
     ------
@@ -114,7 +125,9 @@ def rewrite(
     passes = [_insertions_as_edits(query.text)]
     did_more = used_faster = False
     for position, rule in enumerate(RULES):
-        if not (rule.is_needed or faster):
+        if not (rule.is_needed or faster) or (position == 0 and not keep_names):
+            continue
+        if rule.only_in_macros and not in_macro:
             continue
         for _ in range(_MOST_PASSES):
             edits = tuple(without_overlaps(rule.edits(query, catalog)))

@@ -5,6 +5,7 @@ Macros take no DISTINCT; the function behind the macro is given a list of distin
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.rewriting.edits import Edit
+from midspread.engine.rewriting.misfit import misfit
 from midspread.engine.rewriting.query import Call, Query
 
 
@@ -31,6 +32,9 @@ def _check(call: Call) -> None:
             f"{' and '.join(call.function.columns)}; select the distinct rows first: "
             f"FROM (SELECT DISTINCT ... FROM ...)."
         )
+    wrong = misfit(call) if call.is_plain else None
+    if wrong is not None:
+        raise MidspreadError(wrong)
     if not call.is_plain or call.columns() is None or call.parameters() is None:
         raise MidspreadError(
             f"{name}: DISTINCT needs the plain form; write {name}(DISTINCT x"

@@ -6,6 +6,7 @@ is skipped.
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.rewriting.edits import Edit
+from midspread.engine.rewriting.misfit import misfit
 from midspread.engine.rewriting.query import Call, Query
 
 
@@ -22,21 +23,30 @@ def filter_clause(query: Query) -> list[Edit]:
     return edits
 
 
+def condition(query: Query, call: Call) -> tuple[int, int]:
+    """Where the condition of a plain call's FILTER stands in the text."""
+    opening = call.closing + 2
+    first = opening + (2 if query.tokens[opening + 1].says("WHERE") else 1)
+    last = query.clauses.closing(opening) - 1
+    return query.tokens[first].start, query.tokens[last].stop
+
+
 def _moved(query: Query, call: Call) -> list[Edit]:
     name = call.function.name
+    wrong = misfit(call) if call.is_plain else None
+    if wrong is not None:
+        raise MidspreadError(wrong)
     columns = call.columns() if call.is_plain else None
     if columns is None:
         raise MidspreadError(
             f"{name}: FILTER needs the call written with its columns in brackets; "
             f"write {name}({', '.join(call.function.columns)}) FILTER (WHERE ...)."
         )
-    word = call.closing + 1
-    opening = word + 1
-    closing = query.clauses.closing(opening)
-    first = opening + (2 if query.tokens[opening + 1].says("WHERE") else 1)
-    condition = query.between(first, closing)
-    edits = [Edit(query.tokens[call.closing].stop, query.tokens[closing].stop, "")]
+    start, stop = condition(query, call)
+    end = query.tokens[query.clauses.closing(call.closing + 2)].stop
+    edits = [Edit(query.tokens[call.closing].stop, end, "")]
     for column in columns:
-        edits.append(Edit(column.start, column.start, f"CASE WHEN ({condition}) THEN ("))
+        before = f"CASE WHEN ({query.text[start:stop]}) THEN ("
+        edits.append(Edit(column.start, column.start, before))
         edits.append(Edit(column.stop, column.stop, ") END"))
     return edits

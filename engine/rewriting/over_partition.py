@@ -153,7 +153,10 @@ def _reads_back(query: Query, select: Node, clauses: Clauses) -> bool:
     except NotParsed:
         return False
     where, parsed = select["where_clause"], root.get("where_clause")
-    if (where is None) != (parsed is None) or (where is not None and not same(where, parsed)):
+    if where is None or parsed is None:
+        if where is not parsed:
+            return False
+    elif not same(where, parsed):
         return False
     return same(select["from_table"], root["from_table"])
 

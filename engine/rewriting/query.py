@@ -80,7 +80,7 @@ class Call:
     @property
     def is_window(self) -> bool:
         """Whether it has an OVER."""
-        return self.node["class"] == "WINDOW"
+        return bool(self.node["class"] == "WINDOW")
 
     @property
     def filter(self) -> Node | None:

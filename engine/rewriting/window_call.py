@@ -6,6 +6,7 @@ macro is given the window's list instead.
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.rewriting.edits import Edit
+from midspread.engine.rewriting.misfit import misfit
 from midspread.engine.rewriting.query import Call, Query
 
 
@@ -21,6 +22,9 @@ def window_call(query: Query) -> list[Edit]:
 def _handed_over(query: Query, call: Call) -> Edit:
     name = call.function.name
     columns, parameters = call.columns(), call.parameters()
+    wrong = misfit(call) if call.is_plain else None
+    if wrong is not None:
+        raise MidspreadError(wrong)
     if not call.is_plain or columns is None or parameters is None or call.node["ignore_nulls"]:
         raise MidspreadError(
             f"{name}: OVER needs the plain form; write {call.function.signature} OVER (...)."

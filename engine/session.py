@@ -1,0 +1,267 @@
+"""A session: the user's SQL guarded, rewritten, answered from the store or computed."""
+
+import os
+import time
+from collections.abc import Callable, Iterator, Mapping
+from functools import partial
+from importlib.metadata import version
+from pathlib import Path
+from types import TracebackType
+from typing import TYPE_CHECKING, Self, TypeVar
+
+import duckdb
+from midspread.engine.answer import Answer, Progress
+from midspread.engine.caching import AnswerCache, Question, when
+from midspread.engine.connecting import attach, checked_sources, connect
+from midspread.engine.errors import MidspreadError
+from midspread.engine.guard import Guard
+from midspread.engine.interrupts import run_interruptibly
+from midspread.engine.messages import Messages
+from midspread.engine.parsing import NotParsed
+from midspread.engine.running import Runner
+from midspread.engine.statements import Kind, Statement, split
+from midspread.engine.store.finding import STORE_VARIABLE, find_store
+from midspread.udfs import functions
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+__all__ = ["Answer", "Progress", "Session"]
+
+Result = TypeVar("Result")
+
+
+class Session:
+    """Runs SQL that only reads, with Midspread's functions.
+
+    Temporary views, macros and variables last until the session is closed.
+
+    Parameters
+    ----------
+    memory : str, optional
+        Most memory to use, such as ``"4GB"``; the engine's own choice by default.
+    threads : int, optional
+        How many threads compute; all by default.
+    store : Path, optional
+        Where answers are kept. By default ``MIDSPREAD_STORE``, else ``midspread.duckdb`` in the
+        folder or the nearest one above it, else created in the folder.
+    use_store : bool
+        Whether to keep answers and look for kept ones at all.
+    folder : Path, optional
+        Where the search for the store begins; the current one by default.
+    sources : mapping of str to Path
+        DuckDB files to attach, for reading only, by name.
+    on_notice : callable, optional
+        Takes lines that the user should see beside an answer.
+    on_progress : callable, optional
+        Takes `Progress` about ten times a second while a query runs.
+
+    Examples
+    --------
+    >>> with Session(use_store=False) as session:
+    ...     session.query("SELECT trimmed_mean(x, 0.25) FROM range(5) t(x)").rows()
+    [(2.0,)]
+    """
+
+    def __init__(
+        self,
+        *,
+        memory: str | None = None,
+        threads: int | None = None,
+        store: Path | None = None,
+        use_store: bool = True,
+        folder: Path | None = None,
+        sources: Mapping[str, Path] | None = None,
+        on_notice: Callable[[str], None] | None = None,
+        on_progress: Callable[[Progress], None] | None = None,
+    ) -> None:
+        self._notices: list[str] = []
+        self._on_notice = on_notice
+        self._on_progress = on_progress
+        self._functions = functions()
+        self._sources = checked_sources(sources or {})
+        self._connection = connect(memory=memory, threads=threads, owner=self)
+        self._messages = Messages(self._connection, self._functions)
+        self._runner = Runner(self._connection, self._functions, self._messages)
+        self._guard = Guard(
+            self._connection,
+            self._functions.keys(),
+            [name for name, function in self._functions.items() if function.kind == "table"],
+        )
+        self._cache: AnswerCache | None = None
+        if use_store:
+            self._cache = self._open_cache(folder or Path(), store)
+        self._are_sources_attached = False
+        self._definitions: list[str] = []
+        self._pending: list[tuple[str, Statement]] = []
+        self._has_macros = bool(self._sources)
+
+    def query(self, sql: str, *, recompute: bool = False) -> Answer:
+        """The answer to the last SELECT of a script.
+
+        Parameters
+        ----------
+        sql : str
+            One or more statements; earlier SELECTs are not run.
+        recompute : bool
+            Whether to compute it even where the store has it.
+
+        Raises
+        ------
+        MidspreadError
+            With one sentence for the user.
+        """
+        statements = self._read(sql)
+        last = max((i for i, one in enumerate(statements) if one.answers), default=None)
+        if last is None:
+            self._define_now(sql, statements)
+            raise MidspreadError(
+                "query: the SQL defines things and asks for none; end it with a SELECT."
+            )
+        for statement in statements[:last]:
+            if not statement.answers:
+                self._define(sql, statement)
+        answer = self._answer(sql, statements[last], recompute)
+        self._define_now(sql, statements[last + 1 :])
+        return answer
+
+    def run(self, sql: str, *, recompute: bool = False) -> Iterator[Answer]:
+        """The answers to all SELECTs of a script, one after the other.
+
+        The script is read and guarded as a whole before its first statement runs.
+        """
+        statements = self._read(sql)
+        return self._run(sql, statements, recompute)
+
+    def expand(self, sql: str) -> str:
+        """The SQL that would be run in place of a script; no query of it is run."""
+        statements = self._read(sql)
+        texts = []
+        for statement in statements:
+            if not statement.answers:
+                self._define_now(sql, [statement])
+            self._settle()
+            texts.append(self._runner.expand(statement))
+        return ";\n".join(texts)
+
+    def interrupt(self) -> None:
+        """Stop the query that is running, from another thread; the session stays usable."""
+        self._runner.stop()
+
+    def close(self) -> None:
+        """Give everything back. The session cannot be used afterwards."""
+        self._connection.close()
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        self.close()
+
+    def _open_cache(self, folder: Path, store: Path | None) -> AnswerCache:
+        return AnswerCache(
+            find_store(folder, store),
+            is_named=store is not None or bool(os.environ.get(STORE_VARIABLE)),
+            functions=self._functions,
+            version=version("midspread"),
+            on_notice=self._notice,
+        )
+
+    def _notice(self, line: str) -> None:
+        self._notices.append(line)
+        if self._on_notice is not None:
+            self._on_notice(line)
+
+    def _read(self, sql: str) -> list[Statement]:
+        """The statements of a script, once all of them are known to be harmless."""
+        try:
+            statements = split(sql)
+        except duckdb.Error:
+            raise self._messages.syntax_error(sql) from None
+        for statement in statements:
+            try:
+                self._guard.check(statement)
+            except NotParsed as error:
+                raise self._messages.not_parsed(sql, statement, error) from None
+        return statements
+
+    def _run(self, sql: str, statements: list[Statement], recompute: bool) -> Iterator[Answer]:
+        for statement in statements:
+            if statement.answers:
+                yield self._answer(sql, statement, recompute)
+            else:
+                self._define(sql, statement)
+        self._settle()
+
+    def _define(self, sql: str, statement: Statement) -> None:
+        """Note a definition; it is made when the first query is computed that follows it."""
+        self._has_macros = self._has_macros or statement.kind is Kind.MACRO
+        self._definitions.append(statement.text)
+        self._pending.append((sql, statement))
+
+    def _define_now(self, sql: str, statements: list[Statement]) -> None:
+        for statement in statements:
+            self._define(sql, statement)
+        self._settle()
+
+    def _answer(self, sql: str, statement: Statement, recompute: bool) -> Answer:
+        self._notices = []
+        self._attach_sources()
+        question = None
+        if self._cache is not None and statement.kind is Kind.QUERY:
+            script = [*self._definitions, statement.text]
+            question = self._cache.question(script, self._connection, self._has_macros)
+            kept = None if question is None or recompute else self._cache.find(question)
+            if kept is not None:
+                self._notice(f"answered from the store, kept {when(kept.kept)}")
+                return Answer(statement.text, kept.table, kept.kept, self._notices)
+        table = self._compute(sql, statement, question)
+        return Answer(statement.text, table, None, self._notices)
+
+    def _compute(self, sql: str, statement: Statement, question: Question | None) -> "pa.Table":
+        if self._cache is None or question is None:
+            self._settle()
+            return self._watched(partial(self._runner.answer, sql, statement))
+        with self._cache.watch(question, self._connection) as watch:
+            self._settle()
+            table = self._watched(partial(self._runner.answer, sql, statement))
+        if watch is not None:
+            self._cache.keep(question, watch, statement.text, table, self._connection)
+        return table
+
+    def _attach_sources(self) -> None:
+        if not self._are_sources_attached:
+            for name, path in self._sources.items():
+                attach(self._connection, name, path)
+            self._are_sources_attached = True
+
+    def _settle(self) -> None:
+        """Make what has been defined but not yet been needed."""
+        self._attach_sources()
+        while self._pending:
+            sql, statement = self._pending.pop(0)
+            try:
+                self._watched(partial(self._runner.define, sql, statement))
+            except MidspreadError:
+                self._definitions.remove(statement.text)
+                self._pending.clear()
+                raise
+
+    def _watched(self, work: Callable[[], Result]) -> Result:
+        began = time.monotonic()
+
+        def report() -> None:
+            assert self._on_progress is not None
+            self._on_progress(self._runner.progress(time.monotonic() - began))
+
+        try:
+            return run_interruptibly(
+                work, self._runner.stop, report if self._on_progress is not None else None
+            )
+        finally:
+            self._runner.allow()
