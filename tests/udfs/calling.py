@@ -49,7 +49,11 @@ def table(groups: Sequence[Group], weights: Sequence[Group] | None = None) -> pa
         rows += [(g, x, w) for x, w in zip(group, own, strict=True)] or [(g, None, None)]
     g, x, w = (list(column) for column in zip(*rows, strict=True))
     return pa.table(
-        {"g": pa.array(g, pa.int64()), "x": pa.array(x, pa.float64()), "w": pa.array(w, pa.float64())}
+        {
+            "g": pa.array(g, pa.int64()),
+            "x": pa.array(x, pa.float64()),
+            "w": pa.array(w, pa.float64()),
+        }
     )
 
 
@@ -75,7 +79,9 @@ def rows(
     calls = ", ".join(call(function, **parameters) for function in chosen)
     connection.register("given_groups", table(groups, weights))
     try:
-        return connection.execute(f"SELECT {calls} FROM given_groups GROUP BY g ORDER BY g").fetchall()
+        return connection.execute(
+            f"SELECT {calls} FROM given_groups GROUP BY g ORDER BY g"
+        ).fetchall()
     finally:
         connection.unregister("given_groups")
 
