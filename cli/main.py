@@ -1,5 +1,6 @@
 """The command ``midspread``."""
 
+import importlib
 import os
 import sys
 from collections.abc import Sequence
@@ -7,14 +8,11 @@ from typing import Any, NoReturn
 
 import click
 from midspread.cli.complaints import DONE, report
-from midspread.cli.functions import functions
 from midspread.cli.help import WIDEST, write_command_list, write_options, write_usage
-from midspread.cli.query import query
-from midspread.cli.show import show
-from midspread.cli.store import store
-from midspread.cli.tour import tour
 
-COMMANDS = (tour, query, functions, show, store)
+# In the order in which one meets them. Each is the object of the same name in the module of the
+# same name, imported only when it is wanted: a kept answer is to come at once.
+COMMANDS = ("tour", "query", "functions", "show", "store")
 
 
 class Application(click.Group):
@@ -43,13 +41,38 @@ class Application(click.Group):
             code = report(error, _command_name(error, context))
         sys.exit(code)
 
+    def list_commands(self, ctx: click.Context) -> list[str]:  # noqa: ARG002
+        """The names of the commands."""
+        return list(COMMANDS)
+
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:  # noqa: ARG002
+        """Import a command."""
+        if cmd_name not in COMMANDS:
+            return None
+        module = importlib.import_module(f"midspread.cli.{cmd_name}")
+        command: click.Command = getattr(module, cmd_name)
+        return command
+
+    def resolve_command(
+        self, ctx: click.Context, args: list[str]
+    ) -> tuple[str | None, click.Command | None, list[str]]:
+        """Find the command of a command line; a misspelt one has its nearest named."""
+        try:
+            return super().resolve_command(ctx, args)
+        except click.NoSuchCommand as error:
+            raise click.NoSuchCommand(error.command_name, possibilities=COMMANDS, ctx=ctx) from None
+
     def format_help(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
         """Write the help of the whole program."""
         write_usage(ctx, formatter)
         self.format_help_text(ctx, formatter)
         write_command_list(
             formatter,
-            [(name, command.get_short_help_str(WIDEST)) for name, command in self.commands.items()],
+            [
+                (name, command.get_short_help_str(WIDEST))
+                for name in COMMANDS
+                if (command := self.get_command(ctx, name)) is not None
+            ],
         )
         write_options(self, ctx, formatter)
         formatter.write(
@@ -67,7 +90,6 @@ def _command_name(error: BaseException, context: click.Context | None) -> str:
 
 @click.group(
     cls=Application,
-    commands={str(command.name): command for command in COMMANDS},
     context_settings={"help_option_names": ["--help"], "max_content_width": WIDEST},
     invoke_without_command=True,
 )

@@ -17,6 +17,7 @@ if TYPE_CHECKING:
 
 FORMATS = ("table", "csv", "json", "ndjson", "markdown")
 ROWS_SHOWN = 40
+NOTHING_ASKED = "query: the SQL defines things and asks for none; end it with a SELECT."
 
 
 @click.command(
@@ -114,7 +115,7 @@ def _script(sql: str | None, file: Path | None) -> str:
     assert file is not None
     try:
         if str(file) == "-":
-            return click.get_binary_stream("stdin").read().decode("utf-8-sig")
+            return sys.stdin.buffer.read().decode("utf-8-sig")
         return file.read_text(encoding="utf-8-sig")
     except UnicodeDecodeError as error:
         raise MidspreadError(
@@ -140,16 +141,17 @@ def _check_target(out: Path, replace: bool, form: str | None) -> None:
 
 def _only_answer(session: "Session", script: str, recompute: bool, wish: str) -> "Answer":
     """The answer of a script that has one SELECT; another would not fit in the same output."""
+    from midspread.engine.statements import split
+
     answers = session.run(script, recompute=recompute)
-    first = next(answers, None)
-    if first is None:
-        raise UsageError("query: there is no SELECT to answer; add one at the end.")
-    if next(answers, None) is not None:
+    if sum(statement.answers for statement in split(script)) > 1:
         raise UsageError(
             f"query: {wish} takes one SELECT, and there are more; run them one at a time, or turn "
             "all but the last into temporary views."
         )
-    return first
+    for answer in answers:
+        return answer
+    raise UsageError(NOTHING_ASKED)
 
 
 def _print_tables(
@@ -170,7 +172,7 @@ def _print_tables(
         answered += 1
         started = time.monotonic()
     if not answered:
-        raise UsageError("query: there is no SELECT to answer; add one at the end.")
+        raise UsageError(NOTHING_ASKED)
 
 
 def _print_as(answer: "Answer", form: str) -> None:

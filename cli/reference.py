@@ -136,7 +136,7 @@ def _facts(function: "Function", about: Mapping[str, list[str]]) -> Iterator[tup
         fewest = function.smallest_n
         yield "smallest n", f"{fewest}; a group with fewer values gives NULL"
     if about.get("Notes"):
-        yield "note", " ".join(about["Notes"])
+        yield "note", "\n".join(about["Notes"])
 
 
 def _column_words(function: "Function") -> Iterator[tuple[str, str]]:
@@ -192,5 +192,5 @@ def _without_type(paragraphs: list[str]) -> list[str]:
 
 
 def _paragraphs(text: str) -> list[str]:
-    parts = [" ".join(part.split()) for part in re.split(r"\n\s*\n", text)]
+    parts = [" ".join(part.split()) for part in re.split(r"\n\s*\n|\n(?=- )", text)]
     return [plain(part) for part in parts if part]

@@ -57,5 +57,6 @@ def with_sample(query: str) -> str:
     )
     return (
         "CREATE TEMP VIEW visits AS "
-        f"SELECT * FROM (VALUES {rows}) AS t(route, day_part, boardings, payment, dwell_s);\n{query}"
+        f"SELECT * FROM (VALUES {rows}) "
+        f"AS t(route, day_part, boardings, payment, dwell_s);\n{query}"
     )

@@ -4,13 +4,13 @@ import shlex
 from collections.abc import Callable
 from importlib.metadata import version
 
+import click
 import pytest
 from click.testing import Result
-from midspread.cli.main import application
+from midspread.cli.main import COMMANDS, application
 from midspread.cli.tour_steps import NEXT
 
 Run = Callable[..., Result]
-COMMANDS = sorted(application.commands)
 
 
 def examples(help_text: str) -> list[str]:
@@ -21,7 +21,7 @@ def examples(help_text: str) -> list[str]:
 
 
 def test_the_commands_are_those_of_today() -> None:
-    assert COMMANDS == ["functions", "query", "show", "store", "tour"]
+    assert set(COMMANDS) == {"functions", "query", "show", "store", "tour"}
 
 
 def test_the_program_lists_its_commands(run: Run) -> None:
@@ -44,7 +44,9 @@ def test_the_version_is_that_of_the_package(run: Run) -> None:
 def test_every_option_is_explained(run: Run, command: str) -> None:
     answered = run(command, "--help")
     assert answered.exit_code == 0
-    for parameter in application.commands[command].params:
+    found = application.get_command(click.Context(application), command)
+    assert found is not None
+    for parameter in found.params:
         name = max(parameter.opts, key=len)
         if name.startswith("--"):
             assert name in answered.stdout
