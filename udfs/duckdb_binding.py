@@ -101,6 +101,11 @@ class _Binding:
             f"for example with CAST(' || column_name || ' AS DOUBLE).')"
             for kind in _OTHER_TYPES
         ]
+        number_macros.append(
+            "(x, function_name, column_name) AS error(function_name || ': ' || column_name || "
+            f"' must be {NUMBER_TYPES}, not ' || typeof(any_value(x)) || "
+            "'; take the numbers out of it first, in a query in parentheses.')"
+        )
         self._connection.execute(
             "CREATE OR REPLACE TEMP MACRO _numbers(x DOUBLE, function_name, column_name) AS "
             f"list(x) FILTER (x IS NOT NULL), {', '.join(number_macros)}"

@@ -36,8 +36,13 @@ PROFILE_MACROS: Final = (
     "CREATE OR REPLACE TEMP MACRO _text_unless_number(kind DOUBLE, x) AS NULL::VARCHAR, "
     "(kind UHUGEINT, x) AS NULL::VARCHAR, "
     "(kind BIGNUM, x) AS CAST(x AS VARCHAR), (kind, x) AS CAST(x AS VARCHAR)",
+    "CREATE OR REPLACE TEMP MACRO _run_of_column(starts) AS _longest_run("
+    "list_append(list(starts) FILTER (starts IS NOT NULL), 2.0 * count(*) + 2.0))",
 )
-"""Called with a column twice: only the first is cast to the parameter's type."""
+"""The first two are called with a column twice: only the first is cast to the parameter's type.
+
+They must stay macros: a filter over COLUMNS(…) written out would join all the columns' conditions.
+"""
 
 
 class ProfileFunctions:

@@ -12,7 +12,9 @@ _FILE_ENDINGS: Final = frozenset(
     {"parquet", "csv", "tsv", "txt", "json", "jsonl", "ndjson", "gz", "zst", "bz2", "xlsx"}
     | {"arrow", "arrows", "db", "duckdb"}
 )
-_DOTTED_NAME: Final = re.compile(r"[^\W\d]\w*(\.[^\W\d]\w*){1,2}")
+_PLAIN_NAME: Final = r"[^\W\d]\w*"
+_PART: Final = re.compile(rf'{_PLAIN_NAME}|"(?:[^"]|"")+"')
+_DOTTED_NAME: Final = re.compile(rf"(?:{_PART.pattern})(?:\.(?:{_PART.pattern})){{1,2}}")
 _FUNCTION_CALL: Final = re.compile(r"[^\W\d]\w*(\.[^\W\d]\w*)*\s*\(.*\)", re.DOTALL)
 
 
@@ -43,7 +45,8 @@ def relation(function: str, tbl: object) -> str:
         return text
     ending = text.rsplit(".", 1)[-1].lower()
     if _DOTTED_NAME.fullmatch(text) and ending not in _FILE_ENDINGS:
-        return ".".join(quoted_name(part) for part in text.split("."))
+        parts = _PART.findall(text)
+        return ".".join(part if part.startswith('"') else quoted_name(part) for part in parts)
     return quoted_name(text)
 
 
@@ -67,11 +70,13 @@ def names(function: str, argument: str, given: object) -> list[str]:
             f"{function}: {argument} must be a column name or a list of them, got {given!r}; "
             f"write for example {argument} := ['route', 'day_part']."
         )
-    repeated = {n for n in listed if listed.count(n) > 1}
-    if repeated:
-        raise ParameterError(
-            f"{function}: {argument} names {sorted(repeated)[0]} twice; name each column once."
-        )
+    seen: set[str] = set()
+    for name in listed:
+        if name.lower() in seen:
+            raise ParameterError(
+                f"{function}: {argument} names {name} twice; name each column once."
+            )
+        seen.add(name.lower())
     return listed
 
 
@@ -86,6 +91,16 @@ def keys(function: str, by: object, result_columns: Iterable[str]) -> list[str]:
                 f"first, for example tbl := '(SELECT *, {name} AS {name}_key FROM …)'."
             )
     return listed
+
+
+def flag(function: str, argument: str, given: object) -> bool:
+    """A yes or no."""
+    if not isinstance(given, bool):
+        raise ParameterError(
+            f"{function}: {argument} must be true or false, got {given!r}; "
+            f"write for example {argument} := true."
+        )
+    return given
 
 
 def number_list(

@@ -20,6 +20,7 @@ from midspread.udfs.shape.skewness import bowley_skew, moors_kurtosis, octile_sk
 from midspread.udfs.tables.relations import (
     BY,
     column,
+    flag,
     joined,
     keys,
     quoted_name,
@@ -173,14 +174,15 @@ def robust_summary(*, tbl: object, value: object, by: object, deep: object) -> s
     Tukey, J. W. (1977). Exploratory Data Analysis. Addison-Wesley.
     """
     function = "robust_summary"
-    shown = _SHOWN + (DEEP_FIGURES if deep else ())
+    deeper = flag(function, "deep", deep)
+    shown = _SHOWN + (DEEP_FIGURES if deeper else ())
     names = keys(function, by, shown)
     grouped = [quoted_name(name) for name in names]
     measured = column(function, "value", value)
     collected = f"_numbers({measured}, {quoted_text(function)}, {quoted_text(str(value))})"
-    kind = "_deep_summary" if deep else "_summary"
+    kind = "_deep_summary" if deeper else "_summary"
     figures = joined([f'_m_s."{name}"' for name in _FIGURES])
-    more = "".join(f', _m_s."{name}"' for name in DEEP_FIGURES) if deep else ""
+    more = "".join(f', _m_s."{name}"' for name in DEEP_FIGURES) if deeper else ""
     order = f"ORDER BY {', '.join(grouped)}" if grouped else ""
     group = f"GROUP BY {', '.join(grouped)}" if grouped else ""
     return f"""

@@ -3,7 +3,16 @@
 from typing import Final
 
 from midspread.udfs.declaring import Parameter, table_function
-from midspread.udfs.tables.relations import BY, column, joined, keys, names, quoted_name, relation
+from midspread.udfs.tables.relations import (
+    BY,
+    column,
+    joined,
+    keys,
+    names,
+    quoted_name,
+    quoted_text,
+    relation,
+)
 
 _FIELDS: Final = (
     "column_name",
@@ -20,6 +29,13 @@ _FIELDS: Final = (
     "longest_run",
     "suspected_sentinels",
     "n_duplicated_rows",
+)
+
+# Stands in where no column is left, as the engine's own message would help nobody.
+_NOTHING: Final = "_midspread_nothing"
+_NO_COLUMNS: Final = (
+    "value_profile: no column is left besides the keys and the position; name the columns to "
+    "profile, for example columns := ['dwell_s']."
 )
 
 
@@ -101,30 +117,41 @@ def value_profile(*, tbl: object, columns: object, by: object, position: object)
     ordering = None if position is None else column(function, "position", position)
     aliases = [f"_midspread_key_{i}" for i in range(1, len(grouped) + 1)]
     named = joined([f"{key} AS {alias}" for key, alias in zip(grouped, aliases, strict=True)])
-    group = f"GROUP BY {', '.join(grouped)}" if grouped else ""
+    group = f"GROUP BY {', '.join(aliases)}" if grouped else ""
     kept = "MATERIALIZED" if str(tbl).lstrip().startswith("(") else "NOT MATERIALIZED"
-    everything = _all_but([*grouped, *([ordering] if ordering else [])])
+    carried = list(aliases)
+    order = ""
+    if ordering is not None:
+        # Rows of equal position are told apart by their content: the order must not be chance.
+        order = f"{ordering} AS _midspread_position, hash(_midspread_source) AS _midspread_row, "
+        carried += ["_midspread_position", "_midspread_row"]
+    if chosen:
+        profiled = ", ".join(chosen)
+    else:
+        left_out = [*grouped, *([ordering] if ordering and ordering not in grouped else [])]
+        profiled = f"{_all_but([*carried, *left_out])}, NULL AS {_NOTHING}"
+    each = f"COLUMNS({_all_but(carried)})"
+    figures = f"COLUMNS({_all_but(aliases)})"
     return f"""
 WITH _midspread_source AS {kept} (SELECT * FROM {relation(function, tbl)}),
+_midspread_chosen AS (
+    SELECT {joined(carried)}{profiled} FROM (SELECT {named}{order}* FROM _midspread_source)
+),
 _midspread_names AS (
     SELECT column_name AS _midspread_column, column_type, row_number() OVER () AS _midspread_at
-    FROM (DESCRIBE SELECT {_each("{0}", chosen, everything)} FROM _midspread_source)
+    FROM (DESCRIBE SELECT {each} FROM _midspread_chosen)
 ),
 _midspread_wide AS (
-    SELECT {named}{_each("_column_profile({0}, {0})", chosen, everything)}
-    FROM _midspread_source {group}
+    SELECT {joined(aliases)}_column_profile({each}, {each}) FROM _midspread_chosen {group}
 ),
 _midspread_profiles AS (
-    UNPIVOT _midspread_wide ON {_all_but(aliases)}
-    INTO NAME _midspread_column VALUE _midspread_p
+    UNPIVOT _midspread_wide ON {figures} INTO NAME _midspread_column VALUE _midspread_p
 ),
 _midspread_wide_texts AS (
-    SELECT {named}{_each("_text_unless_number({0}, {0})", chosen, everything)}
-    FROM _midspread_source
+    SELECT {joined(aliases)}_text_unless_number({each}, {each}) FROM _midspread_chosen
 ),
 _midspread_texts AS (
-    UNPIVOT _midspread_wide_texts ON {_all_but(aliases)}
-    INTO NAME _midspread_column VALUE _midspread_text
+    UNPIVOT _midspread_wide_texts ON {figures} INTO NAME _midspread_column VALUE _midspread_text
 ),
 _midspread_text_counts AS (
     SELECT {joined(aliases)}_midspread_column, _midspread_text, count(*) AS _midspread_count
@@ -138,7 +165,7 @@ _midspread_text_figures AS (
 _midspread_rows AS (
     SELECT {named}count(*) AS _midspread_distinct_rows
     FROM (SELECT DISTINCT * FROM _midspread_source) {group}
-){_runs(named, grouped, aliases, chosen, everything, ordering)}
+){_runs(aliases, each, figures) if ordering else ""}
 SELECT {joined([f"_midspread_profiles.{a} AS {k}" for a, k in zip(aliases, grouped, strict=True)])}
     _midspread_column AS column_name, column_type, _midspread_p.n AS n,
     _midspread_p.n_rows - _midspread_p.n AS n_null,
@@ -157,55 +184,38 @@ JOIN _midspread_names USING (_midspread_column)
 LEFT JOIN _midspread_text_figures ON {_same("_midspread_text_figures", aliases, True)}
 LEFT JOIN _midspread_rows ON {_same("_midspread_rows", aliases, False)}
 {f"LEFT JOIN _midspread_runs ON {_same('_midspread_runs', aliases, True)}" if ordering else ""}
+WHERE _midspread_column <> '{_NOTHING}'
+    OR CASE WHEN (SELECT count(*) FROM _midspread_names) = 1
+        THEN error(concat({quoted_text(_NO_COLUMNS)}, _midspread_column[:0])) ELSE false END
 ORDER BY {joined([f"_midspread_profiles.{alias}" for alias in aliases])}_midspread_at"""
 
 
-def _runs(
-    named: str,
-    grouped: list[str],
-    aliases: list[str],
-    chosen: list[str],
-    everything: str,
-    ordering: str | None,
-) -> str:
-    """The relations that find the longest run of each column; none without an order.
+def _runs(aliases: list[str], each: str, figures: str) -> str:
+    """The relations that find the longest run of each column.
 
-    Each row that starts a run is numbered 2r, or 2r + 1 where the run is one of NULLs.
+    A row that starts a run is numbered 2r, or 2r + 1 where the run is one of NULLs.
     """
-    if ordering is None:
-        return ""
-    start = (
-        "CAST(CASE WHEN {0} IS DISTINCT FROM lag({0}) OVER _midspread_order "
-        "THEN 2 * row_number() OVER _midspread_order + CAST({0} IS NULL AS BIGINT) END AS DOUBLE)"
-    )
-    partition = f"PARTITION BY {', '.join(grouped)}" if grouped else ""
-    group = f"GROUP BY {', '.join(aliases)}" if aliases else ""
-    longest = "_longest_run(list_append(list({0}) FILTER ({0} IS NOT NULL), 2.0 * count(*) + 2.0))"
+    partition = f"PARTITION BY {', '.join(aliases)}" if aliases else ""
     return f""",
 _midspread_starts AS (
-    SELECT {named}{_each(start, chosen, everything)} FROM _midspread_source
-    WHERE {ordering} IS NOT NULL
-    WINDOW _midspread_order AS ({partition} ORDER BY {ordering}, hash(_midspread_source))
+    SELECT {joined(aliases)}CAST(
+        CASE WHEN {each} IS DISTINCT FROM lag({each}) OVER _midspread_order THEN
+            2 * row_number() OVER _midspread_order + CAST({each} IS NULL AS BIGINT)
+        END AS DOUBLE)
+    FROM _midspread_chosen WHERE _midspread_position IS NOT NULL
+    WINDOW _midspread_order AS ({partition} ORDER BY _midspread_position, _midspread_row)
 ),
 _midspread_wide_runs AS (
-    SELECT {joined(aliases)}{longest.format(_all_but(aliases))}
-    FROM _midspread_starts {group}
+    SELECT {joined(aliases)}_run_of_column({figures})
+    FROM _midspread_starts {f"GROUP BY {', '.join(aliases)}" if aliases else ""}
 ),
 _midspread_runs AS (
-    UNPIVOT _midspread_wide_runs ON {_all_but(aliases)}
-    INTO NAME _midspread_column VALUE _midspread_run
+    UNPIVOT _midspread_wide_runs ON {figures} INTO NAME _midspread_column VALUE _midspread_run
 )"""
 
 
-def _each(template: str, chosen: list[str], everything: str) -> str:
-    """The template once for each chosen column, under the column's own name."""
-    if not chosen:
-        return template.format(everything)
-    return ", ".join(f"{template.format(name)} AS {name}" for name in chosen)
-
-
 def _all_but(left_out: list[str]) -> str:
-    return f"COLUMNS(* EXCLUDE ({', '.join(left_out)}))" if left_out else "COLUMNS(*)"
+    return f"* EXCLUDE ({', '.join(left_out)})" if left_out else "*"
 
 
 def _same(other: str, aliases: list[str], column_too: bool) -> str:
