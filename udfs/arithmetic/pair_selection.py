@@ -105,7 +105,7 @@ def _start(kind: int, a: Values, b: Values) -> tuple[Places, Values, int, int]:
         places[0, i] = first
         places[1, i] = b.size
         left += b.size - first
-    return places, np.empty(max(2 * max(a.size, b.size), _FEW)), left, 0
+    return places, np.empty(max(a.size, b.size) + 2 * _FEW), left, 0
 
 
 @compiled
