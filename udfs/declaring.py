@@ -95,10 +95,11 @@ class Parameter:
             wrong = float(values[~ok][0])
             raise ParameterError(
                 f"{function}: {self.name} must be {self.allowed}, got {wrong:g}; "
-                f"write for example {self.name} := {self._example()}."
+                f"write for example {self.name} := {self.example()}."
             )
 
-    def _example(self) -> str:
+    def example(self) -> str:
+        """A value that may be given, as text."""
         if isinstance(self.default, (int, float)) and not isinstance(self.default, bool):
             return f"{self.default:g}"
         middle = (self.low + self.high) / 2

@@ -329,8 +329,8 @@ def _struct_type(fields: Iterable[str], texts: Container[str] = ()) -> str:
 def aggregate_macro(function: Function) -> str:
     """The statement that creates an aggregate's macro.
 
-    A typed parameter takes every numeric type and nothing else; one more overload for each other
-    type answers with a sentence of ours.
+    A typed parameter takes every numeric type and nothing else; more overloads answer other types
+    with a sentence of ours: those of simple types at once, while the engine plans.
     """
     parameters = [_macro_parameter(parameter) for parameter in function.parameters]
     if function.columns == ("x", "w"):
@@ -341,15 +341,24 @@ def aggregate_macro(function: Function) -> str:
     call = f"_{function.name}({', '.join([*collected, *names])})"
     numbers = [f"{column} DOUBLE" for column in function.columns]
     overloads = [f"({', '.join([*numbers, *parameters])}) AS {call}"]
-    for wrong in range(len(function.columns)):
+    for wrong, column in enumerate(function.columns):
+        before, after = numbers[:wrong], [*numbers[wrong + 1 :], *parameters]
         for other in _OTHER_TYPES:
-            types = ["DOUBLE"] * len(function.columns)
-            types[wrong] = other
-            columns = [f"{c} {t}" for c, t in zip(function.columns, types, strict=True)]
-            overloads.append(
-                f"({', '.join([*columns, *parameters])}) AS "
-                f"error({_quoted(wrong_type(function.name, function.columns[wrong], other))})"
-            )
+            sentence = _quoted(wrong_type(function.name, column, other))
+            listed = ", ".join([*before, f"{column} {other}", *after])
+            overloads.append(f"({listed}) AS error({sentence})")
+        start = _quoted(f"{function.name}: {column} must be {NUMBER_TYPES}, not ")
+        overloads.append(
+            f"({', '.join([*before, column, *after])}) AS error({start} || "
+            f"typeof(any_value({column})) || '; take the numbers out of it first.')"
+        )
+    for wrong, parameter in enumerate(function.parameters):
+        # Without its default, so that a call which leaves it out fits the first overload only.
+        name = _identifier(parameter.name)
+        listed = ", ".join([*numbers, *parameters[:wrong], name, *parameters[wrong + 1 :]])
+        start = _quoted(f"{function.name}: {parameter.name} must be {parameter.allowed}, got type ")
+        end = _quoted(f"; write for example {parameter.name} := {parameter.example()}.")
+        overloads.append(f"({listed}) AS error({start} || typeof(any_value({name})) || {end})")
     return f"CREATE OR REPLACE TEMP MACRO {function.name}{', '.join(overloads)}"
 
 
