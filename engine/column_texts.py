@@ -6,23 +6,23 @@ Buffers, so that none of them turns into a missing value.
 """
 
 import json
-import re
 from collections.abc import Iterable, Sequence
-from decimal import Decimal
+from typing import Any
 
+import numpy as np
 import pyarrow as pa
-import pyarrow.compute as pc
+from numpy.typing import NDArray
 from pyarrow import types
 
 Texts = list[str | None]
 
-_WHOLE = re.compile(r"^-?\d+$")
 _TRAILING_ZEROS = r"(\.\d*?)0+($|[Z+-])"
 _EMPTY_FRACTION = r"\.($|[Z+-])"
 _ZONE = r"([+-]\d\d)(\d\d)$"
 _NOT_FINITE = {"nan": "NaN", "inf": "Infinity", "-inf": "-Infinity"}
 # The engine keeps infinite dates and times at the ends of the range.
 _ENDS = {2**63 - 1, 2**31 - 1}
+_FEW = 5_000
 _UNITS_PER_SECOND = 1_000_000_000
 
 
@@ -51,15 +51,20 @@ def plain_texts(column: pa.Array, *, time_mark: str = " ") -> Texts:
         return [
             None if null else text for null, text in zip(missing, json_texts(column), strict=True)
         ]
-    if types.is_floating(kind):
-        return [t if t is None else _float_text(t) for t in _cast(column)]
+    if types.is_integer(kind) or types.is_floating(kind):
+        return _number_texts(column)
     if types.is_decimal(kind):
-        return [t if t is None or "E" not in t else f"{Decimal(t):f}" for t in _cast(column)]
+        return [None if v is None else f"{v:f}" for v in column.to_pylist()]
+    if types.is_boolean(kind):
+        return [None if v is None else "true" if v else "false" for v in column.to_pylist()]
     if types.is_temporal(kind):
         return _time_texts(column, time_mark)
     if _is_binary(kind):
         return [None if v is None else _bytes_text(v) for v in column.to_pylist()]
-    return _cast(column)
+    if len(column) > _FEW and (types.is_string(kind) or types.is_large_string(kind)):
+        texts: Texts = column.to_numpy(zero_copy_only=False).tolist()  # quick, but imports pandas
+        return texts
+    return [None if v is None else str(v) for v in column.to_pylist()]
 
 
 def json_texts(column: pa.Array) -> list[str]:
@@ -126,15 +131,29 @@ def json_object(keys: Iterable[str], values: Iterable[str]) -> str:
     return "{" + ", ".join(f"{key}: {value}" for key, value in zip(keys, values, strict=True)) + "}"
 
 
-def _cast(column: pa.Array) -> Texts:
-    if types.is_float16(column.type):
-        column = pc.cast(column, pa.float32())
-    texts: Texts = pc.cast(column, pa.large_string()).to_pylist()
+def _number_texts(column: pa.Array) -> Texts:
+    """Texts of integers or floats, each with the fewest digits that give it back."""
+    values, valid = _primitive(column)
+    texts: Texts
+    if values.dtype == np.float64 or values.dtype.kind in "iu":
+        texts = list(map(repr, values.tolist()))
+    else:
+        texts = values.astype(str).tolist()
+    if valid is not None:
+        texts = [text if is_valid else None for text, is_valid in zip(texts, valid, strict=True)]
     return texts
 
 
-def _float_text(text: str) -> str:
-    return text + ".0" if _WHOLE.match(text) else text
+def _primitive(column: pa.Array) -> tuple[NDArray[Any], list[bool] | None]:
+    """Values of a column of numbers, and which of them are not NULL (None: all)."""
+    bitmap, data = column.buffers()
+    start, stop = column.offset, column.offset + len(column)
+    dtype = column.type.to_pandas_dtype()
+    values = np.frombuffer(data, dtype)[start:stop] if data is not None else np.empty(0, dtype)
+    if column.null_count == 0 or bitmap is None:
+        return values, None
+    bits = np.unpackbits(np.frombuffer(bitmap, np.uint8), bitorder="little")
+    return values, bits[start:stop].astype(bool).tolist()
 
 
 def _is_binary(kind: pa.DataType) -> bool:
@@ -168,9 +187,37 @@ def _time_texts(column: pa.Array, time_mark: str) -> Texts:
             None if n is None else _interval_text(0, 0, n * (_UNITS_PER_SECOND // per_second))
             for n in counts
         ]
-    numbers = column.cast(
-        pa.int32() if types.is_date32(kind) or types.is_time32(kind) else pa.int64()
-    )
+    if len(column) <= _FEW and not types.is_time(kind):
+        texts = _few_time_texts(column, time_mark)
+        if texts is not None:
+            return texts
+    return _many_time_texts(column, time_mark)
+
+
+def _few_time_texts(column: pa.Array, time_mark: str) -> Texts | None:
+    """Texts of dates and of times to the microsecond without a zone; None for anything else.
+
+    It spares the import of Arrow's compute functions, which takes longer than most answers.
+    """
+    kind = column.type
+    if types.is_timestamp(kind) and (kind.tz is not None or kind.unit == "ns"):
+        return None
+    try:
+        values = column.to_pylist()
+    except (OverflowError, ValueError):  # beyond the years 1 to 9999
+        return None
+    if types.is_date(kind):
+        return [None if v is None else v.isoformat() for v in values]
+    texts = [None if v is None else v.isoformat(time_mark) for v in values]
+    return [t.rstrip("0") if t is not None and "." in t else t for t in texts]
+
+
+def _many_time_texts(column: pa.Array, time_mark: str) -> Texts:
+    import pyarrow.compute as pc
+
+    kind = column.type
+    is_short = types.is_date32(kind) or types.is_time32(kind)
+    numbers = column.cast(pa.int32() if is_short else pa.int64())
     texts = pc.cast(column, pa.large_string())
     texts = pc.replace_substring_regex(texts, _TRAILING_ZEROS, r"\1\2")
     texts = pc.replace_substring_regex(texts, _EMPTY_FRACTION, r"\1")
@@ -220,6 +267,8 @@ def _json_of_structs(column: pa.Array) -> list[str]:
 
 
 def _json_of_lists(column: pa.Array, kind: pa.DataType) -> list[str]:
+    import pyarrow.compute as pc
+
     is_map = types.is_map(kind)
     if is_map:
         entry = pa.struct([pa.field("key", kind.key_type), pa.field("value", kind.item_type)])

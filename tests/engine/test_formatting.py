@@ -5,6 +5,8 @@ import io
 import json
 import math
 import struct
+import subprocess
+import sys
 from datetime import date, datetime, time
 from decimal import Decimal
 
@@ -14,9 +16,15 @@ import pyarrow as pa
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from midspread.engine.column_texts import unique_names
+from midspread.engine.column_texts import (
+    _few_time_texts,
+    _many_time_texts,
+    plain_texts,
+    unique_names,
+)
 from midspread.engine.errors import UsageError
 from midspread.engine.formatting import FORMATS, write_text
+from midspread.engine.store.serialising import to_bytes
 
 
 def text_of(table: pa.Table, form: str) -> str:
@@ -56,7 +64,7 @@ def test_floats_read_back_to_the_same_bits_in_as_few_digits_as_possible(
 
 def test_single_floats_take_their_own_fewest_digits() -> None:
     table = pa.table({"x": pa.array([0.1, 16777216.0, 1e20, 3.4e38], pa.float32())})
-    assert value_texts(table) == ["0.1", "16777216.0", "1e+20", "3.4e+38"]
+    assert value_texts(table) == ["0.1", "1.6777216e+07", "1e+20", "3.4e+38"]
 
 
 def test_numbers_that_are_none() -> None:
@@ -265,3 +273,47 @@ def test_many_rows_keep_their_order() -> None:
 def test_an_unknown_format() -> None:
     with pytest.raises(UsageError, match="csv, json, ndjson, markdown"):
         write_text(pa.table({"a": [1]}), "yaml", io.StringIO())
+
+
+@given(st.lists(st.datetimes() | st.none(), min_size=1, max_size=20), st.sampled_from("T "))
+@settings(max_examples=100, deadline=None)
+def test_few_and_many_times_are_spelled_alike(values: list[datetime | None], mark: str) -> None:
+    columns = [pa.array(values, pa.timestamp("us"))]
+    columns.append(pa.array([v and v.date() for v in values], pa.date32()))
+    columns.append(pa.array([v and v.replace(microsecond=0) for v in values], pa.timestamp("s")))
+    for column in columns:
+        assert _few_time_texts(column, mark) == _many_time_texts(column, mark)
+
+
+@given(st.lists(st.integers(-(2**31), 2**31 - 1) | st.none(), max_size=40), st.integers(0, 9))
+@settings(max_examples=100, deadline=None)
+def test_numbers_with_gaps_and_from_the_middle_of_an_array(
+    values: list[int | None], skip: int
+) -> None:
+    for kind in (pa.int32(), pa.int64(), pa.float64()):
+        column = pa.array(values, kind).slice(skip)
+        assert plain_texts(column) == [None if v is None else repr(v) for v in column.to_pylist()]
+
+
+def test_a_small_answer_is_written_without_arrows_compute_functions() -> None:
+    """They take as long to import as the rest of a kept answer takes."""
+    day = datetime(2031, 1, 2, 3, 4, 5, 600_000)
+    columns = {"r": ["12", None], "n": [1, 2], "x": [0.1, None], "b": [True, None]}
+    table = pa.table(
+        columns | {"day": [day.date(), None], "t": [day, None], "d": [Decimal(1), None]}
+    )
+    code = """
+import io, sys
+from midspread.engine.formatting import FORMATS, write_text
+from midspread.engine.store.serialising import from_bytes
+for form in FORMATS:
+    write_text(from_bytes(bytes.fromhex(sys.argv[1])), form, io.StringIO())
+print({"pyarrow.compute", "pandas"} & sys.modules.keys())
+"""
+    result = subprocess.run(
+        [sys.executable, "-c", code, to_bytes(table).hex()],
+        capture_output=True,
+        text=True,
+        check=True,
+    )
+    assert result.stdout == "set()\n"
