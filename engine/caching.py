@@ -36,6 +36,7 @@ from midspread.udfs import Function
 if TYPE_CHECKING:
     import pyarrow as pa
 
+_ANSWERS: Final = 1  # raised when the engine comes to answer some query otherwise than before
 _UNUSABLE: Final = (NotAStore, StoreDamaged, StoreTooNew)
 
 
@@ -75,8 +76,6 @@ class AnswerCache:
         Whether the user named it.
     functions : mapping
         Our functions by name, for their versions.
-    version : str
-        Of Midspread.
     on_notice : callable
         Takes a line for the user.
     """
@@ -86,13 +85,11 @@ class AnswerCache:
         path: Path,
         is_named: bool,
         functions: Mapping[str, Function],
-        version: str,
         on_notice: Callable[[str], None],
     ) -> None:
         self._path = path
         self._is_named = is_named
         self._functions = functions
-        self._version = version
         self._on_notice = on_notice
         self._answers: Answers | None = None
         self._is_off = False
@@ -200,7 +197,7 @@ class AnswerCache:
             "functions": {
                 name: function.version for name, function in self._functions.items() if name in text
             },
-            "midspread": self._version,
+            "answers": _ANSWERS,
             "duckdb": duckdb.__version__,
         }
         return hashlib.blake2b(json.dumps(rests_on).encode(), digest_size=24).hexdigest()

@@ -2,18 +2,19 @@
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING, Final, TypeVar
 
 import duckdb
 from midspread.engine.answer import Progress
-from midspread.engine.messages import Messages
 from midspread.engine.parsing import NotParsed
-from midspread.engine.rewriting import Rewritten, rewrite
 from midspread.engine.statements import Kind, Statement
 from midspread.udfs import Function
 
 if TYPE_CHECKING:
     import pyarrow as pa
+    from midspread.engine.messages import Messages
+    from midspread.engine.rewriting import Rewritten
     from midspread.udfs import Control
 
 Result = TypeVar("Result")
@@ -56,20 +57,23 @@ class Runner:
         Our functions are registered on it when the first statement runs.
     functions : mapping
         Our functions by name.
-    messages : Messages
-        Puts errors in our words.
     """
 
     def __init__(
         self,
         connection: duckdb.DuckDBPyConnection,
         functions: Mapping[str, Function],
-        messages: Messages,
     ) -> None:
         self._connection = connection
         self._functions = functions
-        self._messages = messages
         self._control: Control | None = None
+
+    @cached_property
+    def messages(self) -> "Messages":
+        """Puts errors in our words; loaded when there is one."""
+        from midspread.engine.messages import Messages
+
+        return Messages(self._connection, self._functions)
 
     def answer(self, sql: str, statement: Statement) -> "pa.Table":
         """The rows that a query gives."""
@@ -125,7 +129,7 @@ class Runner:
                 prepared = self._prepare(statement, faster=False)
                 return act(prepared.text)
         except duckdb.Error as error:
-            raise self._messages.explained(error, sql, statement, prepared) from None
+            raise self.messages.explained(error, sql, statement, prepared) from None
 
     def _rows(self, text: str) -> "pa.Table":
         # A relation hands over Arrow without another copy of the rows, execute() does not.
@@ -167,7 +171,10 @@ class Runner:
             statement.text[:start] + text + statement.text[stop:], rewritten.is_faster, origin
         )
 
-    def _rewritten(self, text: str, *, faster: bool, **how: bool) -> Rewritten:
+    def _rewritten(self, text: str, *, faster: bool, **how: bool) -> "Rewritten":
+        # Kept answers are found without the rules.
+        from midspread.engine.rewriting import rewrite
+
         try:
             return rewrite(self._connection, text, self._functions, faster=faster, **how)
         except NotParsed:

@@ -146,6 +146,11 @@ SENTENCES: Final = _table(
         r"^Values were not provided for the following parameters: (.*)$",
         "query: the SQL holds a placeholder (? or ${0}) for a value; write the value itself.",
     ),
+    (
+        r'^(View|Macro) (?:Function )?with name "([^"]+)" already exists',
+        "query: there is already a {0} called {1}; "
+        "write CREATE OR REPLACE TEMP {0} to define it anew.",
+    ),
     (r"^Macro \"?(\w+)\"?\(\) (?:does not|has)", wrong_arguments),
     (
         r"^More than one row returned by a subquery",

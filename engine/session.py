@@ -4,7 +4,6 @@ import os
 import time
 from collections.abc import Callable, Iterator, Mapping
 from functools import partial
-from importlib.metadata import version
 from pathlib import Path
 from types import TracebackType
 from typing import TYPE_CHECKING, Self, TypeVar
@@ -15,8 +14,8 @@ from midspread.engine.caching import AnswerCache, Question, when
 from midspread.engine.connecting import attach, checked_sources, connect
 from midspread.engine.errors import MidspreadError
 from midspread.engine.guard import Guard
+from midspread.engine.inputs.canonical import canonical_sql
 from midspread.engine.interrupts import run_interruptibly
-from midspread.engine.messages import Messages
 from midspread.engine.parsing import NotParsed
 from midspread.engine.running import Runner
 from midspread.engine.statements import Kind, Statement, split
@@ -81,8 +80,7 @@ class Session:
         self._functions = functions()
         self._sources = checked_sources(sources or {})
         self._connection = connect(memory=memory, threads=threads, owner=self)
-        self._messages = Messages(self._connection, self._functions)
-        self._runner = Runner(self._connection, self._functions, self._messages)
+        self._runner = Runner(self._connection, self._functions)
         self._guard = Guard(
             self._connection,
             self._functions.keys(),
@@ -168,7 +166,6 @@ class Session:
             find_store(folder, store),
             is_named=store is not None or bool(os.environ.get(STORE_VARIABLE)),
             functions=self._functions,
-            version=version("midspread"),
             on_notice=self._notice,
         )
 
@@ -180,14 +177,14 @@ class Session:
     def _read(self, sql: str) -> list[Statement]:
         """The statements of a script, once all of them are known to be harmless."""
         try:
-            statements = split(sql)
+            statements = split(self._connection, sql)
         except duckdb.Error:
-            raise self._messages.syntax_error(sql) from None
+            raise self._runner.messages.syntax_error(sql) from None
         for statement in statements:
             try:
                 self._guard.check(statement)
             except NotParsed as error:
-                raise self._messages.not_parsed(sql, statement, error) from None
+                raise self._runner.messages.not_parsed(sql, statement, error) from None
         return statements
 
     def _run(self, sql: str, statements: list[Statement], recompute: bool) -> Iterator[Answer]:
@@ -196,18 +193,24 @@ class Session:
                 yield self._answer(sql, statement, recompute)
             else:
                 self._define(sql, statement)
-        self._settle()
+        if statements and not statements[-1].answers:
+            self._settle()
 
     def _define(self, sql: str, statement: Statement) -> None:
         """Note a definition; it is made when the first query is computed that follows it."""
         self._has_macros = self._has_macros or statement.kind is Kind.MACRO
-        self._definitions.append(statement.text)
+        text = canonical_sql(statement.text)
+        if text in self._definitions:
+            self._definitions.remove(text)  # said again, as a repeated script does
+        self._definitions.append(text)
         self._pending.append((sql, statement))
 
     def _define_now(self, sql: str, statements: list[Statement]) -> None:
+        """Make definitions that no query follows, so that what is wrong with them is said."""
         for statement in statements:
             self._define(sql, statement)
-        self._settle()
+        if statements:
+            self._settle()
 
     def _answer(self, sql: str, statement: Statement, recompute: bool) -> Answer:
         self._notices = []
@@ -248,7 +251,7 @@ class Session:
             try:
                 self._watched(partial(self._runner.define, sql, statement))
             except MidspreadError:
-                self._definitions.remove(statement.text)
+                self._definitions.remove(canonical_sql(statement.text))
                 self._pending.clear()
                 raise
 

@@ -72,12 +72,13 @@ class Statement:
         return found[0].text.upper() if found else ""
 
 
-def split(script: str) -> list[Statement]:
-    """The statements of a script, in order.
+def split(connection: duckdb.DuckDBPyConnection, script: str) -> list[Statement]:
+    """The statements of a script, in order; the connection only parses them.
 
     Examples
     --------
-    >>> [s.kind.value for s in split("CREATE TEMP VIEW v AS SELECT 1; FROM v")]
+    >>> script = "CREATE TEMP VIEW v AS SELECT 1; FROM v"
+    >>> [statement.kind.value for statement in split(duckdb.connect(), script)]
     ['view', 'query']
 
     Raises
@@ -89,7 +90,7 @@ def split(script: str) -> list[Statement]:
     """
     if "\x00" in script:
         raise MidspreadError("query: the SQL holds a NUL character, which must be taken out.")
-    types = _types(script)
+    types = _types(connection, script)
     pieces = _pieces(script)
     if not pieces:
         raise MidspreadError("query: the SQL holds no statement; write one, for example SELECT 1.")
@@ -101,9 +102,9 @@ def split(script: str) -> list[Statement]:
     ]
 
 
-def _types(script: str) -> list[str]:
+def _types(connection: duckdb.DuckDBPyConnection, script: str) -> list[str]:
     try:
-        return [statement.type.name for statement in duckdb.extract_statements(script)]
+        return [statement.type.name for statement in connection.extract_statements(script)]
     except ValueError:
         # The Python package knows no name for some of the engine's statement types.
         raise MidspreadError(
