@@ -141,17 +141,16 @@ def _check_target(out: Path, replace: bool, form: str | None) -> None:
 
 def _only_answer(session: "Session", script: str, recompute: bool, wish: str) -> "Answer":
     """The answer of a script that has one SELECT; another would not fit in the same output."""
-    from midspread.engine.statements import split
-
     answers = session.run(script, recompute=recompute)
-    if sum(statement.answers for statement in split(script)) > 1:
+    first = next(answers, None)
+    if first is None:
+        raise UsageError(NOTHING_ASKED)
+    if next(answers, None) is not None:
         raise UsageError(
             f"query: {wish} takes one SELECT, and there are more; run them one at a time, or turn "
             "all but the last into temporary views."
         )
-    for answer in answers:
-        return answer
-    raise UsageError(NOTHING_ASKED)
+    return first
 
 
 def _print_tables(

@@ -19,8 +19,10 @@ if TYPE_CHECKING:
     from rich.console import Console
 
 FIRST_ROWS = 10
-# Rows of these are counted by looking at the file's own records, at once.
-_COUNTED_ENDINGS = frozenset({".parquet", ".duckdb", ".db", ".ddb"})
+# Counting the rows of these would mean reading all of them.
+_UNCOUNTED_ENDINGS = frozenset(
+    {".csv", ".tsv", ".txt", ".json", ".ndjson", ".jsonl", ".xlsx", ".gz", ".zst", ".bz2"}
+)
 _POSITION = re.compile(r" \(line \d+, column \d+\)")
 _DUCKDB_MARK = b"DUCK"
 _DUCKDB_MARK_AT = 8
@@ -119,8 +121,7 @@ def _without_position() -> Iterator[None]:
 
 
 def _row_count(session: "Session", name: str, source: str) -> str:
-    ending = Path(name).suffix.lower()
-    if ending and ending not in _COUNTED_ENDINGS and Path(name).parent.is_dir():
+    if Path(name).suffix.lower() in _UNCOUNTED_ENDINGS:
         return ""
     rows = session.query(f"SELECT count(*) FROM {source}").rows()
     return count_text(int(str(rows[0][0])), "row")

@@ -23,15 +23,15 @@ class Step:
         The query, as one would type it.
     lesson : str
         What the answer says, true of the demo at any size.
-    is_repeat : bool
-        Whether the same was asked before, so that the kept answer is shown.
+    comes_again : bool
+        Whether the same is asked again later, to show the kept answer.
     """
 
     title: str
     words: str
     sql: str
     lesson: str
-    is_repeat: bool = False
+    comes_again: bool = False
 
 
 MEAN_AND_ROBUST: Final = """\
@@ -54,18 +54,23 @@ from 'dwell/*.parquet' group by route order by trimmed_mean desc"""
 STEPS: Final = (
     Step(
         "What the values are, before any estimate",
-        "Dwell is how long a bus stands at a stop, in seconds. Look for missing values, zeros and "
-        "values repeated where none should repeat.",
-        "SELECT * FROM value_profile('dwell/*.parquet', columns := ['dwell_s'], by := 'payment')",
-        "Zeros, and one and the same value of nearly two hours over and over: clocks that stuck.",
+        "Dwell is how long a bus stands at a stop, in seconds and tenths. Look for missing values, "
+        "for zeros, and for one value repeated where none should repeat.",
+        """\
+SELECT stop, n, n_null, n_zero, n_distinct, most_frequent, most_frequent_share
+FROM value_profile('dwell/*.parquet', columns := ['dwell_s'], by := 'stop')
+ORDER BY most_frequent_share DESC
+LIMIT 5""",
+        "At L6-08 somebody rounds to five seconds. And zeros: no bus stops for no time at all, so "
+        "clocks got stuck.",
     ),
     Step(
         "The mean beside the mean of the middle part",
         "trimmed_mean cuts a tenth of the values from each end and averages the rest; mad_scale "
         "is a spread that wild values cannot move, equal to the sd on normal data.",
         MEAN_AND_ROBUST,
-        "A few stuck clocks double the mean and make the sd twenty times too large; the robust "
-        "figures hold.",
+        "A few stuck clocks inflate the mean, and the sd many times over; the robust figures hold.",
+        comes_again=True,
     ),
     Step(
         "How much has to be cut",
@@ -75,8 +80,8 @@ STEPS: Final = (
 SELECT share, n_kept, trimmed_mean, se
 FROM trim_path('dwell/*.parquet', 'dwell_s', by := 'route')
 WHERE route = 'L3'""",
-        "Cutting one value in twenty from each end does most of it; se, the standard error, falls "
-        "from seconds to hundredths.",
+        "Cutting a tenth from each end does most of it, and se, the standard error, shrinks more "
+        "than twentyfold.",
     ),
     Step(
         "Every route at every time of the day",
@@ -137,7 +142,6 @@ ORDER BY name""",
         "The second question once more, typed in another way. Nothing it rests on has changed.",
         MEAN_AND_ROBUST_AGAIN,
         "The answer was kept; any change to the files would have it computed anew.",
-        is_repeat=True,
     ),
 )
 

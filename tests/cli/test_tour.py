@@ -1,0 +1,114 @@
+"""``midspread tour``: every step runs, and what its words say of the answer is true."""
+
+import re
+from collections.abc import Callable, Iterator
+from pathlib import Path
+
+import pytest
+from click.testing import Result
+from midspread.cli.tour_steps import MEAN_AND_ROBUST, NEXT, STEPS, WAREHOUSE
+from midspread.engine.session import Session
+
+Run = Callable[..., Result]
+Ask = Callable[[str], list[dict[str, object]]]
+
+
+@pytest.fixture
+def ask(demo: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[Ask]:
+    """The rows of a step's query, by a word of its title."""
+    monkeypatch.chdir(demo)
+    with Session(use_store=False, sources={WAREHOUSE: demo / "warehouse.duckdb"}) as session:
+
+        def rows(title: str) -> list[dict[str, object]]:
+            (step,) = [step for step in STEPS if title in step.title]
+            found: list[dict[str, object]] = session.query(step.sql).table.to_pylist()
+            return found
+
+        yield rows
+
+
+def number(row: dict[str, object], name: str) -> float:
+    return float(str(row[name]))
+
+
+def test_a_whole_tour(run: Run, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.chdir(tmp_path)
+    answered = run("tour", "--to", "town", "--visits", "5000")
+    assert answered.exit_code == 0, answered.stderr
+    shown = answered.stdout
+    assert "5000 stop visits" in shown
+    assert "\x1b" not in shown
+    for place, step in enumerate(STEPS, start=1):
+        assert f"{place} of {len(STEPS)}  {step.title}" in shown
+        for line in step.sql.splitlines():
+            assert f"    {line}\n" in shown
+        assert " ".join(step.lesson.split()) in " ".join(shown.split())
+    assert len(re.findall(r"\d+ rows?, ", shown)) == len(STEPS)
+    assert "rows, answered from the store, " in shown.partition("Asked again")[2]
+    for line in ("cd town", *NEXT):
+        assert f"  {line}\n" in shown
+    assert sorted(path.name for path in tmp_path.iterdir()) == ["town"]
+    assert {"dwell", "warehouse.duckdb", "midspread.duckdb"} <= {
+        path.name for path in (tmp_path / "town").iterdir()
+    }
+    again = run("tour", "--to", "town", "--visits", "5000")
+    assert again.exit_code == 0
+    assert "Found as it was" in again.stdout
+
+
+def test_it_keeps_off_what_is_not_its_own(run: Run, tmp_path: Path) -> None:
+    (tmp_path / "mine.txt").write_text("mine")
+    refused = run("tour", "--to", str(tmp_path))
+    assert refused.exit_code == 1
+    assert refused.stderr.count("\n") == 1
+    assert [path.name for path in tmp_path.iterdir()] == ["mine.txt"]
+
+
+def test_six_to_eight_steps_and_one_is_asked_again() -> None:
+    assert 6 <= len(STEPS) <= 8
+    assert [step.sql for step in STEPS if step.comes_again] == [MEAN_AND_ROBUST]
+
+
+def test_one_stop_is_rounded_and_there_are_zeros(ask: Ask) -> None:
+    rows = ask("What the values are")
+    first, second = rows[0], rows[1]
+    assert first["stop"] == "L6-08"
+    assert number(first, "most_frequent") % 5 == 0
+    assert number(first, "most_frequent_share") > 2 * number(second, "most_frequent_share")
+    assert number(first, "n_distinct") < number(second, "n_distinct")
+    assert sum(number(row, "n_zero") for row in rows) > 0
+
+
+def test_stuck_clocks_inflate_mean_and_sd(ask: Ask) -> None:
+    for row in ask("The mean beside"):
+        assert number(row, "mean") > 1.2 * number(row, "trimmed_mean")
+        assert number(row, "sd") > 5 * number(row, "mad_scale")
+
+
+def test_a_tenth_settles_the_trimmed_mean(ask: Ask) -> None:
+    path = {number(row, "share"): row for row in ask("How much has to be cut")}
+    whole, tenth, half = (number(path[share], "trimmed_mean") for share in (0.0, 0.1, 0.5))
+    assert abs(tenth - half) < 0.1 * abs(whole - half)
+    assert number(path[0.0], "se") > 20 * number(path[0.1], "se")
+
+
+def test_the_school_run_leads(ask: Ask) -> None:
+    first = ask("Every route")[0]
+    assert (first["route"], first["day_part"]) == ("L7", "afternoon peak")
+
+
+def test_the_drifting_vehicle_leads(ask: Ask) -> None:
+    first, second, *_ = ask("One vehicle")
+    assert first["vehicle"] == "V158"
+    assert number(first, "excess_s") > 2 * number(second, "excess_s")
+
+
+def test_readers_save_time_on_most_routes_but_not_on_one(ask: Ask) -> None:
+    ratios = {row["route"]: number(row, "ratio") for row in ask("Tap readers")}
+    assert abs(ratios["L9"] - 1) < 0.06
+    assert sum(0.75 < ratio < 0.93 for ratio in ratios.values()) > len(ratios) / 2
+
+
+def test_each_route_has_its_own_limit(ask: Ask) -> None:
+    shares = {row["name"]: number(row, "share") for row in ask("Each route")}
+    assert shares == {"Harbour Loop": 0.05, "Ferry Steps Shuttle": 0.25, "Mill Lane": 0.1}
