@@ -32,6 +32,11 @@ class ParameterError(ValueError):
     """A parameter outside its range; the message is one sentence for the user."""
 
 
+def shown(number: float) -> str:
+    """A number as messages give it: all of its digits, so that 0.5000001 is not shown as 0.5."""
+    return repr(float(number)).removesuffix(".0")
+
+
 @dataclass(frozen=True)
 class Parameter:
     """A parameter of a function and the range it must keep to.
@@ -94,7 +99,7 @@ class Parameter:
         if not ok.all():
             wrong = float(values[~ok][0])
             raise ParameterError(
-                f"{function}: {self.name} must be {self.allowed}, got {wrong:g}; "
+                f"{function}: {self.name} must be {self.allowed}, got {shown(wrong)}; "
                 f"write for example {self.name} := {self.example()}."
             )
 

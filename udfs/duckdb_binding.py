@@ -16,7 +16,15 @@ import duckdb
 import numpy as np
 import pyarrow as pa
 from midspread.udfs.catalogue import functions
-from midspread.udfs.declaring import NULL, Function, Parameter, ParameterError, Values, null_mask
+from midspread.udfs.declaring import (
+    NULL,
+    Function,
+    Parameter,
+    ParameterError,
+    Values,
+    null_mask,
+    shown,
+)
 from midspread.udfs.drivers import driver, summary_driver
 from midspread.udfs.grouped import Control, Groups, Task, row_numbers, run
 from midspread.udfs.profile_binding import COUNTS_TYPE, PROFILE_MACROS, ProfileFunctions
@@ -278,7 +286,7 @@ def _check_weights(function: str, weights: Values) -> None:
     wrong = weights[weights < 0]
     if wrong.size:
         raise ParameterError(
-            f"{function}: weights must be 0 or more, got {wrong[0]:g}; "
+            f"{function}: weights must be 0 or more, got {shown(wrong[0])}; "
             f"leave such rows out or set their weight to 0."
         )
 
