@@ -130,9 +130,7 @@ def test_correlated_subquery(visits: duckdb.DuckDBPyConnection) -> None:
 
 
 def test_joins(visits: duckdb.DuckDBPyConnection) -> None:
-    routes = (
-        "(VALUES ('route 1', 'town'), ('route 2', 'town'), ('route 3', 'coast')) r(route, area)"
-    )
+    areas = "(VALUES ('route 1', 'town'), ('route 2', 'town'), ('route 3', 'coast'))"
     found = visits.execute(
         f"SELECT area, trimmed_mean(v.dwell_s, share := 0.1) FROM visits v "
         f"JOIN {areas} AS r(route, area) USING (route) GROUP BY area"
