@@ -23,6 +23,7 @@ from midspread.engine.errors import (
 from midspread.engine.harmless import SETTINGS_THAT_CHANGE_RESULTS
 from midspread.engine.inputs.canonical import canonical_sql
 from midspread.engine.inputs.fingerprints import (
+    FileState,
     Inputs,
     InputsState,
     InputWatch,
@@ -93,6 +94,7 @@ class AnswerCache:
         self._on_notice = on_notice
         self._answers: Answers | None = None
         self._is_off = False
+        self._seen: dict[str, tuple[FileState, ...]] = {}
 
     def question(
         self,
@@ -108,6 +110,7 @@ class AnswerCache:
             connection.cursor(),
             table_functions=self._tables(),
             macros_possible=macros_possible,
+            seen=self._seen,
         )
         before = inputs.look()
         if before.fingerprint is None:

@@ -7,7 +7,6 @@ import sys
 import time
 from collections.abc import Iterable
 from dataclasses import dataclass
-from pathlib import Path
 
 import duckdb
 
@@ -80,19 +79,21 @@ def match(pattern: str, connection: duckdb.DuckDBPyConnection) -> Matched:
     """
     if not pattern or "\x00" in pattern or len(pattern) > 4096:
         return Matched(pattern, ())
-    plain = Path(pattern).expanduser() if pattern.startswith("~") else Path(pattern)
+    folder = os.getcwd()  # noqa: PTH109
+    plain = os.path.join(folder, os.path.expanduser(pattern))  # noqa: PTH111, PTH118
     paths = _glob(pattern, connection)
     regular = True
     try:
-        mode = plain.stat().st_mode
+        mode = os.stat(plain).st_mode  # noqa: PTH116
     except OSError:
         pass
     else:
         if stat.S_ISDIR(mode):
-            paths += _glob(str(plain / "**"), connection)
+            paths += _glob(os.path.join(plain, "**"), connection)  # noqa: PTH118
         elif not stat.S_ISREG(mode):
             regular = False
-    return Matched(pattern, states(paths), regular)
+    absolute = (os.path.join(folder, path) for path in paths)  # noqa: PTH118
+    return Matched(pattern, states(absolute), regular)
 
 
 def states(paths: Iterable[str]) -> tuple[FileState, ...]:

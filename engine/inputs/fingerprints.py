@@ -15,8 +15,7 @@ import hashlib
 import json
 import os
 from collections.abc import Collection, Sequence
-from dataclasses import asdict, dataclass
-from typing import Any
+from dataclasses import dataclass
 
 import duckdb
 from midspread.engine.inputs.definitions import meaning_of, own_names, own_table_functions
@@ -40,8 +39,6 @@ class InputsState:
 
     Attributes
     ----------
-    folder : str
-        The folder that relative paths start from.
     matched : tuple of Matched
         The files behind every path, pattern and attached database.
     definitions : dict
@@ -50,7 +47,6 @@ class InputsState:
         Why the answer must be neither looked up nor kept, in words.
     """
 
-    folder: str
     matched: tuple[Matched, ...]
     definitions: dict[str, str]
     obstacle: str | None
@@ -66,18 +62,16 @@ class InputsState:
     def files(self) -> frozenset[str]:
         """Absolute paths of every file found."""
         return frozenset(
-            os.path.normpath(os.path.join(self.folder, state.path))  # noqa: PTH118
-            for matched in self.matched
-            for state in matched.files
+            os.path.normpath(state.path) for matched in self.matched for state in matched.files
         )
 
     def to_json(self) -> str:
         """Spell it out, as kept beside an answer."""
-        record: dict[str, Any] = {
-            "folder": self.folder,
-            "files": [asdict(matched) for matched in self.matched],
-            "definitions": self.definitions,
+        files = {
+            one.pattern: [(f.path, f.size, f.mtime_ns, f.ctime_ns, f.inode) for f in one.files]
+            for one in self.matched
         }
+        record = {"files": files, "definitions": self.definitions}
         return json.dumps(record, ensure_ascii=True, sort_keys=True)
 
 
@@ -95,6 +89,11 @@ class Inputs:
         Text of the views and macros behind the script.
     obstacle : str or None
         Why the inputs cannot be known, in words.
+    connection : duckdb.DuckDBPyConnection
+        Where patterns are matched.
+    seen : dict
+        What attached files were when they were first looked at: the engine reads that file on,
+        whatever has taken its name since.
     """
 
     patterns: tuple[str, ...]
@@ -102,18 +101,21 @@ class Inputs:
     definitions: dict[str, str]
     obstacle: str | None
     connection: duckdb.DuckDBPyConnection
+    seen: dict[str, tuple[FileState, ...]]
 
     def look(self) -> InputsState:
         """Look at every file once."""
-        folder = os.getcwd()  # noqa: PTH109
         if self.obstacle is not None:
-            return InputsState(folder, (), self.definitions, self.obstacle)
+            return InputsState((), self.definitions, self.obstacle)
         now = now_ns()
         matched = [match(pattern, self.connection) for pattern in self.patterns]
-        matched += [
-            Matched(f"database {alias}", states([path])) for alias, path in self.databases.items()
-        ]
-        return InputsState(folder, tuple(matched), self.definitions, _obstacle(matched, now))
+        obstacle = None
+        for alias, path in self.databases.items():
+            one = Matched(f"database {alias}", states([path]))
+            matched.append(one)
+            if self.seen.setdefault(alias, one.files) != one.files:
+                obstacle = f"{path} has been replaced since it was attached"
+        return InputsState(tuple(matched), self.definitions, obstacle or _obstacle(matched, now))
 
     def fingerprint(self) -> str | None:
         """Digest of the inputs as they are now; None when they cannot be known."""
@@ -126,6 +128,7 @@ def inputs_of(
     *,
     table_functions: Collection[str] | None = None,
     macros_possible: bool = True,
+    seen: dict[str, tuple[FileState, ...]] | None = None,
 ) -> Inputs:
     """Find what a script rests on, without running it.
 
@@ -140,6 +143,9 @@ def inputs_of(
     macros_possible : bool
         Pass False when nobody can have made a macro, in this session or an attached database;
         it saves a search of about 10 ms.
+    seen : dict, optional
+        One dict for the life of the connection, empty at first: it notices when an attached file
+        is replaced by another.
 
     Returns
     -------
@@ -159,7 +165,12 @@ def inputs_of(
     elif connection.execute("SELECT current_setting('file_search_path')").fetchall()[0][0]:
         obstacle = "the setting file_search_path is in use"
     return Inputs(
-        tuple(sorted(paths)), meaning.databases, meaning.definitions, obstacle, connection
+        tuple(sorted(paths)),
+        meaning.databases,
+        meaning.definitions,
+        obstacle,
+        connection,
+        {} if seen is None else seen,
     )
 
 

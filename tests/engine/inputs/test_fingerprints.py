@@ -7,7 +7,13 @@ from pathlib import Path
 
 import duckdb
 import pytest
-from midspread.engine.inputs.fingerprints import Inputs, InputWatch, inputs_of, reason_not_to_keep
+from midspread.engine.inputs.fingerprints import (
+    FileState,
+    Inputs,
+    InputWatch,
+    inputs_of,
+    reason_not_to_keep,
+)
 
 from .conftest import replace_keeping_times, write_month
 
@@ -287,6 +293,33 @@ def test_the_log_beside_a_database_counts(
 
 
 @pytest.mark.usefixtures("folder")
+def test_an_attached_file_that_is_replaced_by_another_is_not_relied_on(
+    engine: Engine, folder: Path, warehouse: Path, settle: Callable[[], None]
+) -> None:
+    """The engine reads the old one on, whatever has taken its name."""
+    seen: dict[str, tuple[FileState, ...]] = {}
+    sql = "SELECT count(*) FROM wh.routes"
+    found = inputs_of([sql], engine, table_functions=OURS, seen=seen)
+    assert found.fingerprint() is not None
+    with duckdb.connect(folder / "other.duckdb") as other:
+        other.execute("CREATE TABLE routes AS SELECT range AS route FROM range(99)")
+    (folder / "other.duckdb").rename(warehouse)
+    settle()
+    assert engine.execute(sql).fetchall() == [(3,)]
+    again = inputs_of([sql], engine, table_functions=OURS, seen=seen).look()
+    assert again.fingerprint is None
+    assert "has been replaced" in str(again.obstacle)
+
+
+def test_the_folder_does_not_matter_to_an_absolute_path(
+    engine: Engine, folder: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    sql = f"FROM '{folder}/dwell/*.parquet'"
+    before = inputs(engine, sql).fingerprint()
+    monkeypatch.chdir(folder / "dwell")
+    assert inputs(engine, sql).fingerprint() == before is not None
+
+
 def test_a_database_attached_for_writing_is_not_relied_on(engine: Engine) -> None:
     engine.execute("ATTACH 'mine.duckdb' AS mine")
     assert inputs(engine, "SELECT * FROM mine.t").fingerprint() is None
