@@ -41,6 +41,11 @@ def relation(function: str, tbl: object) -> str:
             f"parentheses, got {tbl!r}; write for example {function}('dwell/*.parquet', …)."
         )
     text = tbl.strip()
+    if re.search(rf"\b{function}\s*\(", text, re.IGNORECASE):
+        raise ParameterError(
+            f"{function}: tbl must not call {function} itself; put the inner call before it, "
+            f"WITH earlier AS (FROM {function}(…)), and write {function}('earlier', …)."
+        )
     if text.startswith(("(", '"')) or _FUNCTION_CALL.fullmatch(text):
         return text
     ending = text.rsplit(".", 1)[-1].lower()

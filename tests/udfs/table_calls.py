@@ -1,0 +1,33 @@
+"""Calls of every table function, and what comes back."""
+
+from typing import Any
+
+import duckdb
+import pytest
+
+CALLS = {
+    "robust_summary": "robust_summary({}, 'dwell_s'{})",
+    "trim_path": "trim_path({}, 'dwell_s'{})",
+    "value_profile": "value_profile({}, columns := 'dwell_s'{})",
+}
+EVERY = pytest.mark.parametrize("function", CALLS)
+
+
+def answer(connection: duckdb.DuckDBPyConnection, sql: str) -> list[dict[str, Any]]:
+    result = connection.execute(sql)
+    names = [column[0] for column in result.description or []]
+    return [dict(zip(names, row, strict=True)) for row in result.fetchall()]
+
+
+def complaint(connection: duckdb.DuckDBPyConnection, sql: str) -> str:
+    """The sentence of ours in the engine's error: its first line, without the engine's prefix."""
+    with pytest.raises(duckdb.Error) as caught:
+        connection.execute(sql).fetchall()
+    line = str(caught.value).split("\n")[0]
+    for prefix in (
+        "Invalid Input Error: ",
+        "Python exception occurred while executing the UDF: ",
+        "ParameterError: ",
+    ):
+        line = line.removeprefix(prefix)
+    return line
