@@ -51,7 +51,7 @@ class Rule:
 RULES: Final[tuple[Rule, ...]] = (
     Rule(lambda query, _: column_names(query), is_needed=True, repeats=False),
     Rule(lambda query, _: order_inside(query), is_needed=True),
-    Rule(lambda query, _: filter_clause(query), is_needed=True),
+    Rule(filter_clause, is_needed=True),
     Rule(over_partition, is_needed=False),
     Rule(lambda query, _: distinct(query), is_needed=True),
     Rule(lambda query, _: window_call(query), is_needed=True),

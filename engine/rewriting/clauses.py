@@ -58,10 +58,10 @@ class ClauseMap:
         self._tokens = found
         self._around = brackets(found)
         self._selects: dict[int, list[Clauses]] = {}
-        levels: dict[int, list[int]] = {}
+        self._levels: dict[int, list[int]] = {}
         for index, level in enumerate(self._around):
-            levels.setdefault(level, []).append(index)
-        for level, indices in levels.items():
+            self._levels.setdefault(level, []).append(index)
+        for level, indices in self._levels.items():
             self._selects[level] = list(self._read(indices))
 
     def enclosing(self, index: int) -> Iterator[tuple[Clauses, str]]:
@@ -75,6 +75,20 @@ class ClauseMap:
             if level == -1:
                 return
             index, level = level, self._around[level]
+
+    def definitions_around(self, index: int) -> list[tuple[int, int]]:
+        """The token ranges of all WITH definitions that a token can see, the outermost first."""
+        found: list[tuple[int, int]] = []
+        level = self._around[index]
+        while True:
+            indices = self._levels[level]
+            end = self._end_of_with(indices)
+            if end is not None:
+                is_recursive = self._tokens[indices[0] + 1].says("RECURSIVE")
+                found.insert(0, (indices[0] + (2 if is_recursive else 1), end))
+            if level == -1:
+                return found
+            level = self._around[level]
 
     def items(self, select: Clauses) -> list[tuple[int, int]]:
         """The token ranges of the items of a SELECT list."""

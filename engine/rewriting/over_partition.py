@@ -7,6 +7,7 @@ partition is computed once, by a grouped query that the rows look their value up
 from dataclasses import dataclass, field
 
 from midspread.engine.parsing import Node, NotParsed, expression_text, nodes, parse, quoted
+from midspread.engine.rewriting.aliases import Aliases
 from midspread.engine.rewriting.catalog import Catalog
 from midspread.engine.rewriting.clauses import Clauses
 from midspread.engine.rewriting.edits import Edit, apply, without_overlaps
@@ -19,10 +20,11 @@ _MARK = "_midspread_"
 
 @dataclass
 class _Partition:
-    """Calls of one SELECT over the same partitions."""
+    """Calls of one SELECT over the same partitions, and their texts without OVER."""
 
     keys: list[str]
     calls: list[Call] = field(default_factory=list)
+    texts: list[str] = field(default_factory=list)
 
 
 def over_partition(query: Query, catalog: Catalog) -> list[Edit]:
@@ -50,11 +52,13 @@ def over_partition(query: Query, catalog: Catalog) -> list[Edit]:
         clauses = _clauses_of(query, calls)
         if clauses is None or not _reads_back(query, select.node, clauses):
             continue
-        calls = [call for call in calls if _is_steady(call, repeatable)]
+        aliases = Aliases(query, select.node, clauses)
+        calls = aliases.usable(call for call in calls if _is_steady(call, repeatable))
+        partitions = _partitions(query, calls, aliases)
         read = sources(query, select.node["from_table"])
         if not calls or read is None or not _may_read_twice(select.node, read, repeatable):
             continue
-        return _joined_back(query, calls, clauses, select.node, read, repeatable)
+        return _joined_back(query, partitions, clauses, select.node, read, repeatable)
     return []
 
 
@@ -174,7 +178,7 @@ def _from_and_where(query: Query, clauses: Clauses) -> str:
 
 def _joined_back(
     query: Query,
-    calls: list[Call],
+    partitions: list[_Partition],
     clauses: Clauses,
     select: Node,
     read: list[Source],
@@ -192,7 +196,7 @@ def _joined_back(
             edits.append(Edit(source.start, source.stop, shown))
     stars = _stars_to_narrow(query, clauses, select)
     joined, conditions, added = [], [], []
-    for partition in _partitions(query, calls):
+    for partition in partitions:
         name = f"{_MARK}{number}"
         number += 1
         definitions.append(_grouped(query, clauses, partition, name, edits))
@@ -258,17 +262,35 @@ def _joined(query: Query, clauses: Clauses, names: list[str], conditions: list[s
     return [*edits, Edit(end, end, f" WHERE {condition}")]
 
 
-def _partitions(query: Query, calls: list[Call]) -> list[_Partition]:
+def _partitions(query: Query, calls: list[Call], aliases: Aliases) -> list[_Partition]:
     found: list[_Partition] = []
     for call in calls:
-        keys = [expression_text(query.connection, node) for node in call.node["partitions"]]
+        keys = [
+            expression_text(query.connection, aliases.resolved(node))
+            for node in call.node["partitions"]
+        ]
         for partition in found:
             if partition.keys == keys:
-                partition.calls.append(call)
                 break
         else:
-            found.append(_Partition(keys, [call]))
+            partition = _Partition(keys)
+            found.append(partition)
+        partition.calls.append(call)
+        partition.texts.append(_grouped_call(query, call, aliases))
     return found
+
+
+def _grouped_call(query: Query, call: Call, aliases: Aliases) -> str:
+    """A call without its OVER."""
+    start = query.tokens[call.opening].stop
+    text = query.text[call.start : start] + ("DISTINCT " if call.is_distinct else "")
+    given = []
+    for argument in call.arguments:
+        resolved = aliases.resolved(argument.node)
+        is_same = resolved == argument.node
+        value = argument.text if is_same else expression_text(query.connection, resolved)
+        given.append(f"{argument.name} := {value}" if argument.name else value)
+    return f"{text}{', '.join(given)})"
 
 
 def _grouped(
@@ -276,9 +298,7 @@ def _grouped(
 ) -> str:
     """The definition of the query with one row a partition."""
     items = [f"{key} AS {name}_key_{i}" for i, key in enumerate(partition.keys, 1)]
-    for i, call in enumerate(partition.calls, 1):
-        text = query.text[call.start : query.tokens[call.closing].stop]
-        items.append(f"{text} AS {name}_value_{i}")
+    items += [f"{text} AS {name}_value_{i}" for i, text in enumerate(partition.texts, 1)]
     start = query.tokens[clauses.ranges["FROM"][0]].start
     stop = query.tokens[clauses.ranges["FROM"][1] - 1].stop
     moved = [

@@ -6,6 +6,7 @@ macro is given the window's list instead.
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.rewriting.edits import Edit
+from midspread.engine.rewriting.filter_clause import condition
 from midspread.engine.rewriting.misfit import misfit
 from midspread.engine.rewriting.query import Call, Query
 
@@ -29,8 +30,14 @@ def _handed_over(query: Query, call: Call) -> Edit:
         raise MidspreadError(
             f"{name}: OVER needs the plain form; write {call.function.signature} OVER (...)."
         )
-    over = query.text[query.tokens[call.closing].stop : call.stop]
-    present = " AND ".join(f"({column.text}) IS NOT NULL" for column in columns)
+    behind = query.tokens[call.closing].stop
+    wanted = [f"({column.text}) IS NOT NULL" for column in columns]
+    if call.filter is not None:
+        start, stop = condition(query, call)
+        wanted.insert(0, f"({query.text[start:stop]})")
+        behind = query.tokens[query.clauses.closing(call.closing + 2)].stop
+    over = query.text[behind : call.stop]
+    present = " AND ".join(wanted)
     given = [f"list(_number({column.text})) FILTER (WHERE {present}){over}" for column in columns]
     if call.is_distinct:
         given = [f"list_distinct({values})" for values in given]
