@@ -15,8 +15,12 @@ _LOCAL_URL = re.compile(r"^file:", re.IGNORECASE)
 _DATA_ENDINGS = frozenset(
     (".parquet", ".csv", ".tsv", ".txt", ".json", ".jsonl", ".ndjson", ".gz", ".zst", ".xlsx")
 )
-# A file changed twice within the clock's grain shows one time; 2 s is the coarsest grain in use.
-SETTLING_NS = 2_000_000_000
+# A file changed twice within the grain of its file system's clock shows one time, so a change is
+# only trusted when it is older than that. Grains are of some milliseconds, or else of whole seconds
+# (2 s on FAT), which the missing fraction gives away.
+FINE_GRAIN_NS = 100_000_000
+COARSE_GRAIN_NS = 2_000_000_000
+_SECOND_NS = 1_000_000_000
 
 
 @dataclass(frozen=True, order=True)
@@ -42,10 +46,11 @@ class FileState:
             return None
         return cls(path, found.st_size, found.st_mtime_ns, found.st_ctime_ns, found.st_ino)
 
-    def is_settled(self, now_ns: int) -> bool:
-        """Whether any later change is bound to show in the times."""
+    def settles_ns(self) -> int:
+        """Give the time from which on any later change is bound to show."""
         changed = self.mtime_ns if sys.platform == "win32" else self.ctime_ns
-        return changed < now_ns - SETTLING_NS
+        is_coarse = changed % _SECOND_NS == 0
+        return changed + (COARSE_GRAIN_NS if is_coarse else FINE_GRAIN_NS)
 
 
 @dataclass(frozen=True)

@@ -14,12 +14,21 @@ the same. The steps, for whoever runs queries::
 import hashlib
 import json
 import os
+import time
 from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 
 import duckdb
 from midspread.engine.inputs.definitions import meaning_of, own_names, own_table_functions
-from midspread.engine.inputs.files import FileState, Matched, is_remote, match, now_ns, states
+from midspread.engine.inputs.files import (
+    FINE_GRAIN_NS,
+    FileState,
+    Matched,
+    is_remote,
+    match,
+    now_ns,
+    states,
+)
 from midspread.engine.inputs.volatile import why_volatile
 from midspread.engine.inputs.watching import InputWatch
 
@@ -104,18 +113,33 @@ class Inputs:
     seen: dict[str, tuple[FileState, ...]]
 
     def look(self) -> InputsState:
-        """Look at every file once."""
+        """Look at every file, waiting a moment where one has only just changed."""
         if self.obstacle is not None:
             return InputsState((), self.definitions, self.obstacle)
-        now = now_ns()
+        matched = self._match()
+        wait = _settling(matched) - now_ns()
+        if 0 < wait <= FINE_GRAIN_NS:
+            time.sleep(wait / 1e9)
+            matched = self._match()
+        return InputsState(matched, self.definitions, self._obstacle(matched, now_ns()))
+
+    def _match(self) -> tuple[Matched, ...]:
         matched = [match(pattern, self.connection) for pattern in self.patterns]
-        obstacle = None
-        for alias, path in self.databases.items():
-            one = Matched(f"database {alias}", states([path]))
-            matched.append(one)
-            if self.seen.setdefault(alias, one.files) != one.files:
-                obstacle = f"{path} has been replaced since it was attached"
-        return InputsState(tuple(matched), self.definitions, obstacle or _obstacle(matched, now))
+        matched += [Matched(path, states([path])) for path in self.databases.values()]
+        return tuple(matched)
+
+    def _obstacle(self, matched: Sequence[Matched], now: int) -> str | None:
+        """Say why what was found cannot be relied on, or None."""
+        for one in matched:
+            if not one.is_regular:
+                return f"{one.pattern} is not a regular file"
+            for state in one.files:
+                if state.settles_ns() > now:
+                    return f"{state.path} changed a moment ago"
+        for path, one in zip(self.databases.values(), matched[len(self.patterns) :], strict=True):
+            if self.seen.setdefault(path, one.files) != one.files:
+                return f"{path} has been replaced since it was attached"
+        return None
 
     def fingerprint(self) -> str | None:
         """Digest of the inputs as they are now; None when they cannot be known."""
@@ -214,11 +238,6 @@ def reason_not_to_keep(
     return why_volatile(script, connection, table_functions=table_functions)
 
 
-def _obstacle(matched: Sequence[Matched], now: int) -> str | None:
-    for one in matched:
-        if not one.is_regular:
-            return f"{one.pattern} is not a regular file"
-        for state in one.files:
-            if not state.is_settled(now):
-                return f"{state.path} changed a moment ago"
-    return None
+def _settling(matched: Sequence[Matched]) -> int:
+    """Give the time at which the last change of all can be trusted."""
+    return max((state.settles_ns() for one in matched for state in one.files), default=0)

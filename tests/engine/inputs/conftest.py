@@ -59,4 +59,4 @@ def replace_keeping_times(path: Path, content: bytes) -> None:
     os.utime(path, ns=(before.st_atime_ns, before.st_mtime_ns))
 
 
-assert files.SETTLING_NS < 3_000_000_000
+assert files.COARSE_GRAIN_NS < 3_000_000_000

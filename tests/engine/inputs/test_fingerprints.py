@@ -1,12 +1,14 @@
 """Fingerprints: whatever changes an answer changes them, or there is none."""
 
+import dataclasses
 import os
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Iterable
 from pathlib import Path
 
 import duckdb
 import pytest
+from midspread.engine.inputs import files
 from midspread.engine.inputs.fingerprints import (
     FileState,
     Inputs,
@@ -101,25 +103,53 @@ def test_any_change_to_the_files_behind_a_pattern_shows(
     assert None not in seen
 
 
+def test_changes_within_a_tick_of_the_clock_show(
+    engine: Engine, folder: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """By the real clock: same size, same name, old times put back, at once."""
+    monkeypatch.setattr("midspread.engine.inputs.fingerprints.now_ns", time.time_ns)
+    path = folder / "stops.csv"
+    seen = set()
+    for number in range(8):
+        replace_keeping_times(path, path.read_bytes()[:-2] + f"{number}\n".encode())
+        seen.add(inputs(engine, "FROM 'stops.csv'").fingerprint())
+    assert len(seen) == 8
+    assert None not in seen
+
+
+def at_whole_seconds(path: str) -> FileState | None:
+    """Give the state of a file changed now, by a file system with a clock of whole seconds."""
+    found = FileState.of(path)
+    return found and dataclasses.replace(found, ctime_ns=time.time_ns() // 10**9 * 10**9)
+
+
 @pytest.mark.usefixtures("folder")
-def test_a_file_changed_a_moment_ago_is_not_trusted(
+def test_a_clock_of_whole_seconds_is_not_trusted_for_two(
     engine: Engine, monkeypatch: pytest.MonkeyPatch
 ) -> None:
+    real = files.states
+
+    def coarse(paths: Iterable[str]) -> tuple[FileState, ...]:
+        found = [at_whole_seconds(state.path) for state in real(paths)]
+        return tuple(state for state in found if state is not None)
+
     sql = "FROM 'stops.csv'"
+    monkeypatch.setattr(files, "states", coarse)
     assert inputs(engine, sql).fingerprint() is not None
     monkeypatch.setattr("midspread.engine.inputs.fingerprints.now_ns", time.time_ns)
-    assert inputs(engine, sql).fingerprint() is None
-    assert "stops.csv changed a moment ago" in str(inputs(engine, sql).look().obstacle)
+    state = inputs(engine, sql).look()
+    assert state.fingerprint is None
+    assert "stops.csv changed a moment ago" in str(state.obstacle)
     assert inputs(engine, "SELECT 1").fingerprint() is not None
 
 
-def test_setting_a_time_back_does_not_make_a_file_trusted(
-    engine: Engine, folder: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
-    monkeypatch.setattr("midspread.engine.inputs.fingerprints.now_ns", time.time_ns)
-    (folder / "stops.csv").write_text("stop,name\n3,Quay\n")
-    os.utime(folder / "stops.csv", (1_000_000_000, 1_000_000_000))
-    assert inputs(engine, "FROM 'stops.csv'").fingerprint() is None
+def test_setting_a_time_back_does_not_make_a_file_trusted(tmp_path: Path) -> None:
+    path = tmp_path / "stops.csv"
+    path.write_text("stop,name\n3,Quay\n")
+    os.utime(path, (1_000_000_000, 1_000_000_000))
+    state = FileState.of(str(path))
+    assert state is not None
+    assert state.settles_ns() > time.time_ns() - 10**9
 
 
 def test_a_path_that_comes_to_exist_shows(
