@@ -292,5 +292,5 @@ def test_many_rows_in_and_out(visits: duckdb.DuckDBPyConnection) -> None:
     visits.execute(f"CREATE OR REPLACE TEMP TABLE pairs AS {query}")
     wrong = visits.execute("SELECT count(*) FROM pairs WHERE m IS DISTINCT FROM pair * 2 + 0.5")
     assert wrong.fetchall() == [(0,)]
-    arrow = visits.execute(query).to_arrow_table()
+    arrow = visits.sql(query).to_arrow_table()
     assert arrow.num_rows == 10000 and arrow.column("m").null_count == 0
