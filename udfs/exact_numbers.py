@@ -73,7 +73,7 @@ def _decimals(array: Any, unsigned: bool) -> ExactNumbers:
     words = np.frombuffer(array.buffers()[1], dtype=np.int64)
     words = words[2 * array.offset : 2 * (array.offset + len(array))].reshape(-1, 2)
     low, high = words[:, 0], words[:, 1]
-    if np.array_equal(high, low >> 63):
+    if (high == (low >> 63)).all() and not (unsigned and low.min() < 0):
         return _whole_numbers(np.ascontiguousarray(low), scale)
     below = np.ascontiguousarray(low).view(np.uint64)
     if unsigned:

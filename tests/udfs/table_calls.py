@@ -31,3 +31,10 @@ def complaint(connection: duckdb.DuckDBPyConnection, sql: str) -> str:
     ):
         line = line.removeprefix(prefix)
     return line
+
+
+def profile(connection: duckdb.DuckDBPyConnection, values: str, more: str = "") -> dict[str, Any]:
+    """The profile of one column, given as an SQL list."""
+    connection.execute(f"CREATE OR REPLACE TEMP TABLE one AS SELECT unnest({values}) AS v")
+    (row,) = answer(connection, f"FROM value_profile('one'{more})")
+    return row
