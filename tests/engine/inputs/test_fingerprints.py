@@ -322,7 +322,6 @@ def test_the_log_beside_a_database_counts(
     assert "warehouse.duckdb.wal" in inputs(engine, "FROM 'warehouse.duckdb'").look().to_json()
 
 
-@pytest.mark.usefixtures("folder")
 def test_an_attached_file_that_is_replaced_by_another_is_not_relied_on(
     engine: Engine, folder: Path, warehouse: Path, settle: Callable[[], None]
 ) -> None:
@@ -350,6 +349,7 @@ def test_the_folder_does_not_matter_to_an_absolute_path(
     assert inputs(engine, sql).fingerprint() == before is not None
 
 
+@pytest.mark.usefixtures("folder")
 def test_a_database_attached_for_writing_is_not_relied_on(engine: Engine) -> None:
     engine.execute("ATTACH 'mine.duckdb' AS mine")
     assert inputs(engine, "SELECT * FROM mine.t").fingerprint() is None
