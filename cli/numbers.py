@@ -7,6 +7,8 @@ SIGNIFICANT = 6
 LEAST_SIGNIFICANT = 3  # even the smallest number of a column shows as many digits
 MOST_DIGITS = 10  # before and after the point together; beyond, numbers are written one by one
 GROUPED_FROM = 10_000
+# A number so much smaller than the largest is a rounding error, such as 1e-17 beside 0.25.
+NOISE = 1e-14
 
 
 def decimal_texts(numbers: Sequence[float | None]) -> list[str]:
@@ -60,7 +62,8 @@ def _decimals(finite: Iterable[float]) -> int | None:
     sizes = [abs(v) for v in finite if v != 0]
     if not sizes:
         return 0
-    largest, smallest = max(sizes), min(sizes)
+    largest = max(sizes)
+    smallest = min(size for size in sizes if size >= largest * NOISE)
     if largest >= 1e15 or largest < 1e-4:
         return None
     decimals = max(0, SIGNIFICANT - _lead(largest))
@@ -69,7 +72,7 @@ def _decimals(finite: Iterable[float]) -> int | None:
     wanted = LEAST_SIGNIFICANT - _lead(smallest)
     if wanted > decimals:
         if wanted + max(_lead(largest), 1) > MOST_DIGITS:
-            return decimals if _is_noise(smallest, largest) else None
+            return None
         return wanted
     return decimals
 
@@ -81,11 +84,6 @@ def _lead(size: float) -> int:
 
 def _is_whole(sizes: Iterable[float]) -> bool:
     return all(size == math.floor(size) for size in sizes)
-
-
-def _is_noise(smallest: float, largest: float) -> bool:
-    """A rounding error beside proper values, such as 1e-17 beside 0.25."""
-    return smallest < largest * 1e-14
 
 
 def _trailing_zeros(text: str) -> int:

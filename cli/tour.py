@@ -63,8 +63,7 @@ def tour(folder: Path, visits: int, settings: Settings) -> None:
             threads=settings.threads,
         )
         screen.clear()
-        built = time.monotonic()
-        _say_built(console, demo, built - started)
+        _say_built(console, demo, time.monotonic() - started)
         store = (settings.store or demo.folder / STORE_NAME).absolute()
         with (
             contextlib.chdir(demo.folder),
@@ -73,17 +72,8 @@ def tour(folder: Path, visits: int, settings: Settings) -> None:
             ) as session,
         ):
             for number, step in enumerate(STEPS, start=1):
-                if step.comes_again and not demo.reused:
-                    _let_files_settle(built)
                 _take(console, screen, session, number, step)
     _conclude(console, folder)
-
-
-def _let_files_settle(built: float) -> None:
-    """Wait until an answer over files just written is kept, which takes a moment."""
-    from midspread.engine.inputs.files import SETTLING_NS
-
-    time.sleep(max(0.0, built + SETTLING_NS / 1e9 + 0.1 - time.monotonic()))
 
 
 def _introduce(console: "Console", folder: Path, visits: int) -> None:

@@ -23,15 +23,12 @@ class Step:
         The query, as one would type it.
     lesson : str
         What the answer says, true of the demo at any size.
-    comes_again : bool
-        Whether the same is asked again later, to show the kept answer.
     """
 
     title: str
     words: str
     sql: str
     lesson: str
-    comes_again: bool = False
 
 
 MEAN_AND_ROBUST: Final = """\
@@ -70,7 +67,6 @@ LIMIT 5""",
         "is a spread that wild values cannot move, equal to the sd on normal data.",
         MEAN_AND_ROBUST,
         "A few stuck clocks inflate the mean, and the sd many times over; the robust figures hold.",
-        comes_again=True,
     ),
     Step(
         "How much has to be cut",

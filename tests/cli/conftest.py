@@ -4,7 +4,6 @@ import os
 import shutil
 import subprocess
 import sys
-import time
 from collections.abc import Callable
 from pathlib import Path
 
@@ -12,7 +11,6 @@ import pytest
 from click.testing import CliRunner, Result
 from midspread.cli.main import application
 from midspread.demo_db import build
-from midspread.engine.inputs.files import SETTLING_NS
 
 VISITS = 20_000
 Run = Callable[..., Result]
@@ -39,13 +37,8 @@ def here(demo: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
 
 
 @pytest.fixture
-def settled(demo: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    """The shared demo folder as the current one, old enough for answers over it to be kept.
-
-    They are kept in a store of the test's own, whose path this is.
-    """
-    changed = max(file.stat().st_ctime for file in demo.rglob("*"))
-    time.sleep(max(0.0, changed + SETTLING_NS / 1e9 + 0.1 - time.time()))
+def kept(demo: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
+    """The shared demo folder as the current one, and the path of a store of the test's own."""
     monkeypatch.chdir(demo)
     monkeypatch.setenv("MIDSPREAD_STORE", str(tmp_path / "kept.duckdb"))
     monkeypatch.delenv("MIDSPREAD_DEBUG", raising=False)

@@ -161,7 +161,7 @@ def test_attached_databases_can_be_joined(run: Run) -> None:
     assert "nowhere.duckdb" in missing.stderr
 
 
-@pytest.mark.usefixtures("settled")
+@pytest.mark.usefixtures("kept")
 def test_asked_again_it_comes_from_the_store_and_says_so(run: Run) -> None:
     first = run("query", BY_ROUTE)
     again = run("query", BY_ROUTE.replace("SELECT", "select  ") + " -- again")
@@ -171,11 +171,11 @@ def test_asked_again_it_comes_from_the_store_and_says_so(run: Run) -> None:
     assert "answered from the store" not in run("query", BY_ROUTE, "--recompute").stderr
 
 
-def test_the_store_may_be_named(run: Run, settled: Path) -> None:
-    named = settled.with_name("named.duckdb")
+def test_the_store_may_be_named(run: Run, kept: Path) -> None:
+    named = kept.with_name("named.duckdb")
     run("query", BY_ROUTE, "--store", str(named))
     assert named.is_file()
-    assert not settled.exists()
+    assert not kept.exists()
 
 
 @pytest.mark.usefixtures("here")

@@ -17,28 +17,28 @@ def facts(result: Result) -> dict[str, str]:
     return {pair[0]: pair[1] for pair in pairs if len(pair) == 2}
 
 
-def test_a_store_that_is_not_there_yet(run: Run, settled: Path) -> None:
+def test_a_store_that_is_not_there_yet(run: Run, kept: Path) -> None:
     answered = run("store")
     assert answered.exit_code == 0
-    assert str(settled) in answered.stdout
+    assert str(kept) in answered.stdout
     assert "not there yet" in answered.stdout
-    assert not settled.exists()
+    assert not kept.exists()
     for action in ("check", "pack", "clear-answers"):
         refused = run("store", action)
         assert refused.exit_code == 1
         assert "There is no store" in refused.stderr
 
 
-def test_what_it_holds(run: Run, settled: Path) -> None:
+def test_what_it_holds(run: Run, kept: Path) -> None:
     run("query", SQL)
     shown = facts(run("store"))
-    assert shown["place"] == str(settled)
+    assert shown["place"] == str(kept)
     assert shown["answers"] == "1 kept answer"
     assert shown["room"].endswith("of at most 1.07 GB")
     assert "is sound: 1 kept answer read" in run("store", "check").stdout
 
 
-@pytest.mark.usefixtures("settled")
+@pytest.mark.usefixtures("kept")
 def test_the_answers_can_be_dropped_and_the_room_given_back(run: Run) -> None:
     run("query", SQL)
     assert "answered from the store" in run("query", SQL).stderr
@@ -59,12 +59,12 @@ def test_some_other_file_is_refused_and_left_alone(run: Run, here: Path) -> None
     assert (here / "notes.txt").read_text() == "mine and nobody else's"
 
 
-def test_a_damaged_store_is_said_to_be_so(run: Run, settled: Path) -> None:
+def test_a_damaged_store_is_said_to_be_so(run: Run, kept: Path) -> None:
     run("query", SQL)
-    content = bytearray(settled.read_bytes())
+    content = bytearray(kept.read_bytes())
     content[4096 : len(content) // 2] = b"\0" * (len(content) // 2 - 4096)
-    settled.write_bytes(content)
+    kept.write_bytes(content)
     refused = run("store", "check")
     assert refused.exit_code == 1
-    assert str(settled) in refused.stderr
-    assert settled.read_bytes() == bytes(content)
+    assert str(kept) in refused.stderr
+    assert kept.read_bytes() == bytes(content)
