@@ -83,7 +83,9 @@ def canonical_sql(sql: str, function_names: Collection[str] | None = None) -> st
     for place, token in enumerate(tokens):
         if place:
             pieces.append(_separator(tokens[place - 1], token))
-        pieces.append(token.text.lower() if place in lowered else token.text)
+        # The engine folds the case of ASCII letters only.
+        folds = place in lowered and token.text.isascii()
+        pieces.append(token.text.lower() if folds else token.text)
     return "".join(pieces)
 
 

@@ -9,6 +9,7 @@ import subprocess
 import sys
 from datetime import date, datetime, time
 from decimal import Decimal
+from pathlib import Path
 
 import duckdb
 import pandas as pd
@@ -107,7 +108,7 @@ def test_csv_is_read_by_others_as_it_was() -> None:
     assert frame["a,b"].tolist() == ODD_TEXTS
 
 
-def test_csv_tells_empty_from_null_to_the_engine(tmp_path) -> None:  # type: ignore[no-untyped-def]
+def test_csv_tells_empty_from_null_to_the_engine(tmp_path: Path) -> None:
     table = pa.table({"t": ["", None, "x"], "x": [1.5, None, math.inf]})
     path = tmp_path / "a.csv"
     path.write_text(text_of(table, "csv"), newline="")

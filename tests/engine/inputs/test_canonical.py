@@ -258,6 +258,7 @@ def test_spellings_of_one_query(one: str, other: str) -> None:
         ("SELECT Dwell_s FROM t", "SELECT dwell_s FROM t"),
         ("SELECT 1.0", "SELECT 1.00"),
         ("SELECT 'a'\n'b'", "SELECT 'a' 'b'"),
+        ("SELECT Straße(1), Éclair(2)", "SELECT Straße(1), éclair(2)"),
         ("SELECT 1 - -1", "SELECT 1 --1"),
         ("SELECT 2 @-1", "SELECT 2 @ -1"),
         ("SELECT x'41'", "SELECT x '41'"),
