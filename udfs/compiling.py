@@ -189,5 +189,17 @@ def _driver_cache(function: types.FunctionType, folder: Path) -> Any:
     class DriverCache(caching.Cache):
         _impl_class: Any = Content
 
+        def load_overload(self, sig: Any, target_context: Any) -> Any:
+            try:
+                return super().load_overload(sig, target_context)
+            except Exception:  # a file cut short, by a crash say: compile again and replace it
+                with contextlib.suppress(OSError):
+                    self.flush()
+                return None
+
+        def save_overload(self, sig: Any, data: Any) -> None:
+            with contextlib.suppress(OSError):  # a full disk costs time, not the answer
+                super().save_overload(sig, data)
+
     make: Any = DriverCache
     return make(function)
