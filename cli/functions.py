@@ -77,20 +77,20 @@ def _chosen(word: str | None, known: Mapping[str, "Function"]) -> list[str]:
 
 
 def _print_all(console: "Console", known: Mapping[str, "Function"]) -> None:
-    from midspread.cli.reference import families, list_lines
-    from midspread.cli.tables import FAINT, HEAD, print_lines
+    from midspread.cli.reference import WIDEST, families, list_lines
+    from midspread.cli.tables import FAINT, HEAD, INDENT, print_lines
+    from midspread.cli.wrapping import wrapped
     from rich.text import Text
 
     for heading, members in families(known.values()):
         print_lines(console, [Text(heading, style=HEAD)])
         print_lines(console, [*list_lines(members, console.width), Text()])
-    print_lines(
-        console,
-        [
-            Text("midspread functions NAME explains one and shows an example;", style=FAINT),
-            Text("midspread functions WORD finds some by meaning, such as spread.", style=FAINT),
-        ],
+    words = (
+        "midspread functions NAME explains one and shows an example; midspread functions WORD "
+        "finds some by meaning, such as spread."
     )
+    room = min(console.width, WIDEST) - INDENT
+    print_lines(console, [Text(line, style=FAINT) for line in wrapped(words, room)])
 
 
 def _print_found(console: "Console", word: str, found: list["Function"]) -> None:

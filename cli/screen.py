@@ -69,18 +69,17 @@ class Screen:
     def _show(self, work: str, fraction: float | None, elements: int, seconds: float) -> None:
         known = fraction is not None and 0 < fraction <= 1
         done = f"{fraction:4.0%}" if known else count_text(elements, "value") if elements else ""
+        fields = {"description": work, "done": done, "clock": f"{seconds:.0f} s"}
         if self._display is None:
             self._display = _new_display()
-            self._display.add_task("", total=None, done="", clock="")
+            self._display.add_task(total=None, **fields)  # type: ignore[arg-type]
             self._display.start()
         self._display.update(
             self._display.task_ids[0],
-            description=work,
             total=1.0 if known else None,
             completed=fraction if known else 0.0,
-            done=done,
-            clock=f"{seconds:.0f} s",
             refresh=True,
+            **fields,  # type: ignore[arg-type]
         )
 
     def clear(self) -> None:
