@@ -104,7 +104,9 @@ class Guard:
             When what it holds is no SQL.
         """
         if statement.kind is Kind.OTHER:
-            raise refusal(statement.first_word)
+            word = statement.first_word
+            is_known = word in _INSTEAD or word in _SYNONYMS
+            raise refusal(word if is_known else statement.engine_type)
         if statement.kind is Kind.SETTING:
             if statement.name not in ALLOWED_SETTINGS:
                 raise refusal("SET", f"SET {statement.name}")
@@ -211,7 +213,7 @@ def refusal(word: str, shown: str | None = None) -> RefusedStatement:
     """The sentence for a statement that begins with this word."""
     known = _SYNONYMS.get(word, word)
     instead = _INSTEAD.get(known, "it is no query; use SELECT")
-    return RefusedStatement(f"query refuses {shown or word}: {instead}.")
+    return RefusedStatement(f"query refuses {shown or known}: {instead}.")
 
 
 def _unseen(statement: Statement, error: NotParsed) -> RefusedStatement:
