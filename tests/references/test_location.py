@@ -2,6 +2,7 @@
 
 import functools
 import math
+import statistics
 from fractions import Fraction
 
 import numpy as np
@@ -142,6 +143,15 @@ def test_winsorized_mean_as_scipy(estimate: Estimate, name: str) -> None:
 @pytest.mark.parametrize("name", R_TRIMEANS)
 def test_trimean_as_r(estimate: Estimate, name: str) -> None:
     assert estimate("trimean", published(name)) == approx(R_TRIMEANS[name], rel=1e-15)
+
+
+@pytest.mark.parametrize("name", NAMES)
+def test_trimean_from_the_medians_of_the_halves(estimate: Estimate, name: str) -> None:
+    """Tukey's fourths are the medians of the halves, the median belonging to both (1977)."""
+    x = sorted(published(name))
+    half = (len(x) + 1) // 2
+    low, middle, high = map(statistics.median, (x[:half], x, x[-half:]))
+    assert estimate("trimean", x) == approx((low + 2 * middle + high) / 4, rel=1e-15)
 
 
 # Wilcox, Introduction to Robust Estimation and Hypothesis Testing, ch. 3, quoted from memory.

@@ -6,7 +6,7 @@ import math
 import numpy as np
 import pytest
 import scipy.stats
-from statsmodels.stats.stattools import robust_kurtosis, robust_skewness
+from statsmodels.stats.stattools import medcouple, robust_kurtosis, robust_skewness
 
 from tests.conftest import Estimate
 from tests.references.published import NAMES, published
@@ -150,6 +150,19 @@ def test_adjusted_fences_as_robustbase(estimate: Estimate, name: str) -> None:
     fences = estimate("adjusted_fences", x)
     assert (fences["lower"], fences["upper"]) == approx((low, high), rel=1e-13)
     assert np.sum((x < fences["lower"]) | (x > fences["upper"])) == outside
+
+
+@pytest.mark.parametrize("name", [name for name in NAMES if name != "quakes"])
+def test_adjusted_fences_with_the_medcouple_of_statsmodels(estimate: Estimate, name: str) -> None:
+    """Its medcouple takes all pairs at once, by a definition of its own for ties."""
+    x = np.sort(published(name))
+    half = (x.size + 1) // 2
+    low, high = float(np.median(x[:half])), float(np.median(x[-half:]))
+    skew = float(medcouple(x))
+    down, up = (-4, 3) if skew >= 0 else (-3, 4)
+    fences = estimate("adjusted_fences", x)
+    assert fences["lower"] == approx(low - 1.5 * math.exp(down * skew) * (high - low), rel=1e-9)
+    assert fences["upper"] == approx(high + 1.5 * math.exp(up * skew) * (high - low), rel=1e-9)
 
 
 @pytest.mark.parametrize("name", ["chem", "rivers", "aircondit"])
