@@ -13,6 +13,8 @@ if TYPE_CHECKING:
     import pyarrow as pa
 
 NULL = "NULL"
+MOST_ITEMS = 100  # of a list
+MOST_CHARACTERS = 2_000
 # What a terminal would obey instead of showing: escape sequences, line ends, direction marks.
 _UNSEEN = re.compile("[\x00-\x1f\x7f-\x9f\u200e\u200f\u2028-\u202e\u2066-\u2069\ud800-\udfff]")
 _NAMED = {"\n": "\\n", "\t": "\\t", "\r": "\\r"}
@@ -46,33 +48,39 @@ class Column:
 def columns_of(table: "pa.Table") -> list[Column]:
     """Every column of an Arrow table as texts; a record takes a column for each of its fields."""
     columns = []
-    for i, field in enumerate(table.schema):
-        columns += _columns(field.name, field.type, table.column(i).to_pylist())
+    for field, column in zip(table.schema, table.columns, strict=True):
+        columns += _columns(field.name, column)
     return columns
 
 
-def _columns(name: str, kind: "pa.DataType", values: list[Any]) -> list[Column]:
+def _columns(name: str, column: "pa.ChunkedArray") -> list[Column]:
     from pyarrow import types
 
-    if not types.is_struct(kind) or kind.num_fields == 0:
-        return [_column(name, kind, values)]
+    if not types.is_struct(column.type) or column.type.num_fields == 0:
+        return [_column(name, column)]
     columns = []
-    for field in kind:
-        parts = [None if value is None else value[field.name] for value in values]
-        columns += _columns(f"{name}.{field.name}", field.type, parts)
+    for field, part in zip(column.type, column.flatten(), strict=True):
+        columns += _columns(f"{name}.{field.name}", part)
     return columns
 
 
-def _column(name: str, kind: "pa.DataType", values: list[Any]) -> Column:
+def _column(name: str, column: "pa.ChunkedArray") -> Column:
+    from midspread.engine.column_texts import plain_texts
     from pyarrow import types
 
-    nulls = frozenset(i for i, value in enumerate(values) if value is None)
-    is_number = bool(types.is_integer(kind) or types.is_floating(kind) or types.is_decimal(kind))
-    is_measure = bool(types.is_nested(kind) or (is_number and not types.is_integer(kind)))
-    cells = texts(values)
+    kind = column.type
+    is_whole = types.is_integer(kind)
+    is_number = bool(is_whole or types.is_floating(kind) or types.is_decimal(kind))
+    if is_number or types.is_nested(kind):
+        cells = texts(column.to_pylist())
+    else:
+        spelt = [text for chunk in column.chunks for text in plain_texts(chunk)]
+        cells = [NULL if text is None else _told_apart(visible(text)) for text in spelt]
+    nulls = frozenset(i for i, is_null in enumerate(column.is_null().to_pylist()) if is_null)
     for row in nulls:
         cells[row] = NULL
-    return Column(visible(name), cells, nulls, is_number, is_measure)
+    is_measure = bool(types.is_nested(kind) or (is_number and not is_whole))
+    return Column(visible(name), [_cut(cell) for cell in cells], nulls, is_number, is_measure)
 
 
 def texts(values: Sequence[Any]) -> list[str]:
@@ -82,13 +90,7 @@ def texts(values: Sequence[Any]) -> list[str]:
         return whole_texts(values)
     if given and all(isinstance(v, float) for v in given):
         return decimal_texts(values)
-    return ["" if value is None else _plain(value) for value in values]
-
-
-def _plain(value: Any) -> str:
-    if isinstance(value, str):
-        return _told_apart(visible(value))
-    return _text(value)
+    return ["" if value is None else _text(value) for value in values]
 
 
 def _text(value: Any) -> str:
@@ -117,11 +119,14 @@ def _text(value: Any) -> str:
 
 
 def _list_text(values: list[Any]) -> str:
+    left_out = len(values) - MOST_ITEMS
+    values = values[:MOST_ITEMS]
+    more = [f"and {left_out:,} more"] if left_out > 0 else []
     if len(values) > 1 and all(isinstance(value, dict) for value in values):
-        return _records_text(values)
+        return "\n".join([_records_text(values), *more])
     if values and all(isinstance(v, int | float) and not isinstance(v, bool) for v in values):
-        return "[" + ", ".join(texts(values)) + "]"
-    return "[" + ", ".join(_text(value) for value in values) + "]"
+        return "[" + ", ".join([*texts(values), *more]) + "]"
+    return "[" + ", ".join([*(_text(value) for value in values), *more]) + "]"
 
 
 def _records_text(records: list[dict[str, Any]]) -> str:
@@ -151,3 +156,10 @@ def _told_apart(text: str) -> str:
     if text == NULL or text != text.strip():
         return f"'{text}'"
     return text
+
+
+def _cut(text: str) -> str:
+    """A text that does not flood the screen."""
+    if len(text) <= MOST_CHARACTERS:
+        return text
+    return f"{text[:MOST_CHARACTERS]}… ({len(text):,} characters)"

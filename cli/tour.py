@@ -13,6 +13,7 @@ from midspread.cli.numbers import count_text
 from midspread.cli.options import Count, Settings, engine_options
 from midspread.cli.screen import Screen, result_console
 from midspread.cli.tour_steps import NEXT, STEPS, WAREHOUSE, Step
+from midspread.engine.errors import UsageError
 
 if TYPE_CHECKING:
     from midspread.demo_db import Demo
@@ -51,7 +52,13 @@ def tour(folder: Path, visits: int, settings: Settings) -> None:
     much it spreads and which groups differ, a step at a time: plain words, the SQL, the answer.
     """
     from midspread.demo_db import build
+    from midspread.demo_db.building import FEWEST_VISITS, MOST_VISITS
 
+    if not FEWEST_VISITS <= visits <= MOST_VISITS:
+        raise UsageError(
+            f"tour: --visits takes a whole number from {FEWEST_VISITS:,} to {MOST_VISITS:,}, "
+            f"got {visits}; leave it out for {DEFAULT_VISITS:,}."
+        )
     console = result_console()
     _introduce(console, folder, visits)
     with Screen(quiet=True) as screen:

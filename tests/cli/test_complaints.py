@@ -76,6 +76,7 @@ def test_the_traceback_comes_only_when_asked_for(run: Run, monkeypatch: pytest.M
         (["query", "SELECT 1", "--file", "x.sql"], "and both are given; give one of them."),
         (["query", "SELECT 1", "--replace"], "query: --replace goes with --out FILE"),
         (["tour", "--visits", "few"], "tour: --visits: it takes a whole number"),
+        (["tour", "--visits", "10"], "tour: --visits takes a whole number from 1,000"),
         (["functions", "zebra"], "functions: nothing here is called 'zebra'"),
         (["functions", "trimed_mean"], "did you mean trimmed_mean"),
         (["show", " "], "show: the name is empty"),

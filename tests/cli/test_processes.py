@@ -11,8 +11,9 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
-import pexpect
 import pytest
+
+pexpect = pytest.importorskip("pexpect")
 
 Spawn = Callable[..., "subprocess.CompletedProcess[str]"]
 

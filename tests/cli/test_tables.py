@@ -79,12 +79,24 @@ def test_a_list_of_records_is_a_small_table() -> None:
         ("DATE '2031-03-07'", "2031-03-07"),
         ("TIMESTAMP '2031-03-07 14:02:00'", "2031-03-07 14:02:00"),
         ("1234567.50::DECIMAL(12,2)", "1,234,567.50"),
-        ("'\\x00\\xff'::BLOB", "0x00ff"),
+        ("INTERVAL 3 DAY", "3 days"),
+        ("'x'::ENUM('x', 'y')", "x"),
+        ("MAP {'k': 1.5::DOUBLE}", "[k: 1.5]"),
+        ("[[1, 2], [3]]", "[[1, 2], [3]]"),
+        ("{'a': [{'b': 1}]}", "[{b: 1}]"),
+        ("'4ac7a9e9-607c-4c8a-84f3-843f0191e3fd'::UUID", "4ac7a9e9-607c-4c8a-84f3-843f0191e3fd"),
         ("1::HUGEINT", "1"),
     ],
 )
 def test_one_value_of_each_type(sql: str, shown: str) -> None:
     assert lines(f"SELECT {sql} AS v")[-1].strip() == shown
+
+
+def test_endless_values_are_cut_and_say_so() -> None:
+    assert lines("SELECT range(1000) AS v", width=9999)[-1].endswith("98, 99, and 900 more]")
+    shown = " ".join(lines("SELECT repeat('x', 5000) AS v")[2:])
+    assert shown.count("x") == 2000
+    assert "… (5,000 characters)" in " ".join(shown.split())
 
 
 def test_a_long_table_keeps_its_ends_and_says_what_it_left_out() -> None:
