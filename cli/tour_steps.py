@@ -44,7 +44,8 @@ ORDER BY trimmed_mean DESC"""
 
 MEAN_AND_ROBUST_AGAIN: Final = """\
 -- slowest first
-select route, count(dwell_s) AS n, avg(dwell_s) AS mean, trimmed_mean(dwell_s, 0.1) AS trimmed_mean,
+select route, count(dwell_s) AS n, avg(dwell_s) AS mean,
+       trimmed_mean(dwell_s, 0.1) AS trimmed_mean,
        stddev(dwell_s) AS sd, mad_scale(dwell_s) AS mad_scale
 from 'dwell/*.parquet' group by route order by trimmed_mean desc"""
 
@@ -54,8 +55,9 @@ STEPS: Final = (
         "Dwell is how long a bus stands at a stop, in seconds and tenths. Look for missing values, "
         "for zeros, and for one value repeated where none should repeat.",
         """\
-SELECT stop, n, n_null, n_zero, n_distinct, most_frequent, most_frequent_share
-FROM value_profile('dwell/*.parquet', columns := ['dwell_s'], by := 'stop')
+SELECT stop, n, n_null, n_zero, n_distinct,
+       most_frequent, most_frequent_share
+FROM value_profile('dwell/*.parquet', columns := 'dwell_s', by := 'stop')
 ORDER BY most_frequent_share DESC
 LIMIT 5""",
         "At L6-08 somebody rounds to five seconds. And zeros: no bus stops for no time at all, so "
@@ -84,8 +86,10 @@ WHERE route = 'L3'""",
         "robust_summary gives one row a group with two dozen figures; here a few of them, for the "
         "slowest groups. Beyond the fences lie values that deserve a look, not wrong ones.",
         """\
-SELECT route, day_part, n, median, trimmed_mean_10, mad_scale, fence_upper, n_outside
-FROM robust_summary('dwell/*.parquet', 'dwell_s', by := ['route', 'day_part'])
+SELECT route, day_part, n, median, trimmed_mean_10,
+       mad_scale, fence_upper, n_outside
+FROM robust_summary('dwell/*.parquet', 'dwell_s',
+                    by := ['route', 'day_part'])
 ORDER BY trimmed_mean_10 DESC
 LIMIT 8""",
         "The Schools Circular, L7, stands out in the afternoon, when the pupils leave all at once.",
@@ -97,10 +101,12 @@ LIMIT 8""",
         """\
 WITH visits AS (
     SELECT vehicle,
-           dwell_s - trimmed_mean(dwell_s, 0.1) OVER (PARTITION BY route) AS excess_s
+           dwell_s - trimmed_mean(dwell_s, 0.1) OVER (PARTITION BY route)
+               AS excess_s
     FROM 'dwell/*.parquet'
 )
-SELECT vehicle, model, depot, count(excess_s) AS n, trimmed_mean(excess_s, 0.1) AS excess_s
+SELECT vehicle, model, depot, count(excess_s) AS n,
+       trimmed_mean(excess_s, 0.1) AS excess_s
 FROM visits JOIN warehouse.vehicles USING (vehicle)
 GROUP BY ALL
 ORDER BY excess_s DESC
@@ -112,9 +118,9 @@ LIMIT 5""",
         "FILTER works as it does on avg: the trimmed mean with each way of paying.",
         """\
 SELECT route,
-       trimmed_mean(dwell_s) FILTER (WHERE payment = 'cash box')   AS cash_box,
-       trimmed_mean(dwell_s) FILTER (WHERE payment = 'tap reader') AS tap_reader,
-       tap_reader / cash_box                                       AS ratio
+       trimmed_mean(dwell_s) FILTER (payment = 'cash box')   AS cash_box,
+       trimmed_mean(dwell_s) FILTER (payment = 'tap reader') AS tap_reader,
+       tap_reader / cash_box                                 AS ratio
 FROM 'dwell/*.parquet'
 GROUP BY route
 ORDER BY ratio""",
@@ -125,10 +131,15 @@ ORDER BY ratio""",
         "A parameter may differ by group. On L3 layovers were booked as dwell, always at the upper "
         "end, so more is cut there.",
         """\
-WITH limits(route, share) AS (VALUES ('L1', 0.05), ('L3', 0.25), ('L9', 0.1))
-SELECT name, share, trimmed_mean(dwell_s, share) AS trimmed_mean,
+WITH limits(route, share) AS (
+    VALUES ('L1', 0.05), ('L3', 0.25), ('L9', 0.1)
+)
+SELECT name, share,
+       trimmed_mean(dwell_s, share)    AS trimmed_mean,
        trimmed_mean_se(dwell_s, share) AS se
-FROM 'dwell/*.parquet' JOIN limits USING (route) JOIN warehouse.routes USING (route)
+FROM 'dwell/*.parquet'
+JOIN limits USING (route)
+JOIN warehouse.routes USING (route)
 GROUP BY name, share
 ORDER BY name""",
         "Three routes, three shares, one query.",

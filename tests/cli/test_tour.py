@@ -64,6 +64,10 @@ def test_it_keeps_off_what_is_not_its_own(run: Run, tmp_path: Path) -> None:
     assert [path.name for path in tmp_path.iterdir()] == ["mine.txt"]
 
 
+def test_the_queries_fit_a_narrow_terminal() -> None:
+    assert max(len(line) for step in STEPS for line in step.sql.splitlines()) <= 80 - 4
+
+
 def test_six_to_eight_steps_and_the_last_asks_again() -> None:
     assert 6 <= len(STEPS) <= 8
     asked_before = [step.sql for step in STEPS[:-1]]
