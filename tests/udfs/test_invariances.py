@@ -149,6 +149,9 @@ def test_bounds(connection: duckdb.DuckDBPyConnection, x: list[float]) -> None:
             assert answer["lower"] <= answer["upper"]
         if function.name in SIGNED and answer is not None:
             assert -1.0 <= answer <= 1.0
+        if function.name == "l_moments":
+            assert answer["t3"] is None or -1.0 <= answer["t3"] <= 1.0
+            assert answer["t4"] is None or answer["t4"] <= 1.0
 
 
 @REPRODUCIBLE

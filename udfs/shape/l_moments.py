@@ -3,7 +3,7 @@
 import math
 from typing import Final
 
-from midspread.udfs.arithmetic.order_statistics import median_sorted
+from midspread.udfs.arithmetic.order_statistics import distance, median_sorted
 from midspread.udfs.arithmetic.running import add
 from midspread.udfs.arithmetic.sums import compensated_mean
 from midspread.udfs.declaring import Values, aggregate
@@ -31,14 +31,15 @@ def l_moments(x: Values, out: Values) -> None:
         Sorted values.
     out : array
         Takes l1 (the mean), l2 (the L-scale, half of Gini's mean difference), t3 (the
-        L-skewness) and t4 (the L-kurtosis); t3 and t4 lie between -1 and 1. l2 needs 2 values,
-        t3 needs 3 and t4 needs 4, else they are NULL, as are t3 and t4 where l2 is 0.
+        L-skewness, between -1 and 1) and t4 (the L-kurtosis, at most 1). l2 needs 2 values, t3
+        needs 3 and t4 needs 4, else they are NULL, as are t3 and t4 where l2 is 0.
 
     Notes
     -----
     Normal data have t3 = 0 and t4 = 0.1226, uniform data 0 and 0, exponential data 1/3 and 1/6.
     Far values count less than in the classic moments, but they count: one can carry l1 and l2
-    anywhere. With infinite values l1 is infinite or NaN, l2 infinite, and t3 and t4 are NaN.
+    anywhere. With infinite values l1 is infinite or NaN, l2 infinite, and t3 and t4 are NaN,
+    unless all values are equal.
 
     References
     ----------
@@ -49,7 +50,9 @@ def l_moments(x: Values, out: Values) -> None:
     if math.isinf(x[0]) or math.isinf(x[n - 1]):
         out[0] = x[0] + x[n - 1]
         if n > 1:
-            out[1] = x[n - 1] - x[0]
+            out[1] = distance(x[n - 1], x[0])
+        if x[0] == x[n - 1]:
+            return
         if n > 2:
             out[2] = math.nan
         if n > 3:
@@ -84,7 +87,8 @@ def l_moments(x: Values, out: Values) -> None:
     if l2 == 0.0:
         return
     if n > 2:
-        out[2] = (third + third_lost) * (n / (n - 1)) / (2.0 * (n - 2)) / l2
+        t3 = (third + third_lost) * (n / (n - 1)) / (2.0 * (n - 2)) / l2
+        out[2] = max(min(t3, 1.0), -1.0)  # rounding must not carry it past its bounds
     if n > 3:
         factor = (n / (n - 1)) * (n / (n - 2))
-        out[3] = (fourth + fourth_lost) * factor / (2.0 * (n - 3)) / l2
+        out[3] = min((fourth + fourth_lost) * factor / (2.0 * (n - 3)) / l2, 1.0)
