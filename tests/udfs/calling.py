@@ -47,12 +47,12 @@ def table(groups: Sequence[Group], weights: Sequence[Group] | None = None) -> pa
     for g, group in enumerate(groups):
         own = weights[g] if weights else [1.0] * len(group)
         rows += [(g, x, w) for x, w in zip(group, own, strict=True)] or [(g, None, None)]
-    g, x, w = (list(column) for column in zip(*rows, strict=True))
+    numbers = pa.float64()
     return pa.table(
         {
-            "g": pa.array(g, pa.int64()),
-            "x": pa.array(x, pa.float64()),
-            "w": pa.array(w, pa.float64()),
+            "g": pa.array([row[0] for row in rows], pa.int64()),
+            "x": pa.array([row[1] for row in rows], numbers),
+            "w": pa.array([row[2] for row in rows], numbers),
         }
     )
 
