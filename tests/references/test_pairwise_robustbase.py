@@ -68,7 +68,6 @@ ROBUSTBASE_TIED = {
 }
 
 
-
 def check(estimate: Estimate, values: tuple[float, ...], expected: tuple[float, ...]) -> None:
     qn, sn, mc = expected
     assert estimate("qn_scale", values) == pytest.approx(qn, rel=SINGLE)
