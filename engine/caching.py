@@ -14,6 +14,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Final
 
 import duckdb
+
 from midspread.engine.errors import (
     NotAStore,
     StoreDamaged,
@@ -50,7 +51,7 @@ class Question:
     key : str
         Under which its answer is kept.
     script : tuple of str
-        The definitions before it, and the query.
+        The definitions before it, and the query; settings are left out.
     inputs : Inputs
         The files, databases and views behind it.
     before : InputsState
@@ -99,10 +100,23 @@ class AnswerCache:
     def question(
         self,
         script: Sequence[str],
+        settings: Collection[str],
         connection: duckdb.DuckDBPyConnection,
         macros_possible: bool,
     ) -> Question | None:
-        """Look at what a query rests on; None when its answer can be neither found nor kept."""
+        """Look at what a query rests on; None when its answer can be neither found nor kept.
+
+        Parameters
+        ----------
+        script : sequence of str
+            The definitions before the query, and the query.
+        settings : collection of str
+            Those statements of it that only change a setting.
+        connection : duckdb.DuckDBPyConnection
+            The session's.
+        macros_possible : bool
+            Whether there may be macros that are not ours.
+        """
         if self._is_off:
             return None
         inputs = inputs_of(
@@ -116,7 +130,8 @@ class AnswerCache:
         if before.fingerprint is None:
             return None
         key = self._key(script, before, connection)
-        return Question(key, tuple(script), inputs, before)
+        asking = tuple(statement for statement in script if statement not in settings)
+        return Question(key, asking, inputs, before)
 
     def find(self, question: Question) -> KeptAnswer | None:
         """The kept answer, if there is one."""

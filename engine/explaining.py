@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from typing import Final
 
 import duckdb
+
 from midspread.engine.engine_errors import EngineError
 from midspread.engine.nearest import did_you_mean, nearest, nearest_file
 from midspread.engine.parsing import one_value, tokens

@@ -9,6 +9,7 @@ from collections.abc import Collection, Mapping
 from typing import Any, Final
 
 import duckdb
+
 from midspread.engine.errors import RefusedStatement
 from midspread.engine.harmless import (
     ALLOWED_SETTINGS,

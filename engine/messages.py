@@ -5,13 +5,14 @@ from collections.abc import Mapping
 from typing import TYPE_CHECKING
 
 import duckdb
+
 from midspread.engine.engine_errors import EngineError, in_full
 from midspread.engine.errors import Interrupted, MidspreadError
 from midspread.engine.explaining import Case, place
 from midspread.engine.parsing import NotParsed, one_value, tokens, unquoted
 from midspread.engine.sentences import SENTENCES
 from midspread.engine.statements import Statement
-from midspread.engine.wrong_calls import cause, is_about_a_call
+from midspread.engine.wrong_calls import cause, is_about_a_call, wrong_form
 from midspread.udfs import Function
 
 if TYPE_CHECKING:
@@ -60,12 +61,13 @@ class Messages:
         if found.python_error == "Stopped":
             return Interrupted(INTERRUPTED)
         if found.python_error == "ParameterError" or self._is_our_own(found.words):
-            return MidspreadError(found.words)
+            form = wrong_form(self._connection, self._functions, statement)
+            return MidspreadError(form or found.words)
         index = None
         if found.position is not None:
             index = statement.start + prepared.origin(found.position)
         if is_about_a_call(found, self._functions):
-            why = cause(self._connection, self._functions, statement.body_text)
+            why = cause(self._connection, self._functions, statement)
             if why is not None and why.error is None:
                 return MidspreadError(why.sentence)
             if why is not None and why.error is not None:

@@ -9,6 +9,7 @@ from types import TracebackType
 from typing import TYPE_CHECKING, Self, TypeVar
 
 import duckdb
+
 from midspread.engine.answer import Answer, Progress
 from midspread.engine.caching import AnswerCache, Question, when
 from midspread.engine.connecting import attach, checked_sources, connect
@@ -91,6 +92,7 @@ class Session:
             self._cache = self._open_cache(folder or Path(), store)
         self._are_sources_attached = False
         self._definitions: list[str] = []
+        self._settings: set[str] = set()
         self._pending: list[tuple[str, Statement]] = []
         self._has_macros = bool(self._sources)
 
@@ -203,6 +205,8 @@ class Session:
         if text in self._definitions:
             self._definitions.remove(text)  # said again, as a repeated script does
         self._definitions.append(text)
+        if statement.kind is Kind.SETTING and statement.name not in ("schema", "search_path"):
+            self._settings.add(text)
         self._pending.append((sql, statement))
 
     def _define_now(self, sql: str, statements: list[Statement]) -> None:
@@ -218,7 +222,9 @@ class Session:
         question = None
         if self._cache is not None and statement.kind is Kind.QUERY:
             script = [*self._definitions, statement.text]
-            question = self._cache.question(script, self._connection, self._has_macros)
+            question = self._cache.question(
+                script, self._settings, self._connection, self._has_macros
+            )
             kept = None if question is None or recompute else self._cache.find(question)
             if kept is not None:
                 self._notice(f"answered from the store, kept {when(kept.kept)}")
@@ -262,9 +268,7 @@ class Session:
             assert self._on_progress is not None
             self._on_progress(self._runner.progress(time.monotonic() - began))
 
-        try:
-            return run_interruptibly(
-                work, self._runner.stop, report if self._on_progress is not None else None
-            )
-        finally:
-            self._runner.allow()
+        self._runner.allow()  # a stop that came too late for one query is not meant for the next
+        return run_interruptibly(
+            work, self._runner.stop, report if self._on_progress is not None else None
+        )

@@ -10,12 +10,14 @@ from dataclasses import dataclass
 from typing import Final
 
 import duckdb
+
 from midspread.engine.engine_errors import EngineError, taken_apart
 from midspread.engine.parsing import NotParsed
 from midspread.engine.rewriting.edits import Edit, apply, origin, without_overlaps
 from midspread.engine.rewriting.filter_clause import condition
 from midspread.engine.rewriting.misfit import misfit
 from midspread.engine.rewriting.query import Call, Query
+from midspread.engine.statements import Statement
 from midspread.udfs import Function
 
 NUMBERS: Final = "a number (any integer type, DECIMAL, FLOAT or DOUBLE)"
@@ -36,28 +38,48 @@ def is_about_a_call(error: EngineError, functions: Mapping[str, Function]) -> bo
     return found is not None and (found[1] in functions or found[1] in ("_number", "_values"))
 
 
-def cause(
-    connection: duckdb.DuckDBPyConnection, functions: Mapping[str, Function], body: str
-) -> Cause | None:
-    """What is wrong with the first wrong call in a query; None when nothing is found.
-
-    The position of an error in it is an index into the body.
-    """
-    try:
-        query = Query(connection, body, functions)
-    except NotParsed:
-        return None
-    if query.text != body:
-        return None
-    for call in query.calls:
+def wrong_form(
+    connection: duckdb.DuckDBPyConnection, functions: Mapping[str, Function], statement: Statement
+) -> str | None:
+    """What is wrong with the form of the first misformed call in a statement, if one is."""
+    query = _query(connection, functions, statement)
+    for call in query.calls if query else ():
         sentence = misfit(call) if call.is_plain else None
         if sentence is not None:
-            return Cause(sentence)
+            return sentence
+    return None
+
+
+def cause(
+    connection: duckdb.DuckDBPyConnection, functions: Mapping[str, Function], statement: Statement
+) -> Cause | None:
+    """What is wrong with the first wrong call in a statement; None when nothing is found.
+
+    The position of an error in it is an index into the statement's body.
+    """
+    query = _query(connection, functions, statement)
+    sentence = wrong_form(connection, functions, statement)
+    if query is None or sentence is not None:
+        return None if sentence is None else Cause(sentence)
+    if statement.is_expression:
+        return None
     for call in query.calls:
         found = _wrong_argument(query, call)
         if found is not None:
             return found
     return None
+
+
+def _query(
+    connection: duckdb.DuckDBPyConnection, functions: Mapping[str, Function], statement: Statement
+) -> Query | None:
+    body = statement.body_text
+    text = f"SELECT ({body})" if statement.is_expression else body
+    try:
+        query = Query(connection, text, functions)
+    except NotParsed:
+        return None
+    return query if query.text == text else None
 
 
 def _wrong_argument(query: Query, call: Call) -> Cause | None:

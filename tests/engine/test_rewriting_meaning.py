@@ -6,6 +6,7 @@ from typing import Any, Final
 
 import duckdb
 import pytest
+
 from midspread.engine.rewriting import rewrite
 from midspread.udfs import functions
 

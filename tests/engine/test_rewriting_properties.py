@@ -6,6 +6,7 @@ from typing import Any, Final
 import duckdb
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
+
 from midspread.engine.rewriting import rewrite
 from midspread.udfs import functions
 
@@ -23,9 +24,9 @@ SOURCES: Final = (
 
 
 @st.composite
-def calls(draw: st.DrawFn) -> str:
-    """A call of one of our functions without OVER."""
-    column = draw(st.sampled_from(COLUMNS))
+def calls(draw: st.DrawFn, mostly: str = COLUMNS[0]) -> str:
+    """A call of one of our functions without OVER, more often than not on one column."""
+    column = draw(st.sampled_from((mostly, mostly, *COLUMNS)))
     call = draw(
         st.sampled_from(
             (
@@ -52,7 +53,7 @@ def calls(draw: st.DrawFn) -> str:
 @st.composite
 def grouped(draw: st.DrawFn) -> str:
     """A query with one row a group."""
-    items = draw(st.lists(calls(), min_size=1, max_size=5))
+    items = draw(st.lists(calls(draw(st.sampled_from(COLUMNS))), min_size=1, max_size=5))
     keys = draw(st.lists(st.sampled_from(KEYS), max_size=2, unique=True))
     sql = f"SELECT {', '.join([*keys, *items])} FROM {draw(st.sampled_from(SOURCES))}"
     if draw(st.booleans()):
