@@ -65,8 +65,9 @@ def _columns(name: str, column: "pa.ChunkedArray") -> list[Column]:
 
 
 def _column(name: str, column: "pa.ChunkedArray") -> Column:
-    from midspread.engine.column_texts import plain_texts
     from pyarrow import types
+
+    from midspread.engine.column_texts import plain_texts
 
     kind = column.type
     is_whole = types.is_integer(kind)

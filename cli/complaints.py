@@ -5,6 +5,7 @@ import sys
 from typing import Final
 
 import click
+
 from midspread.engine.errors import MidspreadError
 
 DONE: Final = 0

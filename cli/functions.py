@@ -5,12 +5,14 @@ from collections.abc import Mapping
 from typing import TYPE_CHECKING
 
 import click
+
 from midspread.cli.help import HelpfulCommand
 from midspread.engine.errors import UsageError
 
 if TYPE_CHECKING:
-    from midspread.udfs import Function
     from rich.console import Console
+
+    from midspread.udfs import Function
 
 
 @click.command(
@@ -77,10 +79,11 @@ def _chosen(word: str | None, known: Mapping[str, "Function"]) -> list[str]:
 
 
 def _print_all(console: "Console", known: Mapping[str, "Function"]) -> None:
+    from rich.text import Text
+
     from midspread.cli.reference import WIDEST, families, list_lines
     from midspread.cli.tables import FAINT, HEAD, INDENT, print_lines
     from midspread.cli.wrapping import wrapped
-    from rich.text import Text
 
     for heading, members in families(known.values()):
         print_lines(console, [Text(heading, style=HEAD)])
@@ -94,22 +97,24 @@ def _print_all(console: "Console", known: Mapping[str, "Function"]) -> None:
 
 
 def _print_found(console: "Console", word: str, found: list["Function"]) -> None:
+    from rich.text import Text
+
     from midspread.cli.reference import list_lines
     from midspread.cli.tables import HEAD, print_lines
-    from rich.text import Text
 
     print_lines(console, [Text(f"To do with {word}, nearest first", style=HEAD)])
     print_lines(console, list_lines(found, console.width))
 
 
 def _print_entry(console: "Console", function: "Function") -> None:
+    from rich.text import Text
+
     from midspread.cli.options import Settings
     from midspread.cli.reference import entry_lines, example_query
     from midspread.cli.sample import ABOUT, with_sample
     from midspread.cli.screen import Screen
     from midspread.cli.tables import FAINT, INDENT, print_lines, print_table
     from midspread.cli.wrapping import wrapped
-    from rich.text import Text
 
     print_lines(console, entry_lines(function, console.width))
     query = example_query(function)

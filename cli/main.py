@@ -7,6 +7,7 @@ from collections.abc import Sequence
 from typing import Any, NoReturn
 
 import click
+
 from midspread.cli.complaints import DONE, report
 from midspread.cli.help import WIDEST, write_command_list, write_options, write_usage
 

@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 import click
+
 from midspread.cli.help import HelpfulCommand
 from midspread.cli.options import Count, Settings, attach_option, engine_options
 from midspread.cli.screen import Screen, result_console

@@ -4,10 +4,11 @@ import re
 from collections.abc import Iterable, Iterator, Mapping
 from typing import TYPE_CHECKING, Any, Final
 
+from rich.text import Text
+
 from midspread.cli.numbers import single_text
 from midspread.cli.tables import FAINT, HEAD, INDENT
 from midspread.cli.wrapping import longest, wrapped
-from rich.text import Text
 
 if TYPE_CHECKING:
     from midspread.udfs import Function, Parameter

@@ -7,12 +7,14 @@ from types import TracebackType
 from typing import TYPE_CHECKING, Self
 
 import click
+
 from midspread.cli.numbers import count_text
 
 if TYPE_CHECKING:
-    from midspread.engine.session import Progress
     from rich.console import Console
     from rich.progress import Progress as ProgressDisplay
+
+    from midspread.engine.session import Progress
 
 # Whatever is quicker needs no bar.
 BAR_AFTER_SECONDS = 0.5

@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 import click
+
 from midspread.cli.cells import visible
 from midspread.cli.help import HelpfulCommand
 from midspread.cli.numbers import count_text, size_text
@@ -15,8 +16,9 @@ from midspread.cli.screen import Screen, result_console
 from midspread.engine.errors import MidspreadError, UsageError
 
 if TYPE_CHECKING:
-    from midspread.engine.session import Session
     from rich.console import Console
+
+    from midspread.engine.session import Session
 
 FIRST_ROWS = 10
 # Counting the rows of these would mean reading all of them.
@@ -130,9 +132,10 @@ def _row_count(session: "Session", name: str, source: str) -> str:
 def _show_what_there_is(
     console: "Console", settings: Settings, sources: Mapping[str, Path]
 ) -> None:
+    from rich.text import Text
+
     from midspread.cli.store import store_lines
     from midspread.cli.tables import HEAD, print_lines
-    from rich.text import Text
 
     lines = [Text("The store of kept answers", style=HEAD), *store_lines(settings.store), Text()]
     lines.append(Text("Sources", style=HEAD))
@@ -145,8 +148,9 @@ def _show_what_there_is(
 
 
 def _head(console: "Console", name: str, about: str) -> None:
-    from midspread.cli.tables import FAINT, HEAD, print_lines
     from rich.text import Text
+
+    from midspread.cli.tables import FAINT, HEAD, print_lines
 
     line = Text(visible(name), style=HEAD)
     if about:
@@ -155,7 +159,8 @@ def _head(console: "Console", name: str, about: str) -> None:
 
 
 def _remark(console: "Console", words: str) -> None:
-    from midspread.cli.tables import FAINT, print_lines
     from rich.text import Text
+
+    from midspread.cli.tables import FAINT, print_lines
 
     print_lines(console, [Text(), Text(words, style=FAINT)])

@@ -5,14 +5,16 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 import click
+
 from midspread.cli.cells import visible
 from midspread.cli.help import HelpfulCommand
 from midspread.cli.numbers import count_text, size_text
 from midspread.cli.options import store_option
 
 if TYPE_CHECKING:
-    from midspread.engine.store.store import Store
     from rich.text import Text
+
+    from midspread.engine.store.store import Store
 
 ACTIONS = ("check", "pack", "clear-answers")
 
@@ -52,8 +54,9 @@ def store(action: str | None, store: Path | None) -> None:
 
 def store_lines(named: Path | None) -> "list[Text]":
     """What to say about the store, whether it exists yet or not."""
-    from midspread.cli.tables import FAINT
     from rich.text import Text
+
+    from midspread.cli.tables import FAINT
 
     path = _place(named)
     if not path.exists():

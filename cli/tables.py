@@ -8,12 +8,13 @@ from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
-from midspread.cli.cells import Column, columns_of
-from midspread.cli.numbers import count_text
-from midspread.cli.wrapping import header_lines, longest, wrapped
 from rich.cells import cell_len
 from rich.console import Console
 from rich.text import Text
+
+from midspread.cli.cells import Column, columns_of
+from midspread.cli.numbers import count_text
+from midspread.cli.wrapping import header_lines, longest, wrapped
 
 if TYPE_CHECKING:
     import pyarrow as pa

@@ -8,6 +8,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 import click
+
 from midspread.cli.help import HelpfulCommand
 from midspread.cli.numbers import count_text
 from midspread.cli.options import Count, Settings, engine_options
@@ -16,9 +17,10 @@ from midspread.cli.tour_steps import NEXT, STEPS, WAREHOUSE, Step
 from midspread.engine.errors import UsageError
 
 if TYPE_CHECKING:
+    from rich.console import Console
+
     from midspread.demo_db import Demo
     from midspread.engine.session import Session
-    from rich.console import Console
 
 DEFAULT_FOLDER = Path("larkmoor")
 DEFAULT_VISITS = 2_000_000
@@ -99,8 +101,9 @@ def _say_built(console: "Console", demo: "Demo", seconds: float) -> None:
 
 def _take(console: "Console", screen: Screen, session: "Session", number: int, step: Step) -> None:
     """Show one step: the question, the SQL, the answer, what it says."""
-    from midspread.cli.tables import HEAD, INDENT, print_lines, print_table
     from rich.text import Text
+
+    from midspread.cli.tables import HEAD, INDENT, print_lines, print_table
 
     console.print()
     print_lines(console, [Text(f"{number} of {len(STEPS)}  {step.title}", style=HEAD)])
@@ -119,8 +122,9 @@ def _take(console: "Console", screen: Screen, session: "Session", number: int, s
 
 
 def _conclude(console: "Console", folder: Path) -> None:
-    from midspread.cli.tables import FAINT, HEAD, print_lines
     from rich.text import Text
+
+    from midspread.cli.tables import FAINT, HEAD, print_lines
 
     console.print()
     print_lines(
@@ -141,9 +145,10 @@ def _conclude(console: "Console", folder: Path) -> None:
 
 
 def _paragraph(console: "Console", words: str, style: str = "") -> None:
+    from rich.text import Text
+
     from midspread.cli.tables import INDENT, print_lines
     from midspread.cli.wrapping import wrapped
-    from rich.text import Text
 
     room = min(console.width, 100) - INDENT
     print_lines(console, [Text(line, style=style) for line in wrapped(words, room)])

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import duckdb
+
 from midspread.demo_db import folders, truth
 from midspread.demo_db.folders import DemoError
 from midspread.demo_db.generator import VISIT_COLUMNS, equip

@@ -11,6 +11,7 @@ from importlib.resources import files
 from string import Template
 
 import duckdb
+
 from midspread.demo_db import town, truth
 
 VISIT_COLUMNS = (

@@ -8,6 +8,7 @@ from pathlib import Path
 from typing import Final
 
 import duckdb
+
 from midspread.engine.errors import MidspreadError, UsageError
 from midspread.engine.parsing import literal, quoted
 

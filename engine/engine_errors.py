@@ -6,6 +6,7 @@ from dataclasses import dataclass, field
 from typing import Any, Final
 
 import duckdb
+
 from midspread.engine.parsing import ByteOffsets
 
 _JSON: Final = re.compile(r"\{.*\}\s*$", re.DOTALL)

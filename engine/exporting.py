@@ -127,8 +127,9 @@ def _write_text(form: str) -> Callable[["pa.Table", IO[bytes]], None]:
 
 def _write_parquet(table: "pa.Table", file: IO[bytes]) -> None:
     import pyarrow as pa
-    from midspread.engine.column_texts import unique_names
     from pyarrow import parquet
+
+    from midspread.engine.column_texts import unique_names
 
     columns = [
         column if _fits_parquet(column.type) else _as_texts(column) for column in table.columns
@@ -149,6 +150,7 @@ def _fits_parquet(kind: "pa.DataType") -> bool:
 
 def _as_texts(column: "pa.ChunkedArray") -> "pa.ChunkedArray":
     import pyarrow as pa
+
     from midspread.engine.column_texts import plain_texts
 
     pieces = [pa.array(plain_texts(piece), pa.string()) for piece in column.chunks]

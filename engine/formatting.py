@@ -6,9 +6,10 @@ from collections.abc import Callable, Iterator
 from typing import TextIO
 
 import pyarrow as pa
+from pyarrow import types
+
 from midspread.engine.column_texts import Texts, json_object, json_texts, plain_texts, unique_names
 from midspread.engine.errors import UsageError
-from pyarrow import types
 
 FORMATS = ("csv", "json", "ndjson", "markdown")
 _BATCH_ROWS = 16_384

@@ -8,6 +8,7 @@ import re
 from typing import Final
 
 import duckdb
+
 from midspread.engine.parsing import NotParsed, Token, Tree, brackets, parse, tokens
 
 _OPENED: Final = "(/* _midspread_pivot */ "

@@ -6,6 +6,7 @@ from functools import cached_property
 from typing import TYPE_CHECKING, Final, TypeVar
 
 import duckdb
+
 from midspread.engine.answer import Progress
 from midspread.engine.parsing import NotParsed
 from midspread.engine.statements import Kind, Statement
@@ -13,6 +14,7 @@ from midspread.udfs import Function
 
 if TYPE_CHECKING:
     import pyarrow as pa
+
     from midspread.engine.messages import Messages
     from midspread.engine.rewriting import Rewritten
     from midspread.udfs import Control

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from enum import Enum
 
 import duckdb
+
 from midspread.engine.errors import MidspreadError
 from midspread.engine.parsing import Token, brackets, tokens, unquoted
 

@@ -7,9 +7,10 @@ from decimal import Decimal
 from typing import IO, TYPE_CHECKING, Any
 
 import pyarrow as pa
+from pyarrow import types
+
 from midspread.engine.column_texts import plain_texts
 from midspread.engine.errors import MidspreadError
-from pyarrow import types
 
 if TYPE_CHECKING:
     from openpyxl.worksheet._write_only import WriteOnlyWorksheet

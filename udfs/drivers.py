@@ -11,6 +11,7 @@ from typing import Any, Final
 
 import numpy as np
 import numpy.typing as npt
+
 from midspread.udfs.compiling import compile_driver
 from midspread.udfs.declaring import Function, Values, compiled
 

@@ -15,6 +15,7 @@ from typing import Any, Final
 import duckdb
 import numpy as np
 import pyarrow as pa
+
 from midspread.udfs.catalogue import functions
 from midspread.udfs.declaring import (
     NULL,

@@ -11,6 +11,7 @@ from typing import Any, Final
 import numpy as np
 import numpy.typing as npt
 import pyarrow as pa
+
 from midspread.udfs.declaring import Values
 
 _EXACT_WHOLE: Final = 2**53

@@ -17,6 +17,7 @@ from typing import Final
 
 import numpy as np
 import numpy.typing as npt
+
 from midspread.udfs.compiling import compile_driver
 from midspread.udfs.declaring import Values
 from midspread.udfs.drivers import DONE, STOP, Indices

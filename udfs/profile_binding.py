@@ -8,6 +8,7 @@ from typing import Any, Final
 
 import numpy as np
 import pyarrow as pa
+
 from midspread.udfs.declaring import NULL, Values
 from midspread.udfs.drivers import ranked_driver, summary_driver
 from midspread.udfs.exact_numbers import exact_numbers

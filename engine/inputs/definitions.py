@@ -4,6 +4,7 @@ from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass, field
 
 import duckdb
+
 from midspread.engine.inputs.scanning import Mentions, mentions_of, mentions_of_table_text
 
 

@@ -19,6 +19,7 @@ from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 
 import duckdb
+
 from midspread.engine.inputs.definitions import meaning_of, own_names, own_table_functions
 from midspread.engine.inputs.files import (
     FINE_GRAIN_NS,

@@ -3,6 +3,7 @@
 from collections.abc import Collection, Sequence
 
 import duckdb
+
 from midspread.engine.inputs.definitions import meaning_of, own_names, own_table_functions
 from midspread.engine.inputs.scanning import FILE_READERS, TABLE_NAMERS, mentions_of
 from midspread.engine.inputs.tokens import Token, tokens_of

@@ -11,6 +11,7 @@ from importlib.metadata import PackageNotFoundError, version
 from typing import TYPE_CHECKING
 
 import duckdb
+
 from midspread.engine.errors import StoreError, UsageError
 from midspread.engine.store.layout import creating_shelf, shelf_table
 from midspread.engine.store.serialising import from_bytes, to_bytes

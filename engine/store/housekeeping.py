@@ -8,6 +8,7 @@ from datetime import datetime, timedelta
 from pathlib import Path
 
 import duckdb
+
 from midspread.engine.errors import StoreError
 from midspread.engine.store.answers import EPOCH, Answers
 from midspread.engine.store.layout import ALIAS, STORAGE_VERSION, shelf_table

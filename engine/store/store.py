@@ -8,6 +8,7 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import duckdb
+
 from midspread.engine.errors import NotAStore, StoreDamaged, StoreError, StoreTooNew
 from midspread.engine.publishing import publish
 from midspread.engine.store.layout import ALIAS, FORMAT, PROGRAM, STORAGE_VERSION, creating

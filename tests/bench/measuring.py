@@ -9,9 +9,10 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import duckdb
-from midspread.engine import Session
 from rich.console import Console
 from rich.table import Table
+
+from midspread.engine import Session
 
 GROUPS = {"1,000 groups": "few", "200,000 groups": "many"}
 """Grouping columns of the benchmark table by what they mean."""

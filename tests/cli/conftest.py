@@ -9,6 +9,7 @@ from pathlib import Path
 
 import pytest
 from click.testing import CliRunner, Result
+
 from midspread.cli.main import application
 from midspread.demo_db import build
 

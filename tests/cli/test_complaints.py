@@ -5,6 +5,7 @@ from collections.abc import Callable
 import click
 import pytest
 from click.testing import Result
+
 from midspread.cli.complaints import report
 from midspread.demo_db import DemoError
 from midspread.engine.errors import Interrupted, MidspreadError, UsageError

@@ -1,6 +1,7 @@
 """Functions found by the words an analyst may use."""
 
 import pytest
+
 from midspread.cli.function_search import SYNONYMS, find, nearest
 from midspread.udfs import functions
 

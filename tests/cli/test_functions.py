@@ -6,6 +6,7 @@ from collections.abc import Callable
 import duckdb
 import pytest
 from click.testing import Result
+
 from midspread.cli.reference import as_record, example_query, sections
 from midspread.cli.sample import with_sample
 from midspread.udfs import functions, register

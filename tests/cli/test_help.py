@@ -7,6 +7,7 @@ from importlib.metadata import version
 import click
 import pytest
 from click.testing import Result
+
 from midspread.cli.main import COMMANDS, application
 from midspread.cli.tour_steps import NEXT
 

@@ -5,6 +5,7 @@ import math
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+
 from midspread.cli.numbers import (
     count_text,
     decimal_texts,

@@ -6,10 +6,11 @@ import re
 import duckdb
 import pyarrow as pa
 import pytest
-from midspread.cli.tables import excerpt, laid_out, print_table
-from midspread.cli.wrapping import header_lines, wrapped
 from rich.cells import cell_len
 from rich.console import Console
+
+from midspread.cli.tables import excerpt, laid_out, print_table
+from midspread.cli.wrapping import header_lines, wrapped
 
 
 def answer(sql: str) -> pa.Table:

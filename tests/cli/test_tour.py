@@ -6,6 +6,7 @@ from pathlib import Path
 
 import pytest
 from click.testing import Result
+
 from midspread.cli.tour_steps import NEXT, STEPS, WAREHOUSE
 from midspread.engine.session import Session
 

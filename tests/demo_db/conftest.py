@@ -2,6 +2,7 @@ from collections.abc import Iterator
 
 import duckdb
 import pytest
+
 from midspread.demo_db import Demo, build, create_truth_view
 
 VISITS = 60_000

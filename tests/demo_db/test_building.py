@@ -9,6 +9,7 @@ from pathlib import Path
 
 import duckdb
 import pytest
+
 from midspread.demo_db import Demo, DemoError, build
 
 

@@ -6,6 +6,7 @@ from statistics import NormalDist
 
 import duckdb
 import pytest
+
 from midspread.demo_db.generator import SALTS, equip
 
 WORD = 2**32

@@ -5,6 +5,7 @@ from pathlib import Path
 
 import duckdb
 import pytest
+
 from midspread.demo_db import Demo, build, create_truth_view
 from midspread.demo_db.generator import VISIT_COLUMNS
 

@@ -9,6 +9,7 @@ from statistics import NormalDist
 
 import duckdb
 import pytest
+
 from midspread.demo_db import truth
 from midspread.udfs import register
 

@@ -11,6 +11,7 @@ from typing import Any
 
 import duckdb
 import pytest
+
 from midspread.demo_db import truth
 
 Connection = duckdb.DuckDBPyConnection

@@ -6,6 +6,7 @@ from typing import Any, Final
 
 import duckdb
 import pytest
+
 from midspread.engine.session import Session
 from midspread.udfs import register
 

@@ -15,6 +15,7 @@ import openpyxl
 import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
+
 from midspread.engine import exporting, workbooks
 from midspread.engine.errors import MidspreadError, UsageError
 from midspread.engine.exporting import check_target, write_file

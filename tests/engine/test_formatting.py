@@ -17,6 +17,7 @@ import pyarrow as pa
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from midspread.engine.column_texts import (
     _few_time_texts,
     _many_time_texts,

@@ -7,6 +7,7 @@ from typing import Final
 
 import duckdb
 import pytest
+
 from midspread.engine.errors import MidspreadError, RefusedStatement
 from midspread.engine.session import Session
 

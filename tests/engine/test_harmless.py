@@ -1,6 +1,7 @@
 """The lists of functions compared with the engine that is installed."""
 
 import duckdb
+
 from midspread.engine.harmless import (
     ALLOWED_SETTINGS,
     HARMLESS_TABLE_FUNCTIONS,

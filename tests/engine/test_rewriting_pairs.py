@@ -5,6 +5,7 @@ from typing import Final, NamedTuple
 
 import duckdb
 import pytest
+
 from midspread.engine.rewriting import RULES, Rule
 from midspread.engine.rewriting.catalog import Catalog
 from midspread.engine.rewriting.edits import apply, without_overlaps

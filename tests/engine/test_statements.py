@@ -2,6 +2,7 @@
 
 import duckdb
 import pytest
+
 from midspread.engine.errors import MidspreadError
 from midspread.engine.statements import Kind, Statement, split, view_body
 

@@ -4,9 +4,10 @@ import decimal
 
 import numpy as np
 import pytest
+from scipy import special
+
 from midspread.udfs.arithmetic.beta import beta_masses
 from midspread.udfs.compiling import dispatcher
-from scipy import special
 
 
 def masses_and_expected(n, prob):

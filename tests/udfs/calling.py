@@ -9,6 +9,7 @@ from typing import Any, Final
 
 import duckdb
 import pyarrow as pa
+
 from midspread.udfs import Function, Parameter, functions
 
 AGGREGATES: Final = tuple(f for f in functions().values() if f.kind == "aggregate")

@@ -4,6 +4,7 @@ from collections.abc import Iterator
 
 import duckdb
 import pytest
+
 from midspread.udfs import register
 
 

@@ -10,8 +10,8 @@ from collections.abc import Iterator
 import duckdb
 import numpy as np
 import pytest
-from midspread.udfs import Function, functions, register
 
+from midspread.udfs import Function, functions, register
 from tests.udfs.calling import AGGREGATES, NAMES, answers, call, figures, value_for
 
 EVERY = tuple(functions().values())

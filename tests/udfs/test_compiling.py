@@ -12,8 +12,8 @@ from pathlib import Path
 import duckdb
 import numpy as np
 import pytest
-from midspread.udfs import Function, compiling, declaring
 
+from midspread.udfs import Function, compiling, declaring
 from tests.udfs.calling import AGGREGATES, NAMES, answers, bits, value_for
 
 FIGURES = """

@@ -8,8 +8,8 @@ from typing import Any
 import duckdb
 import numpy as np
 import pytest
-from midspread.udfs import Control, Function, grouped, register
 
+from midspread.udfs import Control, Function, grouped, register
 from tests.udfs.calling import AGGREGATES, NAMES, answers, bits, call
 
 each_function = pytest.mark.parametrize("function", AGGREGATES, ids=NAMES)

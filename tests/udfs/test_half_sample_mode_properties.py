@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from midspread.udfs.compiling import dispatcher
 from midspread.udfs.location.half_sample_mode import half_sample_mode
 

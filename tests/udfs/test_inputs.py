@@ -5,8 +5,8 @@ from decimal import Decimal
 
 import duckdb
 import pytest
-from midspread.udfs import Function, Parameter
 
+from midspread.udfs import Function, Parameter
 from tests.udfs.calling import AGGREGATES, NAMES, answers, bits, call, table, value_for
 
 each_function = pytest.mark.parametrize("function", AGGREGATES, ids=NAMES)

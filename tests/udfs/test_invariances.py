@@ -8,8 +8,8 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from midspread.udfs import Function
 
+from midspread.udfs import Function
 from tests.udfs.calling import AGGREGATES, NAMES, answers, bits, figures, rows
 
 each_function = pytest.mark.parametrize("function", AGGREGATES, ids=NAMES)

@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from midspread.udfs.compiling import dispatcher
 from midspread.udfs.declaring import NULL, null_mask
 from midspread.udfs.shape.l_moments import l_moments

@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from midspread.udfs import functions
 from midspread.udfs.compiling import dispatcher
 from midspread.udfs.shape.letter_values import LETTERS, letter_count, letter_values

@@ -6,10 +6,11 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from scipy import optimize
+
 from midspread.udfs.compiling import dispatcher
 from midspread.udfs.declaring import null_mask
 from midspread.udfs.location.m_estimates import bisquare_location, huber_location
-from scipy import optimize
 
 whole = st.lists(st.integers(-30, 30).map(float), min_size=1, max_size=40)
 real = st.lists(st.floats(-1e6, 1e6), min_size=1, max_size=60)

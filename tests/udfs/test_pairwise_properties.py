@@ -11,8 +11,8 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from midspread.udfs import functions
 
+from midspread.udfs import functions
 from tests.udfs.calling import answers
 
 Connection = duckdb.DuckDBPyConnection

@@ -5,8 +5,8 @@ import math
 import duckdb
 import numpy as np
 import pytest
-from midspread.udfs import Function
 
+from midspread.udfs import Function
 from tests.udfs.calling import AGGREGATES, NAMES, Group, answers, bits, call, figures, rows
 
 each_function = pytest.mark.parametrize("function", AGGREGATES, ids=NAMES)

@@ -6,9 +6,10 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from scipy.special import betainc
+
 from midspread.udfs.compiling import dispatcher
 from midspread.udfs.location.quantiles import harrell_davis, quantile_hf
-from scipy.special import betainc
 
 samples = st.lists(st.integers(-30, 30).map(float), min_size=1, max_size=40) | st.lists(
     st.floats(-1e6, 1e6), min_size=1, max_size=60

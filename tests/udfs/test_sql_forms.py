@@ -6,8 +6,8 @@ from pathlib import Path
 import duckdb
 import numpy as np
 import pytest
-from midspread.udfs import functions, register
 
+from midspread.udfs import functions, register
 from tests.udfs.calling import AGGREGATES, call
 
 VISITS = """

@@ -4,8 +4,8 @@ from pathlib import Path
 
 import duckdb
 import pytest
-from midspread.udfs import functions
 
+from midspread.udfs import functions
 from tests.udfs.table_calls import CALLS, EVERY, answer, complaint
 
 

@@ -5,8 +5,8 @@ from typing import Any
 
 import duckdb
 import pytest
-from midspread.udfs import functions
 
+from midspread.udfs import functions
 from tests.udfs.table_calls import CALLS, EVERY, answer
 
 SUMMARY = """

@@ -7,6 +7,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from midspread.udfs.compiling import dispatcher
 from midspread.udfs.declaring import null_mask
 from midspread.udfs.location.weighted import weighted_median, weighted_trimmed_mean

@@ -9,6 +9,7 @@ import math
 from typing import Final
 
 import numpy as np
+
 from midspread.udfs.declaring import Values, compiled
 
 NEGLIGIBLE: Final = 1e-20

@@ -12,6 +12,7 @@ import math
 from typing import Final
 
 import numpy as np
+
 from midspread.udfs.arithmetic.pair_tables import (
     DIFFERENCES,
     RATIOS,

@@ -20,6 +20,7 @@ from typing import Final
 
 import numpy as np
 import numpy.typing as npt
+
 from midspread.udfs.declaring import Values, compiled
 
 SUMS: Final = 0

@@ -113,16 +113,6 @@ def _mean_of_huge(x: Values, start: int, stop: int, more: int) -> float:
 
 
 @compiled
-def sum_of_squares(x: Values, start: int, stop: int, centre: float) -> float:
-    """Σ (x[i] − centre)² over start ≤ i < stop, corrected for the rounding of the centre.
-
-    The corrected two-pass form of Chan, Golub & LeVeque 1983.
-    """
-    squares, deviation = squares_from(x, start, stop, centre, 0.0)
-    return squares - deviation * deviation / (stop - start)
-
-
-@compiled
 def squares_from(
     x: Values, start: int, stop: int, origin: float, shift: float
 ) -> tuple[float, float]:

@@ -16,7 +16,7 @@ _ROUNDING: Final = 4 * 2.220446049250313e-16
     "last two",
     source="Robertson & Cryer 1974, Journal of the American Statistical Association 69, "
     "1012-1016; Bickel & Fruehwirth 2006, Computational Statistics & Data Analysis 50, 3500-3530",
-    breakdown="50 %",
+    breakdown="0.5",
     cost="O(n log n) time, O(n) memory",
     smallest_n=1,
     example="half_sample_mode(dwell_s)",

@@ -4,6 +4,7 @@ import math
 from typing import Final
 
 import numpy as np
+
 from midspread.udfs.arithmetic.order_statistics import (
     NORMAL_QUARTILE,
     median_absolute_deviation,
@@ -38,7 +39,7 @@ _BLOCK: Final = 256
     "the median where mad_scale is 0",
     source="Huber 1964, Annals of Mathematical Statistics 35, 73-101; "
     "k: Holland & Welsch 1977, Communications in Statistics A 6, 813-827",
-    breakdown="50 %",
+    breakdown="0.5",
     cost="O(n log n) time, O(n) memory",
     smallest_n=1,
     example="huber_location(dwell_s)",
@@ -158,7 +159,7 @@ def _moved_window(
     "within c and 0 beyond; the median where mad_scale is 0",
     source="Beaton & Tukey 1974, Technometrics 16, 147-185; "
     "c: Holland & Welsch 1977, Communications in Statistics A 6, 813-827",
-    breakdown="50 %",
+    breakdown="0.5",
     cost="O(n log n) time, O(n) memory",
     smallest_n=1,
     example="bisquare_location(dwell_s)",

@@ -4,6 +4,7 @@ import math
 from typing import Final
 
 import numpy as np
+
 from midspread.udfs.arithmetic.beta import beta_masses
 from midspread.udfs.arithmetic.order_statistics import between, quantile_7
 from midspread.udfs.arithmetic.running import add

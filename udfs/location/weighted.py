@@ -18,7 +18,7 @@ _ROUNDING: Final = 4 * 2.220446049250313e-16
     formula="the value with at most half of the total weight below it and at most half above; "
     "midway between two where the weight splits evenly",
     source="Edgeworth 1888, Philosophical Magazine 25, 184-191",
-    breakdown="50 % of the weight",
+    breakdown="0.5 of the weight",
     cost="O(n log n) time, O(n) memory",
     smallest_n=1,
     example="weighted_median(dwell_s, boardings)",

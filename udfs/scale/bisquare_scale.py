@@ -27,7 +27,7 @@ _BLOCK: Final = 128
     "abs(u) < 1, u = (x - M) / (c * MAD), M the median, MAD not scaled, n all values",
     source="Mosteller & Tukey 1977, Data Analysis and Regression; Lax 1985, Journal of the "
     "American Statistical Association 80, 736-741",
-    breakdown="50 %",
+    breakdown="0.5",
     cost="O(n log n) time, O(n) memory",
     smallest_n=2,
     example="bisquare_scale(dwell_s)",

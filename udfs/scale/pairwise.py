@@ -4,6 +4,7 @@ import math
 from typing import Final
 
 import numpy as np
+
 from midspread.udfs.arithmetic.order_statistics import distance
 from midspread.udfs.arithmetic.pair_selection import ordered_differences
 from midspread.udfs.arithmetic.quickselect import put_in_place

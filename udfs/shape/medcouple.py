@@ -4,6 +4,7 @@ import math
 from typing import Final
 
 import numpy as np
+
 from midspread.udfs.arithmetic.order_statistics import median_sorted
 from midspread.udfs.arithmetic.pair_selection import ordered_ratios
 from midspread.udfs.declaring import Values, aggregate, compiled

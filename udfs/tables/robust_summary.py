@@ -11,7 +11,7 @@ from midspread.udfs.arithmetic.order_statistics import (
     median_sorted,
     upper_fourth,
 )
-from midspread.udfs.arithmetic.sums import compensated_mean, sum_of_squares
+from midspread.udfs.arithmetic.sums import compensated_mean
 from midspread.udfs.declaring import Parameter, Values, compiled, table_function
 from midspread.udfs.location.m_estimates import huber_location
 from midspread.udfs.location.trimming import trimmed_mean, winsorized_mean
@@ -78,20 +78,19 @@ def summarise(x: Values, out: Values) -> None:
         out[:_OUTSIDE] = math.nan
         return
     low, middle, high = lower_fourth(x), median_sorted(x), upper_fourth(x)
-    mean = compensated_mean(x, 0, n)
     out[0] = x[0]
     out[1] = low
     out[2] = middle
     out[3] = high
     out[4] = x[n - 1]
-    out[5] = mean
+    out[5] = compensated_mean(x, 0, n)
     out[6] = trimmed_mean(x, 0.1)
     out[7] = trimmed_mean(x, 0.2)
     out[8] = winsorized_mean(x, 0.2)
     out[9] = huber_location(x, 1.345)
     out[11] = median_absolute_deviation(x, middle) / NORMAL_QUARTILE
     if n >= 2:
-        out[10] = math.sqrt(sum_of_squares(x, 0, n, mean) / (n - 1))
+        out[10] = winsorized_sd(x, 0.0)
         out[12] = winsorized_sd(x, 0.2)
         out[13] = trimmed_mean_se(x, 0.2)
         out[14] = bowley_skew(x)

@@ -4,6 +4,7 @@ import math
 from typing import Final
 
 import numpy as np
+
 from midspread.udfs.arithmetic.order_statistics import distance, fourth_depth, midpoint
 from midspread.udfs.declaring import Values, compiled
 
