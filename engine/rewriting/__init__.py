@@ -9,6 +9,7 @@ from dataclasses import dataclass
 from typing import Final
 
 import duckdb
+
 from midspread.engine.pivoting import insertions
 from midspread.engine.rewriting.catalog import Catalog
 from midspread.engine.rewriting.column_names import column_names

@@ -8,6 +8,7 @@ from collections.abc import Iterable, Mapping
 from typing import Any
 
 import duckdb
+
 from midspread.engine.parsing import Node, nodes
 from midspread.engine.rewriting.clauses import Clauses
 from midspread.engine.rewriting.query import Call, Query

@@ -3,6 +3,7 @@
 from functools import cached_property
 
 import duckdb
+
 from midspread.engine.harmless import HARMLESS_VOLATILE_FUNCTIONS
 
 

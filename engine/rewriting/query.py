@@ -5,6 +5,7 @@ from dataclasses import dataclass
 from functools import cached_property
 
 import duckdb
+
 from midspread.engine.parsing import (
     Node,
     Token,
