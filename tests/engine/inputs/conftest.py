@@ -7,6 +7,7 @@ from pathlib import Path
 
 import duckdb
 import pytest
+
 from midspread.engine.inputs import files
 
 

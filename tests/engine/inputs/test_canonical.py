@@ -6,6 +6,7 @@ import duckdb
 import pytest
 from hypothesis import HealthCheck, example, given, settings
 from hypothesis import strategies as st
+
 from midspread.engine.inputs.canonical import _FRAME_PHRASES, _PHRASES, KEYWORDS, canonical_sql
 from midspread.engine.inputs.tokens import tokens_of
 

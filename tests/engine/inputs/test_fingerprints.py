@@ -8,6 +8,7 @@ from pathlib import Path
 
 import duckdb
 import pytest
+
 from midspread.engine.inputs import files
 from midspread.engine.inputs.fingerprints import (
     FileState,

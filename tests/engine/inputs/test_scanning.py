@@ -1,6 +1,7 @@
 """What SQL mentions: paths where the engine would read files, names, computed paths."""
 
 import pytest
+
 from midspread.engine.inputs.scanning import mentions_of
 
 OURS = frozenset({"robust_summary", "trim_path"})

@@ -4,6 +4,7 @@ from pathlib import Path
 
 import duckdb
 import pytest
+
 from midspread.engine.inputs.volatile import uses_volatile, why_volatile
 
 Engine = duckdb.DuckDBPyConnection

@@ -12,6 +12,7 @@ from pathlib import Path
 import duckdb
 import pyarrow as pa
 import pytest
+
 from midspread.engine.store.answers import Answers
 from midspread.engine.store.store import Store
 

@@ -12,6 +12,7 @@ import pyarrow as pa
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from midspread.engine.errors import UsageError
 from midspread.engine.store import answers as answers_module
 from midspread.engine.store.answers import Answers, size_of

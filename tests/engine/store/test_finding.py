@@ -3,6 +3,7 @@
 from pathlib import Path
 
 import pytest
+
 from midspread.engine.store.finding import find_store
 
 

@@ -4,6 +4,7 @@ from pathlib import Path
 
 import duckdb
 import pytest
+
 from midspread.engine.errors import StoreBusy, StoreError
 from midspread.engine.store.answers import Answers
 from midspread.engine.store.housekeeping import check, pack, report

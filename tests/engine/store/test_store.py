@@ -9,6 +9,7 @@ from pathlib import Path
 
 import duckdb
 import pytest
+
 from midspread.engine.errors import (
     NotAStore,
     StoreBusy,
