@@ -20,6 +20,7 @@ from midspread.engine.rewriting.filter_clause import filter_clause
 from midspread.engine.rewriting.order_inside import order_inside
 from midspread.engine.rewriting.over_partition import over_partition
 from midspread.engine.rewriting.query import Query
+from midspread.engine.rewriting.query_text import query_text
 from midspread.engine.rewriting.shared_sort import shared_sort
 from midspread.engine.rewriting.window_call import window_call
 from midspread.udfs import Function
@@ -120,11 +121,18 @@ def rewrite(
         When a call of one of our functions has a form that cannot be computed.
     """
     query = Query(connection, text, functions)
-    if not query.calls:
-        return Rewritten(text)
-    catalog = Catalog(connection, frozenset(functions))
     passes = [_insertions_as_edits(query.text)]
     did_more = used_faster = False
+    within = query_text(
+        query, lambda inner: rewrite(connection, inner, functions, faster=faster).text
+    )
+    if within:
+        passes.append(tuple(within))
+        query = Query(connection, apply(query.text, within), functions)
+        did_more = used_faster = True
+    if not (query.calls or within):
+        return Rewritten(text)
+    catalog = Catalog(connection, frozenset(functions))
     for position, rule in enumerate(RULES):
         if not (rule.is_needed or faster) or (position == 0 and not keep_names):
             continue

@@ -36,6 +36,8 @@ _STEADY_TABLES: Final = frozenset(
     {
         "generate_series",
         "glob",
+        "json_each",
+        "json_tree",
         "parquet_scan",
         "range",
         "read_csv",
@@ -45,6 +47,7 @@ _STEADY_TABLES: Final = frozenset(
         "read_ndjson",
         "read_ndjson_auto",
         "read_parquet",
+        "unnest",
     }
 )
 PLAIN_JOINS: Final = ("REGULAR", "CROSS", "NATURAL")

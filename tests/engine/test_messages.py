@@ -156,3 +156,14 @@ def test_a_definition_that_fails_is_forgotten(session: Session) -> None:
     with pytest.raises(MidspreadError, match="dwel_s"):
         session.query("CREATE TEMP VIEW w AS SELECT dwel_s FROM visits; FROM w")
     assert session.query("CREATE TEMP VIEW w AS SELECT 1 AS a; FROM w").rows() == [(1,)]
+
+
+def test_a_full_disk() -> None:
+    with Session(use_store=False, memory="100MB", threads=2) as small:
+        small.query("SELECT 1")
+        small._connection.execute("SET max_temp_directory_size = '2MB'")
+        with pytest.raises(MidspreadError, match="the disk is full") as caught:
+            small.query(
+                "SELECT count(*) FROM (SELECT DISTINCT i, i::VARCHAR FROM range(4000000) r(i))"
+            )
+    assert "TMPDIR" in str(caught.value)

@@ -53,6 +53,16 @@ BY_DEFINITION: Final = {
         "PIVOT (SELECT route, direction, trimmed_mean(dwell_s) AS m FROM visits WHERE ramp_used "
         "GROUP BY ALL) ON direction USING first(m)",
     ),
+    "FILTER in a query handed over as text": (
+        "SELECT n, trimmed_mean_10 FROM robust_summary(tbl := '(SELECT stop, mad_scale(dwell_s) "
+        "FILTER (stop <> ''stop 1'') AS m FROM visits GROUP BY stop)', value := 'm')",
+        "SELECT count(*), trimmed_mean(m, 0.1) FROM (SELECT mad_scale(dwell_s) AS m FROM visits "
+        "WHERE stop <> 'stop 1' GROUP BY stop)",
+    ),
+    "DISTINCT in a query handed over as text": (
+        "FROM query('SELECT mad_scale(DISTINCT boardings) AS m FROM visits')",
+        "SELECT mad_scale(boardings) FROM (SELECT DISTINCT boardings FROM visits)",
+    ),
     "DISTINCT": (
         "SELECT route, trimmed_mean(DISTINCT boardings, 0.1), mad_scale(DISTINCT boardings) "
         "FROM visits GROUP BY 1",
