@@ -186,7 +186,9 @@ def _driver_cache(function: types.FunctionType, folder: Path) -> Any:
             version = f"{sys.version_info.major}{sys.version_info.minor}"
             return f"{function.__name__}.py{version}{abiflags}"
 
-    class DriverCache(caching.Cache):
+    untyped: Any = caching.Cache
+
+    class DriverCache(untyped):
         _impl_class: Any = Content
 
         def load_overload(self, sig: Any, target_context: Any) -> Any:

@@ -345,7 +345,8 @@ def aggregate_macro(function: Function) -> str:
     if function.columns == ("x", "w"):
         collected = ["_values_of_pairs(x, w)", "_values_of_pairs(w, x)"]
     else:
-        collected = ["_values(x)"]
+        # Not `_values(x)`: a macro within a macro does not work under OVER.
+        collected = ["list(x) FILTER (x IS NOT NULL)"]
     names = [parameter.name for parameter in function.parameters]
     call = f"_{function.name}({', '.join([*collected, *names])})"
     numbers = [f"{column} DOUBLE" for column in function.columns]
