@@ -14,6 +14,7 @@ from typing import Any, Final
 
 import duckdb
 import numpy as np
+import numpy.typing as npt
 import pyarrow as pa
 
 from midspread.udfs.catalogue import functions
@@ -220,7 +221,7 @@ class _Binding:
             tasks.append(Task(driver(function), own, function.smallest_n, column))
         run(groups, tasks, out, row_numbers(np.ones(count, np.int64)), self._control, self._threads)
         offsets = np.arange(count + 1, dtype=np.int32) * len(wanted)
-        return pa.ListArray.from_arrays(pa.array(offsets), numbers_or_null(out.reshape(-1)))
+        return pa.ListArray.from_arrays(arrow_view(offsets), numbers_or_null(out.reshape(-1)))
 
     def _summary(self, lists: Any, *, deep: tuple[str, ...]) -> pa.Array:
         """The figures of robust_summary; the deep ones come from the functions' own loops."""
@@ -245,10 +246,30 @@ def single_chunk(array: Any) -> Any:
     return array
 
 
+def numpy_view(array: pa.Array) -> np.ndarray[Any, Any]:
+    """Arrow numbers as a numpy array over the same memory; under a NULL stands anything.
+
+    Arrow's own to_numpy imports pandas, which takes longer than a small query.
+    """
+    kind = np.dtype(array.type.to_pandas_dtype())
+    buffer = array.buffers()[1]
+    if buffer is None:
+        return np.empty(0, kind)
+    return np.frombuffer(buffer, kind)[array.offset : array.offset + len(array)]
+
+
+def is_missing(array: pa.Array) -> npt.NDArray[np.bool_]:
+    """Where an Arrow array holds NULL."""
+    if not array.null_count:
+        return np.zeros(len(array), dtype=np.bool_)
+    bits = np.unpackbits(np.frombuffer(array.buffers()[0], np.uint8), bitorder="little")
+    return bits[array.offset : array.offset + len(array)] == 0
+
+
 def groups_of(lists: Any, weights: Any = None) -> Groups:
     """The groups behind Arrow lists; a NULL list is an empty group. Values are not copied."""
     lists = single_chunk(lists)
-    offsets = lists.offsets.to_numpy().astype(np.int64)
+    offsets = numpy_view(lists.offsets).astype(np.int64)
     values = _floats(lists.values)
     if weights is None:
         return Groups(values, offsets)
@@ -259,15 +280,15 @@ def groups_of(lists: Any, weights: Any = None) -> Groups:
 def _floats(array: pa.Array) -> Values:
     if array.null_count:
         raise ParameterError("a list handed to a statistic must hold no NULL; filter them first.")
-    return array.to_numpy(zero_copy_only=True)
+    return numpy_view(array)
 
 
 def _matrix(lists: pa.Array, count: int) -> Values:
     """Lists of equal length as a matrix, one column a group; NULL becomes the NULL marker."""
     values = lists.values
-    numbers = values.to_numpy(zero_copy_only=False).astype(np.float64)
+    numbers = numpy_view(values).astype(np.float64)
     if values.null_count:
-        numbers[values.is_null().to_numpy(zero_copy_only=False)] = NULL
+        numbers[is_missing(values)] = NULL
     return np.ascontiguousarray(numbers.reshape(count, -1).T)
 
 
@@ -276,8 +297,8 @@ def _parameter_rows(function: Function, arguments: Sequence[Any]) -> Values:
     rows = []
     for parameter, argument in zip(function.parameters, arguments, strict=True):
         array = single_chunk(argument)
-        missing = array.is_null().to_numpy(zero_copy_only=False)
-        values = array.to_numpy(zero_copy_only=False)
+        missing = is_missing(array)
+        values = np.where(missing, np.nan, numpy_view(array))
         parameter.check(function.name, values, missing)
         rows.append(values)
     return np.ascontiguousarray(rows, dtype=np.float64) if rows else np.empty((0, 1))
@@ -299,9 +320,29 @@ def _record_counts(function: Function, lengths: Any) -> Any:
     return np.array(counts, dtype=np.int64)[inverse]
 
 
+def arrow_view(
+    numbers: np.ndarray[Any, Any], missing: npt.NDArray[np.bool_] | None = None
+) -> pa.Array:
+    """A contiguous numpy array as Arrow numbers over the same memory, NULL where missing.
+
+    pa.array would import pandas.
+    """
+    validity = None
+    if missing is not None and missing.any():
+        validity = pa.py_buffer(np.packbits(~missing, bitorder="little"))
+    kind = pa.from_numpy_dtype(numbers.dtype)
+    return pa.Array.from_buffers(kind, numbers.size, [validity, pa.py_buffer(numbers)])
+
+
+def arrow_mask(flags: npt.NDArray[np.bool_]) -> pa.Array:
+    """Flags as an Arrow array of booleans."""
+    bits = pa.py_buffer(np.packbits(flags, bitorder="little"))
+    return pa.Array.from_buffers(pa.bool_(), flags.size, [None, bits])
+
+
 def numbers_or_null(numbers: Values) -> pa.Array:
     """An Arrow column in which the kernels' NULL marker is NULL."""
-    return pa.array(numbers, mask=null_mask(numbers))
+    return arrow_view(np.ascontiguousarray(numbers), null_mask(numbers))
 
 
 def _field_array(function: Function, name: str, numbers: Values) -> pa.Array:
@@ -313,14 +354,14 @@ def _field_array(function: Function, name: str, numbers: Values) -> pa.Array:
 
 def _records(function: Function, out: Values, missing: Any = None) -> pa.StructArray:
     arrays = [_field_array(function, name, out[:, i]) for i, name in enumerate(function.fields)]
-    mask = None if missing is None else pa.array(missing)
+    mask = None if missing is None else arrow_mask(missing)
     return pa.StructArray.from_arrays(arrays, names=list(function.fields), mask=mask)
 
 
 def _lists_of_records(function: Function, out: Values, rows: Any) -> pa.ListArray:
     empty = np.diff(rows) == 0
     return pa.ListArray.from_arrays(
-        pa.array(rows.astype(np.int32)), _records(function, out), mask=pa.array(empty)
+        arrow_view(rows.astype(np.int32)), _records(function, out), mask=arrow_mask(empty)
     )
 
 
