@@ -112,10 +112,8 @@ class Runner:
 
     def _equip(self) -> None:
         if self._control is None:
-            from midspread.engine.allocator import keep_freed_memory
             from midspread.udfs import Control, register
 
-            keep_freed_memory()
             control = Control()
             register(self._connection, control=control)
             self._connection.execute("CREATE OR REPLACE TEMP MACRO _number(v DOUBLE) AS v")
