@@ -9,7 +9,6 @@ from typing import Final
 
 import duckdb
 
-from midspread.engine.allocator import keep_freed_memory
 from midspread.engine.errors import MidspreadError, UsageError
 from midspread.engine.parsing import literal, quoted
 
@@ -48,7 +47,6 @@ def connect(*, memory: str | None, threads: int | None, owner: object) -> duckdb
         if threads < 1:
             raise UsageError(f"--threads must be a whole number from 1 up, got {threads}.")
         config["threads"] = threads
-    keep_freed_memory()  # before the engine starts threads, which would have arenas of their own
     try:
         connection = duckdb.connect(":memory:", config=config)
     except duckdb.Error:

@@ -13,7 +13,6 @@ from rich.console import Console
 from rich.table import Table
 
 from midspread.engine import Session
-from midspread.engine.allocator import keep_freed_memory
 
 GROUPS = {"1,000 groups": "few", "200,000 groups": "many"}
 """Grouping columns of the benchmark table by what they mean."""
@@ -31,12 +30,7 @@ class Figure:
 
 @contextlib.contextmanager
 def session_with_table(rows: int, *, threads: int = 2) -> Iterator[Session]:
-    """A session that keeps no answers, with the table ``bench.t(few, many, x)`` attached.
-
-    The allocator is set first, as in a process of the command line: the engine that makes the
-    table would otherwise start its threads before.
-    """
-    keep_freed_memory()
+    """A session that keeps no answers, with the table ``bench.t(few, many, x)`` attached."""
     with tempfile.TemporaryDirectory() as folder:
         path = Path(folder) / "bench.duckdb"
         with duckdb.connect(path) as connection:
