@@ -14,9 +14,16 @@ from typing import Any, Final
 
 import duckdb
 import numpy as np
-import numpy.typing as npt
 import pyarrow as pa
 
+from midspread.udfs.arrow_columns import (
+    arrow_mask,
+    arrow_view,
+    is_missing,
+    numbers_or_null,
+    numpy_view,
+    single_chunk,
+)
 from midspread.udfs.catalogue import functions
 from midspread.udfs.declaring import (
     NULL,
@@ -239,33 +246,6 @@ class _Binding:
         return pa.StructArray.from_arrays(arrays, names=fields)
 
 
-def single_chunk(array: Any) -> Any:
-    """The one Arrow array behind what DuckDB hands over."""
-    if isinstance(array, pa.ChunkedArray):
-        return array.chunk(0) if array.num_chunks == 1 else array.combine_chunks()
-    return array
-
-
-def numpy_view(array: pa.Array) -> np.ndarray[Any, Any]:
-    """Arrow numbers as a numpy array over the same memory; under a NULL stands anything.
-
-    Arrow's own to_numpy imports pandas, which takes longer than a small query.
-    """
-    kind = np.dtype(array.type.to_pandas_dtype())
-    buffer = array.buffers()[1]
-    if buffer is None:
-        return np.empty(0, kind)
-    return np.frombuffer(buffer, kind)[array.offset : array.offset + len(array)]
-
-
-def is_missing(array: pa.Array) -> npt.NDArray[np.bool_]:
-    """Where an Arrow array holds NULL."""
-    if not array.null_count:
-        return np.zeros(len(array), dtype=np.bool_)
-    bits = np.unpackbits(np.frombuffer(array.buffers()[0], np.uint8), bitorder="little")
-    return bits[array.offset : array.offset + len(array)] == 0
-
-
 def groups_of(lists: Any, weights: Any = None) -> Groups:
     """The groups behind Arrow lists; a NULL list is an empty group. Values are not copied."""
     lists = single_chunk(lists)
@@ -318,31 +298,6 @@ def _record_counts(function: Function, lengths: Any) -> Any:
     distinct, inverse = np.unique(lengths, return_inverse=True)
     counts = [0 if n < function.smallest_n else function.rows(int(n)) for n in distinct]
     return np.array(counts, dtype=np.int64)[inverse]
-
-
-def arrow_view(
-    numbers: np.ndarray[Any, Any], missing: npt.NDArray[np.bool_] | None = None
-) -> pa.Array:
-    """A contiguous numpy array as Arrow numbers over the same memory, NULL where missing.
-
-    pa.array would import pandas.
-    """
-    validity = None
-    if missing is not None and missing.any():
-        validity = pa.py_buffer(np.packbits(~missing, bitorder="little"))
-    kind = pa.from_numpy_dtype(numbers.dtype)
-    return pa.Array.from_buffers(kind, numbers.size, [validity, pa.py_buffer(numbers)])
-
-
-def arrow_mask(flags: npt.NDArray[np.bool_]) -> pa.Array:
-    """Flags as an Arrow array of booleans."""
-    bits = pa.py_buffer(np.packbits(flags, bitorder="little"))
-    return pa.Array.from_buffers(pa.bool_(), flags.size, [None, bits])
-
-
-def numbers_or_null(numbers: Values) -> pa.Array:
-    """An Arrow column in which the kernels' NULL marker is NULL."""
-    return arrow_view(np.ascontiguousarray(numbers), null_mask(numbers))
 
 
 def _field_array(function: Function, name: str, numbers: Values) -> pa.Array:

@@ -9,6 +9,7 @@ from typing import Any, Final
 import numpy as np
 import pyarrow as pa
 
+from midspread.udfs.arrow_columns import numpy_view, single_chunk
 from midspread.udfs.declaring import NULL, Values
 from midspread.udfs.drivers import ranked_driver, summary_driver
 from midspread.udfs.exact_numbers import exact_numbers
@@ -55,10 +56,10 @@ class ProfileFunctions:
 
     def value_counts(self, lists: Any, unsigned: Any) -> pa.Array:
         """What `count_values` finds in each list of numbers, its values as text."""
-        array = _single_chunk(lists)
-        is_unsigned = bool(len(array)) and bool(_single_chunk(unsigned)[0].as_py())
+        array = single_chunk(lists)
+        is_unsigned = bool(len(array)) and bool(single_chunk(unsigned)[0].as_py())
         numbers = exact_numbers(array.values, is_unsigned)
-        groups = Groups(numbers.values, array.offsets.to_numpy().astype(np.int64))
+        groups = Groups(numbers.values, numpy_view(array.offsets).astype(np.int64))
         found = self._run(
             groups,
             ranked_driver("value_counts", count_values),
@@ -83,9 +84,9 @@ class ProfileFunctions:
 
     def longest_run(self, starts: Any) -> pa.Array:
         """The longest run of each sequence; see the kernel for how runs are written."""
-        array = _single_chunk(starts)
-        values = array.values.to_numpy(zero_copy_only=True)
-        groups = Groups(values, array.offsets.to_numpy().astype(np.int64))
+        array = single_chunk(starts)
+        values = numpy_view(array.values)
+        groups = Groups(values, numpy_view(array.offsets).astype(np.int64))
         loop = summary_driver("longest_run", longest_run)
         found = self._run(groups, loop, np.empty((0, 1)), 1)
         return pa.array(np.where(groups.lengths == 0, 0.0, found[:, 0]).astype(np.int64))
@@ -104,9 +105,3 @@ def _listed(suspects: Values, text: Any) -> list[str]:
     pairs = [pair for pair in suspects.reshape(-1, 2).tolist() if pair[1] == pair[1]]
     pairs.sort(key=lambda pair: (-pair[1], pair[0]))
     return [f"{text(value)} ({count:.0f} times)" for value, count in pairs]
-
-
-def _single_chunk(array: Any) -> Any:
-    if isinstance(array, pa.ChunkedArray):
-        return array.chunk(0) if array.num_chunks == 1 else array.combine_chunks()
-    return array
