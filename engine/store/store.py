@@ -258,6 +258,7 @@ class Store:
                 return
             try:
                 self._write_empty(fresh)
+                self._set_log_aside()
                 publish(fresh, self.path)
             except (duckdb.Error, OSError) as error:
                 if not had_lock:
@@ -266,6 +267,16 @@ class Store:
             finally:
                 self.close()
                 remove_database(fresh)
+
+    def _set_log_aside(self) -> None:
+        """Rename the log of a store that is gone: the engine would apply it to the new one.
+
+        It is left when a store is removed or moved without the log beside it, and kept under
+        another name because it may belong to the one that was moved.
+        """
+        log = self.path.with_name(f"{self.path.name}.wal")
+        if log.exists():
+            log.rename(log.with_name(f"{log.name}.{secrets.token_hex(6)}.left"))
 
     def _write_empty(self, path: Path) -> None:
         engine = self._private_engine()

@@ -3,6 +3,7 @@
 import os
 import re
 import subprocess
+import sys
 import time
 from collections.abc import Callable
 from pathlib import Path
@@ -39,6 +40,27 @@ def test_other_clients_of_older_engines_can_open_the_file(store: Store) -> None:
     """Format 64 in the file's header is what DuckDB 0.10 to 1.1 read (its storage docs)."""
     Answers(store).keep("k", "SELECT 1", small_table())
     assert int.from_bytes(store.path.read_bytes()[12:20], "little") == 64
+
+
+def test_a_log_left_by_a_store_that_is_gone_does_no_harm(path: Path) -> None:
+    """As after a kill in mid-write, when only the database itself is then removed."""
+    writing = (
+        "import duckdb, os, sys\n"
+        "engine = duckdb.connect(sys.argv[1])\n"
+        "engine.execute('CREATE TABLE old (a INTEGER)'); engine.execute('CHECKPOINT')\n"
+        "engine.execute('INSERT INTO old VALUES (1)'); os._exit(0)"
+    )
+    subprocess.run([sys.executable, "-c", writing, str(path)], check=True)
+    log = path.with_name(f"{path.name}.wal")
+    left = log.read_bytes()
+    assert left
+    path.unlink()
+
+    answers = Answers(Store.open(path), environment={})
+    answers.keep("k", "SELECT 1", small_table())
+    assert answers.find("k") is not None
+    (kept,) = path.parent.glob(f"{log.name}.*.left")
+    assert kept.read_bytes() == left
 
 
 def test_a_missing_store_is_not_made_unasked(path: Path) -> None:
