@@ -19,6 +19,9 @@ FAMILIES: Final[Mapping[str, str]] = {
     "weighted": "what is typical, each value with a weight",
     "scale": "how much the values spread",
     "shape": "how the values are shaped",
+    "association": "how two columns hang together",
+    "re-expression": "values on another scale, row by row",
+    "resampling": "how sure it is, from the data themselves",
     "tables": "whole tables of answers, in FROM",
 }
 _COLUMNS: Final[Mapping[str, str]] = {
@@ -133,7 +136,7 @@ def _facts(function: "Function", about: Mapping[str, list[str]]) -> Iterator[tup
     yield "source", function.source
     yield "breakdown point", function.breakdown
     yield "cost", function.cost
-    if function.kind == "aggregate":
+    if function.is_aggregate:
         fewest = function.smallest_n
         yield "smallest n", f"{fewest}; a group with fewer values gives NULL"
     if about.get("Notes"):
@@ -164,8 +167,10 @@ def _parameter_words(parameter: "Parameter") -> str:
 
 def _allowed(parameter: "Parameter") -> str:
     """The range in words; parameters of table functions say it in their meaning."""
-    is_number = isinstance(parameter.default, int | float) or parameter.default is None
-    return "" if not is_number or isinstance(parameter.default, bool) else parameter.allowed
+    if parameter.kind == "text":
+        return parameter.allowed if parameter.choices else ""
+    is_literal = isinstance(parameter.default, bool | str) and not parameter.is_optional
+    return "" if parameter.kind != "number" or is_literal else parameter.allowed
 
 
 def _item_meanings(description: str) -> dict[str, str]:

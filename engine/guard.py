@@ -21,6 +21,9 @@ from midspread.engine.parsing import Node, NotParsed, Tree, function_name, nodes
 from midspread.engine.pivoting import parse_with_pivots, without_listed_values
 from midspread.engine.statements import Kind, Statement
 
+_INTERNAL_NAMES: Final = frozenset(
+    {"_values", "_values_of_pairs", "_numbers", "_number", "_text", "_flag", "_estimates"}
+)
 _QUERY_NODES: Final = frozenset(
     {"SELECT_NODE", "SET_OPERATION_NODE", "RECURSIVE_CTE_NODE", "CTE_NODE"}
 )
@@ -156,7 +159,7 @@ class Guard:
 
     def _check_name(self, statement: Statement) -> None:
         name = statement.name.lower()
-        if name.lstrip("_") in self._own_names or name in ("_values", "_estimates", "_number"):
+        if name.lstrip("_") in self._own_names or name in _INTERNAL_NAMES:
             raise RefusedStatement(
                 f"query refuses CREATE {statement.name}: this name is one of Midspread's own; "
                 f"choose another name."

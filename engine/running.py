@@ -116,7 +116,6 @@ class Runner:
 
             control = Control()
             register(self._connection, control=control)
-            self._connection.execute("CREATE OR REPLACE TEMP MACRO _number(v DOUBLE) AS v")
             self._control = control
 
     def _run(self, sql: str, statement: Statement, act: Callable[[str], Result]) -> Result:

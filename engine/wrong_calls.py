@@ -21,7 +21,15 @@ from midspread.engine.statements import Statement
 from midspread.udfs import Function
 
 NUMBERS: Final = "a number (any integer type, DECIMAL, FLOAT or DOUBLE)"
+_TYPED: Final = ("_number", "_values", "_text", "_flag")
 _OWN_MACRO: Final = re.compile(r"Macro \"?(\w+)\"?\(\) (does not|has multiple|has named)")
+_PARAMETERS: Final = {
+    "number": ("_number(", ")"),
+    "text": ("_text(", ")"),
+    "flag": ("_flag(", ")"),
+    "level": ("(", ")"),
+    "column": ("any_value(", ")"),
+}
 
 
 @dataclass(frozen=True)
@@ -35,7 +43,7 @@ class Cause:
 def is_about_a_call(error: EngineError, functions: Mapping[str, Function]) -> bool:
     """Whether the engine complains about the arguments of one of our functions."""
     found = _OWN_MACRO.search(error.words)
-    return found is not None and (found[1] in functions or found[1] in ("_number", "_values"))
+    return found is not None and (found[1] in functions or found[1] in _TYPED)
 
 
 def wrong_form(
@@ -87,7 +95,8 @@ def _wrong_argument(query: Query, call: Call) -> Cause | None:
     if not call.is_plain or columns is None or parameters is None:
         return None
     for name, argument in zip(call.function.columns, columns, strict=True):
-        error = _planned(query, call, argument.start, argument.stop, _one_of(call))
+        around = _one_of(call) if name not in call.function.keys else _any_of(call)
+        error = _planned(query, call, argument.start, argument.stop, around)
         if error is not None and is_about_a_call(error, {}):
             return Cause(
                 f"{call.function.name}: {name} must be {NUMBERS}, and {argument.text} is not; "
@@ -106,12 +115,12 @@ def _wrong_argument(query: Query, call: Call) -> Cause | None:
     for parameter, given in parameters:
         if given is None:
             continue
-        error = _planned(query, call, given.start, given.stop, ("_number(", ")"))
+        error = _planned(query, call, given.start, given.stop, _PARAMETERS[parameter.kind])
         if error is not None and is_about_a_call(error, {}):
             return Cause(
                 f"{call.function.name}: {parameter.name} must be {parameter.allowed}, "
                 f"and {given.text} is not; write for example {parameter.name} := "
-                f"{parameter.default if parameter.default is not None else 0.5}."
+                f"{parameter.example()}."
             )
         if error is not None:
             return Cause(error=error)
@@ -121,6 +130,11 @@ def _wrong_argument(query: Query, call: Call) -> Cause | None:
 def _one_of(call: Call) -> tuple[str, str]:
     """What stands around a number where a call gives one."""
     return ("_number(" if call.is_window else "_values(", ")")
+
+
+def _any_of(call: Call) -> tuple[str, str]:
+    """What stands around a key where a call gives one."""
+    return ("(", ")") if call.is_window else ("any_value(", ")")
 
 
 def _planned(

@@ -6,7 +6,7 @@ from midspread.udfs.catalogue import functions
 from midspread.udfs.declaring import Function, Parameter, ParameterError
 
 if TYPE_CHECKING:
-    from midspread.udfs.duckdb_binding import register
+    from midspread.udfs.binding.registration import register
     from midspread.udfs.grouped import Control, Stopped
 
 __all__ = [
@@ -24,7 +24,7 @@ def __getattr__(name: str) -> Any:
     # Looking up the catalogue must not load duckdb's and Arrow's libraries: a kept answer needs
     # neither.
     if name == "register":
-        from midspread.udfs.duckdb_binding import register
+        from midspread.udfs.binding.registration import register
 
         return register
     if name in ("Control", "Stopped"):

@@ -8,7 +8,15 @@ from types import MappingProxyType
 
 from midspread.udfs.declaring import Function, declared
 
-_FAMILIES = ("location", "scale", "shape", "tables")
+_FAMILIES = (
+    "location",
+    "scale",
+    "shape",
+    "association",
+    "reexpression",
+    "resampling",
+    "tables",
+)
 
 
 @functools.cache

@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import Any, Final
 
 from midspread.udfs.declaring import is_compiled
+from midspread.udfs.emitting import machine_code_only_for
 
 _OPTIONS: Final[Any] = {"nogil": True, "error_model": "numpy"}
 _CALLEE_OPTIONS: Final[Any] = {**_OPTIONS, "no_cpython_wrapper": True, "no_cfunc_wrapper": True}
@@ -67,12 +68,13 @@ def compile_driver(
             function.__name__ = function.__qualname__ = name
             compiled = numba.njit(**_OPTIONS)(function)
             folder = _cache_folder()
-            if folder is None:
-                compiled.compile(signature)
-            else:
-                compiled._cache = _driver_cache(function, folder)
-                with _only_one_process(folder):
+            with machine_code_only_for(name):
+                if folder is None:
                     compiled.compile(signature)
+                else:
+                    compiled._cache = _driver_cache(function, folder)
+                    with _only_one_process(folder):
+                        compiled.compile(signature)
             return compiled
         finally:
             _activity.pop()

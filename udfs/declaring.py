@@ -13,6 +13,27 @@ from typing import Any, Final, Literal, TypeVar
 import numpy as np
 import numpy.typing as npt
 
+from midspread.udfs.parameters import Parameter, ParameterError
+
+__all__ = [
+    "NULL",
+    "Function",
+    "Helper",
+    "Parameter",
+    "ParameterError",
+    "Values",
+    "aggregate",
+    "batch_aggregate",
+    "compiled",
+    "declared",
+    "helper",
+    "helpers",
+    "is_compiled",
+    "null_mask",
+    "row_function",
+    "table_function",
+]
+
 Values = npt.NDArray[np.float64]
 """Sorted values of one group: float64, ascending, neither NULL nor NaN."""
 
@@ -20,104 +41,29 @@ _NULL_BITS: Final = 0x7FF8_0000_4E55_4C4C
 NULL: Final[float] = struct.unpack("<d", struct.pack("<Q", _NULL_BITS))[0]
 """What a kernel returns for NULL: a NaN whose payload no arithmetic produces."""
 
-Family = Literal["location", "weighted", "scale", "shape", "tables"]
+Family = Literal[
+    "location", "weighted", "scale", "shape", "association", "re-expression", "resampling", "tables"
+]
+Kind = Literal["aggregate", "batch", "row", "table"]
 Anything = TypeVar("Anything", bound=Callable[..., Any])
 
 _COMPILED_MARK: Final = "__midspread_compiled__"
 _AGGREGATES: dict[str, "Function"] = {}
+_ROW_FUNCTIONS: dict[str, "Function"] = {}
 _TABLES: dict[str, "Function"] = {}
-
-
-class ParameterError(ValueError):
-    """A parameter outside its range; the message is one sentence for the user."""
-
-
-def shown(number: float) -> str:
-    """A number as messages give it: all of its digits, so that 0.5000001 is not shown as 0.5."""
-    return repr(float(number)).removesuffix(".0")
-
-
-@dataclass(frozen=True)
-class Parameter:
-    """A parameter of a function and the range it must keep to.
-
-    Attributes
-    ----------
-    name : str
-        As written in SQL: ``share := 0.1``.
-    meaning : str
-        What it is, in a few words.
-    default : float or str or bool or None
-        A number, or for table functions an SQL literal given as text; None when required.
-    low, high : float
-        Smallest and largest value allowed.
-    low_open, high_open : bool
-        Whether the end itself is excluded.
-    whole : bool
-        Whether only whole numbers are allowed.
-    """
-
-    name: str
-    meaning: str
-    default: float | str | bool | None = None
-    low: float = -np.inf
-    high: float = np.inf
-    low_open: bool = False
-    high_open: bool = False
-    whole: bool = False
-
-    @property
-    def allowed(self) -> str:
-        """The range in words, as error messages and the reference give it."""
-        kind = "a whole number" if self.whole else "a number"
-        low, high = f"{self.low:g}", f"{self.high:g}"
-        if np.isinf(self.low) and np.isinf(self.high):
-            return kind
-        if np.isinf(self.high):
-            return f"{kind} {'above' if self.low_open else 'from'} {low}" + (
-                "" if self.low_open else " up"
-            )
-        if self.low_open or self.high_open:
-            return (
-                f"{kind} {'above' if self.low_open else 'from'} {low} "
-                f"{'and below' if self.high_open else 'up to'} {high}"
-            )
-        return f"{kind} from {low} to {high}"
-
-    def check(self, function: str, values: Values, missing: npt.NDArray[np.bool_]) -> None:
-        """Raise ParameterError, naming function and range, unless all values are allowed."""
-        if missing.any():
-            raise ParameterError(
-                f"{function}: {self.name} must be {self.allowed}, got NULL; "
-                f"give each group a value."
-            )
-        ok = (values > self.low) if self.low_open else (values >= self.low)
-        ok &= (values < self.high) if self.high_open else (values <= self.high)
-        ok &= np.isfinite(values)
-        if self.whole:
-            ok &= values == np.floor(values)
-        if not ok.all():
-            wrong = float(values[~ok][0])
-            raise ParameterError(
-                f"{function}: {self.name} must be {self.allowed}, got {shown(wrong)}; "
-                f"write for example {self.name} := {self.example()}."
-            )
-
-    def example(self) -> str:
-        """A value that may be given, as text."""
-        if isinstance(self.default, (int, float)) and not isinstance(self.default, bool):
-            return f"{self.default:g}"
-        middle = (self.low + self.high) / 2
-        return f"{middle:g}" if np.isfinite(middle) else "1"
+_HELPERS: dict[str, "Helper"] = {}
 
 
 @dataclass(frozen=True)
 class Function:
-    """One function of the catalogue; see `aggregate` and `table_function` for how it is made."""
+    """One function of the catalogue.
+
+    See `aggregate`, `batch_aggregate`, `row_function` and `table_function` for how it is made.
+    """
 
     name: str
     family: Family
-    kind: Literal["aggregate", "table"]
+    kind: Kind
     columns: tuple[str, ...]
     parameters: tuple[Parameter, ...]
     fields: tuple[str, ...]
@@ -133,6 +79,14 @@ class Function:
     kernel: Callable[..., Any] | None = None
     rows: Callable[[int], int] | None = None
     labels: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
+    field_types: Mapping[str, str] = field(default_factory=dict)
+    keys: tuple[str, ...] = ()
+    body: str = ""
+
+    @property
+    def is_aggregate(self) -> bool:
+        """Whether a call makes one value of many rows."""
+        return self.kind in ("aggregate", "batch")
 
     @property
     def meaning(self) -> str:
@@ -144,21 +98,25 @@ class Function:
         """As written in SQL, with the defaults: ``trimmed_mean(x, share := 0.2)``."""
         shown = [*self.columns]
         for parameter in self.parameters:
-            default = parameter.default
-            if default is None:
-                shown.append(parameter.name)
-            elif isinstance(default, bool):
-                shown.append(f"{parameter.name} := {str(default).lower()}")
-            elif isinstance(default, str):
-                shown.append(f"{parameter.name} := {default}")
-            else:
-                shown.append(f"{parameter.name} := {default:g}")
+            default = parameter.default_text
+            shown.append(f"{parameter.name} := {default}" if default else parameter.name)
         return f"{self.name}({', '.join(shown)})"
 
     @property
     def place(self) -> str:
         """Where a call goes in a query."""
-        return "in FROM, as a table" if self.kind == "table" else "in SELECT, as AVG is"
+        if self.kind == "table":
+            return "in FROM, as a table"
+        return "in SELECT, as AVG is" if self.is_aggregate else "anywhere, as ROUND is"
+
+
+@dataclass(frozen=True)
+class Helper:
+    """An Arrow function that macros and table functions call; it is in no reference."""
+
+    name: str
+    result: str
+    compute: Callable[..., Any]
 
 
 def compiled(function: Anything) -> Anything:
@@ -245,6 +203,154 @@ def aggregate(
     return declare
 
 
+def batch_aggregate(
+    *,
+    family: Family,
+    formula: str,
+    source: str,
+    breakdown: str,
+    cost: str,
+    smallest_n: int,
+    example: str,
+    columns: tuple[str, ...],
+    fields: tuple[str, ...],
+    keys: tuple[str, ...] = (),
+    parameters: tuple[Parameter, ...] = (),
+    field_types: Mapping[str, str] | None = None,
+    version: int = 1,
+) -> Callable[[Anything], Anything]:
+    """Declare an aggregate that works on a batch of groups at once, in Python.
+
+    For what is more than a loop over sorted values: several columns, keys of any type, text
+    parameters. The decorated function takes a `Batch` and returns one array a field.
+
+    Parameters
+    ----------
+    columns : tuple of str
+        A row is skipped where any of them is NULL.
+    keys : tuple of str
+        Those of the columns that may have any simple type and arrive as ranks of their values.
+    fields : tuple of str
+        The record's fields, in order.
+    field_types : mapping, optional
+        The SQL types of fields that are not DOUBLE.
+    family, formula, source, breakdown, cost, smallest_n, example, parameters, version
+        As for `aggregate`; parameters may be of any kind.
+
+    Returns
+    -------
+    callable
+        The function unchanged and entered in the catalogue.
+    """
+
+    def declare(compute: Anything) -> Anything:
+        name = compute.__name__
+        _AGGREGATES[name] = Function(
+            name=name,
+            family=family,
+            kind="batch",
+            columns=columns,
+            keys=keys,
+            parameters=parameters,
+            fields=fields,
+            field_types=dict(field_types or {}),
+            formula=formula,
+            source=source,
+            breakdown=breakdown,
+            cost=cost,
+            smallest_n=smallest_n,
+            example=example,
+            description=inspect.cleandoc(compute.__doc__ or ""),
+            version=version,
+            kernel=compute,
+        )
+        return compute
+
+    return declare
+
+
+def row_function(
+    *,
+    family: Family,
+    formula: str,
+    source: str,
+    example: str,
+    columns: tuple[str, ...],
+    body: str = "",
+    keys: tuple[str, ...] = (),
+    parameters: tuple[Parameter, ...] = (),
+    field_types: Mapping[str, str] | None = None,
+    version: int = 1,
+) -> Callable[[Anything], Anything]:
+    """Declare a function of one row's values.
+
+    Parameters
+    ----------
+    columns : tuple of str
+        Numbers, but for those listed under keys.
+    body : str
+        SQL over the names of columns and parameters. When empty, the decorated function computes:
+        it takes one array of float64 for each column and parameter, NaN where NULL, and returns
+        the results, `NULL` where there is none.
+    keys : tuple of str
+        Columns that may have any type; they need a body.
+    field_types : mapping, optional
+        Under ``""`` the SQL type of the result when it is not DOUBLE.
+    family, formula, source, example, parameters, version
+        As for `aggregate`.
+
+    Returns
+    -------
+    callable
+        The function unchanged and entered in the catalogue.
+    """
+
+    def declare(compute: Anything) -> Anything:
+        name = compute.__name__
+        _ROW_FUNCTIONS[name] = Function(
+            name=name,
+            family=family,
+            kind="row",
+            columns=columns,
+            keys=keys,
+            parameters=parameters,
+            fields=(),
+            field_types=dict(field_types or {}),
+            formula=formula,
+            source=source,
+            breakdown="each row by itself",
+            cost="O(1) a row",
+            smallest_n=1,
+            example=example,
+            description=inspect.cleandoc(compute.__doc__ or ""),
+            version=version,
+            kernel=compute,
+            body=body,
+        )
+        return compute
+
+    return declare
+
+
+def helper(name: str, result: str) -> Callable[[Anything], Anything]:
+    """Declare an Arrow function ``name`` of any arguments for macros and table functions.
+
+    The decorated function takes a `Work` (threads, progress, request to stop) and one Arrow array
+    for each argument of the call; it returns an Arrow array of the SQL type ``result``.
+    """
+
+    def declare(compute: Anything) -> Anything:
+        _HELPERS[name] = Helper(name, result, compute)
+        return compute
+
+    return declare
+
+
+def helpers() -> tuple[Helper, ...]:
+    """Every helper declared by the modules imported so far."""
+    return tuple(_HELPERS.values())
+
+
 def table_function(
     *,
     columns: tuple[str, ...],
@@ -304,7 +410,7 @@ def table_function(
 
 def declared() -> dict[str, Function]:
     """Every function declared by the modules imported so far, by name."""
-    return {**_AGGREGATES, **_TABLES}
+    return {**_AGGREGATES, **_ROW_FUNCTIONS, **_TABLES}
 
 
 def null_mask(numbers: Values) -> npt.NDArray[np.bool_]:

@@ -36,6 +36,8 @@ _WIDTHS: Final = (
 _SMALL: Final = _WIDTHS[-1]
 _WORTH_A_THREAD: Final = 1 << 17
 _EMPTY: Final = np.empty(0)
+_KEPT: Final = 2 * _PORTION  # values a thread's scratch memory holds from call to call
+_scratch = threading.local()
 
 
 class Control:
@@ -188,7 +190,7 @@ def _work_off(
     for members, width in _layouts(lengths, start, stop):
         sizes = lengths[members]
         starts = np.arange(members.size + 1) * width if width else row_numbers(sizes)
-        scratch = np.empty(int(starts[-1]))
+        scratch = _scratch_of(int(starts[-1]))
         sources = groups.offsets[members]
         _gather()(groups.values, sources, sizes, scratch, starts)
         weights = _EMPTY
@@ -210,6 +212,16 @@ def _work_off(
                 task.column,
                 control.cells,
             )
+
+
+def _scratch_of(size: int) -> Values:
+    """Memory to sort in; a thread's own is used again, as fresh pages cost more than the sort."""
+    if size > _KEPT:
+        return np.empty(size)
+    kept: Values | None = getattr(_scratch, "values", None)
+    if kept is None:
+        kept = _scratch.values = np.empty(_KEPT)
+    return kept[:size]
 
 
 def _layouts(lengths: Indices, start: int, stop: int) -> Iterator[tuple[Indices, int]]:

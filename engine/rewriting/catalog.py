@@ -5,6 +5,7 @@ from functools import cached_property
 import duckdb
 
 from midspread.engine.harmless import HARMLESS_VOLATILE_FUNCTIONS
+from midspread.udfs import functions
 
 
 class Catalog:
@@ -30,11 +31,15 @@ class Catalog:
 
     def is_aggregate(self, name: str) -> bool:
         """Whether a function, ours included, makes one value of many rows."""
-        return name in self.own_names or name in self._aggregates
+        return name in self._own_aggregates or name in self._aggregates
 
     def views(self, name: str) -> list[str]:
         """The statements that made the views of this name."""
         return self._views.get(name.lower(), [])
+
+    @cached_property
+    def _own_aggregates(self) -> frozenset[str]:
+        return frozenset(name for name, one in functions().items() if one.is_aggregate)
 
     @cached_property
     def _users_macros(self) -> frozenset[str]:

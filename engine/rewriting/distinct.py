@@ -20,7 +20,7 @@ def distinct(query: Query) -> list[Edit]:
         if call.is_distinct:
             _check(call)
             if not call.is_window:
-                edits.append(_handed_over(call))
+                edits.append(Edit(call.start, call.stop, call.underlying(distinct=True)))
     return edits
 
 
@@ -40,14 +40,3 @@ def _check(call: Call) -> None:
             f"{name}: DISTINCT needs the plain form; write {name}(DISTINCT x"
             f"{''.join(f', {p.name} := ...' for p in call.function.parameters)})."
         )
-
-
-def _handed_over(call: Call) -> Edit:
-    columns = call.columns() or []
-    given = [
-        f"_number({argument.text if argument else parameter.default})"
-        for parameter, argument in call.parameters() or ()
-    ]
-    values = f"list_distinct(_values({columns[0].text}))"
-    text = f"_{call.function.name}({', '.join([values, *given])})"
-    return Edit(call.start, call.stop, text)

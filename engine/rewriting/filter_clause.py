@@ -64,21 +64,12 @@ def _moved(query: Query, call: Call) -> list[Edit]:
 
 
 def _handed_over(query: Query, call: Call) -> Edit:
-    columns = [column.text for column in call.columns() or ()]
-    if len(columns) > 1:
+    if len(call.function.columns) > 1:
         raise MidspreadError(
             f"{call.function.name}: the condition of its FILTER draws at random, which would "
             f"differ between its columns; filter the rows first: "
             f"FROM (SELECT ... FROM ... WHERE ...)."
         )
     start, stop = condition(query, call)
-    where = f"({query.text[start:stop]}) AND ({columns[0]}) IS NOT NULL"
-    values = f"list(_number({columns[0]})) FILTER (WHERE {where})"
-    if call.is_distinct:
-        values = f"list_distinct({values})"
-    given = [
-        f"_number({argument.text if argument else parameter.default})"
-        for parameter, argument in call.parameters() or ()
-    ]
-    text = f"_{call.function.name}({', '.join([values, *given])})"
+    text = call.underlying(condition=f"({query.text[start:stop]})", distinct=call.is_distinct)
     return Edit(call.start, call.stop, text)

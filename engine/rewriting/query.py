@@ -18,6 +18,7 @@ from midspread.engine.parsing import (
 from midspread.engine.pivoting import parse_with_pivots
 from midspread.engine.rewriting.clauses import ClauseMap
 from midspread.udfs import Function, Parameter
+from midspread.udfs.binding.underlying import underlying_call
 
 _CONDITIONAL_CLASSES = ("CASE", "CONJUNCTION")
 _CONDITIONAL_OPERATORS = ("OPERATOR_COALESCE", "OPERATOR_TRY", "OPERATOR_NULLIF")
@@ -124,6 +125,17 @@ class Call:
             return None
         return given
 
+    def underlying(self, *, condition: str = "", over: str = "", distinct: bool = False) -> str:
+        """The call of the function behind the macro, with the same arguments."""
+        return underlying_call(
+            self.function,
+            [column.text for column in self.columns() or ()],
+            {p.name: argument.text for p, argument in self.parameters() or () if argument},
+            condition=condition,
+            over=over,
+            distinct=distinct,
+        )
+
     def _given(self, index: int, name: str) -> Argument | None:
         for argument in self.arguments:
             if argument.name == name:
@@ -185,7 +197,7 @@ class Query:
                 continue
             function = self.functions.get(function_name(node) or "")
             span = self.tree.span(node)
-            if function is None or function.kind == "table" or span is None or span in seen:
+            if function is None or not function.is_aggregate or span is None or span in seen:
                 continue
             seen.add(span)  # a named window repeats the nodes of its definition
             opening, closing = self._brackets_of(node, span)

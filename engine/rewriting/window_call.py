@@ -31,18 +31,11 @@ def _handed_over(query: Query, call: Call) -> Edit:
             f"{name}: OVER needs the plain form; write {call.function.signature} OVER (...)."
         )
     behind = query.tokens[call.closing].stop
-    wanted = [f"({column.text}) IS NOT NULL" for column in columns]
+    wanted = ""
     if call.filter is not None:
         start, stop = condition(query, call)
-        wanted.insert(0, f"({query.text[start:stop]})")
+        wanted = f"({query.text[start:stop]})"
         behind = query.tokens[query.clauses.closing(call.closing + 2)].stop
     over = query.text[behind : call.stop]
-    present = " AND ".join(wanted)
-    given = [f"list(_number({column.text})) FILTER (WHERE {present}){over}" for column in columns]
-    if call.is_distinct:
-        given = [f"list_distinct({values})" for values in given]
-    given += [
-        f"_number({argument.text if argument else parameter.default})"
-        for parameter, argument in parameters
-    ]
-    return Edit(call.start, call.stop, f"_{name}({', '.join(given)})")
+    text = call.underlying(condition=wanted, over=over, distinct=call.is_distinct)
+    return Edit(call.start, call.stop, text)

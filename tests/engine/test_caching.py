@@ -258,7 +258,7 @@ def test_a_kept_answer_needs_no_heavy_library(folder: Path) -> None:
         f"answer = Session().query({sql!r})\n"
         "assert answer.from_store is not None\n"
         "heavy = {'numba', 'scipy', 'pandas', 'sqlglot', 'midspread.engine.rewriting',\n"
-        "         'midspread.engine.messages', 'midspread.udfs.duckdb_binding'}\n"
+        "         'midspread.engine.messages', 'midspread.udfs.binding.registration'}\n"
         "assert not heavy & sys.modules.keys(), heavy & sys.modules.keys()\n"
     )
     done = subprocess.run(

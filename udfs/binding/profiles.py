@@ -9,10 +9,10 @@ from typing import Any, Final
 import numpy as np
 import pyarrow as pa
 
-from midspread.udfs.arrow_columns import numpy_view, single_chunk
+from midspread.udfs.binding.arrow_columns import numpy_view, single_chunk
+from midspread.udfs.binding.exact_numbers import exact_numbers
 from midspread.udfs.declaring import NULL, Values
 from midspread.udfs.drivers import ranked_driver, summary_driver
-from midspread.udfs.exact_numbers import exact_numbers
 from midspread.udfs.grouped import Control, Groups, Task, row_numbers, run
 from midspread.udfs.tables.value_counts import COUNTS, MOST_SUSPECTS, count_values, longest_run
 

@@ -1,0 +1,1 @@
+"""How two columns hang together."""

@@ -1,0 +1,1 @@
+"""Values on another scale."""

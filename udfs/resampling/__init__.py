@@ -1,0 +1,1 @@
+"""Uncertainty from the data themselves: bootstrap, jackknife, permutation, held-out folds."""
