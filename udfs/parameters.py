@@ -111,7 +111,8 @@ class Parameter:
             return given
         if isinstance(given, str) and given.strip().lower() in self.choices:
             return given.strip().lower()
-        raise self.refused(function, "NULL" if given is None else f"'{given}'")
+        shown = f"'{given}'" if isinstance(given, str) else "NULL" if given is None else str(given)
+        raise self.refused(function, shown)
 
     def refused(self, function: str, given: str, remedy: str | None = None) -> ParameterError:
         """The error about what was given."""

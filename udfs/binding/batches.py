@@ -21,7 +21,7 @@ from midspread.udfs.binding.computing import Work, groups_of
 from midspread.udfs.declaring import Function, Values, null_mask
 from midspread.udfs.drivers import Indices
 from midspread.udfs.grouped import Groups
-from midspread.udfs.parameters import Parameter, ParameterError
+from midspread.udfs.parameters import ParameterError
 
 
 @dataclass(frozen=True)
@@ -93,12 +93,15 @@ class Batch:
     def number(self, name: str) -> Values:
         """A checked parameter, one a group; NaN where an optional one is NULL."""
         parameter, array = self._parameters[name], self._given[name]
-        missing = is_missing(array)
-        if pa.types.is_null(array.type):
-            values = np.full(self.size, np.nan)
+        kind = array.type
+        if pa.types.is_null(kind):
+            missing, values = np.ones(self.size, dtype=np.bool_), np.full(self.size, np.nan)
+        elif pa.types.is_integer(kind) or pa.types.is_floating(kind) or pa.types.is_decimal(kind):
+            missing = is_missing(array)
+            values = np.where(missing, np.nan, numpy_view(array.cast(pa.float64())))
         else:
-            values = np.where(missing, np.nan, numpy_view(array)).astype(np.float64)
-        self._check_used(parameter, values, missing)
+            raise parameter.refused(self.function.name, f"type {kind}")
+        parameter.check(self.function.name, values, missing)
         return values
 
     def texts(self, name: str) -> list[str]:
@@ -115,8 +118,9 @@ class Batch:
     def flags(self, name: str) -> npt.NDArray[np.bool_]:
         """A parameter that is true or false, one a group."""
         array = self._given[name]
-        if array.null_count:
-            raise self._parameters[name].refused(self.function.name, "NULL")
+        if not pa.types.is_boolean(array.type) or array.null_count:
+            given = "NULL" if array.null_count else f"type {array.type}"
+            raise self._parameters[name].refused(self.function.name, given)
         return np.array(array.to_pylist(), dtype=np.bool_)
 
     def levels(self, name: str, column: str) -> Indices:
@@ -141,9 +145,6 @@ class Batch:
                 f"{column} holds {shown}{', …' if len(values) > 5 else ''}.",
             )
         return np.where(is_missing(codes), -1, numpy_view(codes)).astype(np.int64)
-
-    def _check_used(self, parameter: Parameter, values: Values, missing: Any) -> None:
-        parameter.check(self.function.name, values, missing)
 
 
 def ranked(function: str, column: str, values: pa.Array) -> Keys:

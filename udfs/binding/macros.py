@@ -75,7 +75,9 @@ def row_macro(function: Function) -> str:
 
 
 def _with_refusals(function: Function, body: str) -> str:
-    parameters = [_macro_parameter(parameter) for parameter in function.parameters]
+    # A batch aggregate takes any type, and says itself what is wrong.
+    is_typed = function.kind != "batch"
+    parameters = [_macro_parameter(p, typed=is_typed) for p in function.parameters]
     columns = [
         _identifier(name) + ("" if name in function.keys else " DOUBLE")
         for name in function.columns
@@ -97,7 +99,7 @@ def _with_refusals(function: Function, body: str) -> str:
             f"typeof({whose.format(name)}) || '; take the numbers out of it first.')"
         )
     for wrong, parameter in enumerate(function.parameters):
-        if parameter.kind not in _SQL_TYPES:
+        if not is_typed or any(p.default_text for p in function.parameters[:wrong]):
             continue
         # Without its default, so that a call which leaves it out fits the first overload only.
         name = _identifier(parameter.name)
