@@ -26,6 +26,7 @@ FAMILIES: Final[Mapping[str, str]] = {
 }
 _COLUMNS: Final[Mapping[str, str]] = {
     "x": "a column or expression of any numeric type; NULL is skipped, NaN makes the result NaN",
+    "y": "another such column, often what may depend on x; a row where either is NULL is skipped",
     "w": "weights, 0 or more; a row where x or w is NULL is skipped",
 }
 WIDEST: Final = 100

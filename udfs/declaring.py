@@ -158,7 +158,8 @@ def aggregate(
     parameters : tuple of Parameter
         In the order the kernel takes them after its columns.
     columns : tuple of str
-        ``("x",)``, or ``("x", "w")`` where w travels with the sorted x.
+        ``("x",)``; or two, such as ``("x", "w")``: pairs sorted by the first, then the second. Only
+        a column w holds weights, which may not be negative.
     fields : tuple of str
         Empty for a single number; else the kernel writes one number a field into ``out``.
     rows : callable, optional

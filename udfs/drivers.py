@@ -111,6 +111,26 @@ def _number_xw1(
 
 
 @compiled
+def _record_xw0(
+    x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int
+) -> None:
+    if _not_a_number(x, w):
+        out[rows[g], c:] = math.nan
+    else:
+        kernel(x, w, out[rows[g], c:])
+
+
+@compiled
+def _record_xw1(
+    x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int
+) -> None:
+    if _not_a_number(x, w):
+        out[rows[g], c:] = math.nan
+    else:
+        kernel(x, w, p[0, g], out[rows[g], c:])
+
+
+@compiled
 def _record_x0(x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int) -> None:
     if _not_a_number(x, w):
         out[rows[g], c:] = math.nan
@@ -159,6 +179,8 @@ _ADAPTERS: Final[dict[tuple[str, int, int], Callable[..., None]]] = {
     ("number", 2, 1): _number_xw1,
     ("record", 1, 0): _record_x0,
     ("record", 1, 1): _record_x1,
+    ("record", 2, 0): _record_xw0,
+    ("record", 2, 1): _record_xw1,
     ("list", 1, 0): _list_x0,
 }
 

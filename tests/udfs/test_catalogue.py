@@ -47,6 +47,8 @@ DEFINED = {
     "letter_values": {},
     "fences": {"k": 1.5},
     "adjusted_fences": {},
+    "spearman": {},
+    "kendall_tau": {},
 }
 FIELDS = {
     "l_moments": ("l1", "l2", "t3", "t4"),
@@ -62,12 +64,14 @@ def test_declared_as_defined(name: str) -> None:
     assert {p.name: p.default for p in function.parameters} == DEFINED[name]
     assert list(DEFINED[name]) == [p.name for p in function.parameters]
     assert function.fields == FIELDS.get(name, ())
-    assert function.columns == (("x", "w") if name.startswith("weighted_") else ("x",))
+    seconds = {"weighted": ("x", "w"), "association": ("y", "x")}
+    assert function.columns == seconds.get(function.family, ("x",))
 
 
 @each_entry
 def test_nothing_is_left_out(function: Function) -> None:
-    assert function.family in ("location", "weighted", "scale", "shape", "tables")
+    known = ("location", "weighted", "scale", "shape", "association", "tables")
+    assert function.family in known
     for text in (function.formula, function.source, function.breakdown, function.cost):
         assert text and text == text.strip()
     assert re.search(r"\b(1[89]|20)\d\d\b", function.source), "a source has a year"
@@ -150,7 +154,12 @@ def breakdown_point(function: Function) -> float | None:
 
 
 @pytest.mark.parametrize(
-    "name", [f.name for f in AGGREGATES if f.family != "shape" and breakdown_point(f) is not None]
+    "name",
+    [
+        f.name
+        for f in AGGREGATES
+        if f.family not in ("shape", "association") and breakdown_point(f) is not None
+    ],
 )
 def test_breakdown_point(
     connection: duckdb.DuckDBPyConnection, name: str, generator: np.random.Generator
@@ -199,6 +208,7 @@ def test_registering_compiles_nothing() -> None:
 def test_calls_with_the_defaults(connection: duckdb.DuckDBPyConnection, function: Function) -> None:
     """What the signature shows is what a call without parameters takes."""
     source = "(VALUES (1.0, 1.0), (2.0, 1.0), (4.0, 2.0), (9.0, 1.0), (30.0, 1.0)) AS t(x, w)"
+    source = f"(SELECT x, w, (5 * x) % 3 AS v FROM {source})"
     given = {p.name: p.default for p in function.parameters if p.default is not None}
     short, spelt = call(function), call(function, **given)
     rows = connection.execute(f"SELECT {short}, {spelt} FROM {source}").fetchall()

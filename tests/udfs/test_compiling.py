@@ -14,7 +14,7 @@ import numpy as np
 import pytest
 
 from midspread.udfs import Function, compiling, declaring
-from tests.udfs.calling import AGGREGATES, NAMES, answers, bits, value_for
+from tests.udfs.calling import AGGREGATES, NAMES, answers, bits, partners, value_for
 
 FIGURES = """
 import json, sys, tempfile
@@ -144,7 +144,8 @@ def test_compiled_as_uncompiled(
     ]
     found = answers(connection, function, [group.tolist() for group in groups])
     for group, answer in zip(groups, found, strict=True):
-        columns = [group, np.ones_like(group)][: len(function.columns)]
+        second = np.ones_like(group) if "w" in function.columns else np.array(partners(group))
+        columns = [group, second][: len(function.columns)]
         if not function.fields:
             plain = function.kernel(*columns, *parameters)
             assert bits(answer) == bits(none_for_null(plain))

@@ -22,7 +22,7 @@ READINGS = """
         CASE WHEN i % 3 = 0 THEN 'one' WHEN i % 50 < 25 THEN 'two' ELSE 'g' || (i // 40 % 300) END
             AS stop,
         CASE WHEN i % 17 = 0 THEN NULL ELSE exp((hash(i) % 60000) / 10000.0) END AS x,
-        1 + (hash(i * 31) % 9) / 10.0 AS w
+        1 + (hash(i * 31) % 9) / 10.0 AS w, i % 31 + (hash(i * 31) % 7) AS v
     FROM range(60000) AS t(i)
 """
 
@@ -90,7 +90,8 @@ def test_inside_other_batches(parquet: Path, reference: list[Any]) -> None:
             source = f"(FROM readings WHERE stop = '{row[0]}')"
             alone[row[0]] = grouped_answers(connection, source)[0]
         connection.execute(
-            "INSERT INTO readings SELECT 0, 'other ' || i % 5000, i, 1 FROM range(20000) AS t(i)"
+            "INSERT INTO readings SELECT 0, 'other ' || i % 5000, i, 1, i % 7 "
+            "FROM range(20000) AS t(i)"
         )
         crowd = {row[0]: row for row in grouped_answers(connection, "readings")}
     for row in reference[::37]:
@@ -143,7 +144,7 @@ def test_groups_as_large_as_a_portion_and_larger() -> None:
     cases = " ".join(f"WHEN i < {bound} THEN {g}" for g, bound in enumerate(bounds[1:]))
     source = f"""
         SELECT i, CASE {cases} END AS stop,
-            exp((hash(i) % 70000) / 10000.0) AS x, 1 + hash(i * 3) % 4 AS w
+            exp((hash(i) % 70000) / 10000.0) AS x, 1 + hash(i * 3) % 4 AS w, hash(i * 5) % 99 AS v
         FROM range({bounds[-1]}) AS t(i)
     """
     found = []

@@ -7,7 +7,7 @@ import duckdb
 import pytest
 
 from midspread.udfs import Function, Parameter
-from tests.udfs.calling import AGGREGATES, NAMES, answers, bits, call, table, value_for
+from tests.udfs.calling import AGGREGATES, NAMES, answers, bits, call, columns_of, table, value_for
 
 each_function = pytest.mark.parametrize("function", AGGREGATES, ids=NAMES)
 each_parameter = pytest.mark.parametrize(
@@ -18,7 +18,8 @@ each_parameter = pytest.mark.parametrize(
         for parameter in function.parameters
     ],
 )
-VALUES = "(VALUES (1.0, 1.0), (2.5, 2.0), (4.0, 1.0), (4.5, 1.0), (90.0, 3.0)) AS visits(x, w)"
+VALUES = """(VALUES (1.0, 1.0, 2.0), (2.5, 2.0, 1.0), (4.0, 1.0, 7.0), (4.5, 1.0, 2.0),
+    (90.0, 3.0, 8.0)) AS visits(x, w, v)"""
 
 
 def refused(connection: duckdb.DuckDBPyConnection, query: str) -> str:
@@ -117,7 +118,7 @@ def test_each_group_uses_its_own(
         together = connection.execute(f"SELECT {called} FROM {source} GROUP BY {key} ORDER BY g")
         assert bits([row[0] for row in together.fetchall()]) == bits(alone)
     connection.execute("INSERT INTO own_parameters VALUES (99, NULL)")
-    connection.execute("INSERT INTO own_values VALUES (99, 1, 1)")
+    connection.execute("INSERT INTO own_values VALUES (99, 1, 1, 1)")
     called = call(function, **{parameter.name: "any_value(setting)"})
     assert "got NULL" in refused(connection, f"SELECT {called} FROM {source} GROUP BY g")
 
@@ -126,7 +127,7 @@ def test_each_group_uses_its_own(
 def test_positional_and_named(connection: duckdb.DuckDBPyConnection, name: str) -> None:
     function = AGGREGATES[NAMES.index(name)]
     settings = [repr(value_for(p)) for p in function.parameters]
-    columns = ", ".join(function.columns)
+    columns = ", ".join(columns_of(function))
     named = [f"{p.name} := {s}" for p, s in zip(function.parameters, settings, strict=True)]
     forms = [
         f"{function.name}({columns}, {', '.join(settings)})",
@@ -149,8 +150,8 @@ def test_positional_and_named(connection: duckdb.DuckDBPyConnection, name: str) 
 def test_every_numeric_type(connection: duckdb.DuckDBPyConnection, kind: str) -> None:
     """Whole numbers that every type holds: the same answer as DOUBLE gives, to the bit."""
     values = "(VALUES (3, 1), (100, 2), (7, 1), (7, 3), (21, 1), (NULL, 2), (64, 1)) AS t(x, w)"
-    cast = f"(SELECT x::{kind} AS x, w::{kind} AS w FROM {values})"
-    double = f"(SELECT x::DOUBLE AS x, w::DOUBLE AS w FROM {values})"
+    cast = f"(SELECT x::{kind} AS x, w::{kind} AS w, (x % 10)::{kind} AS v FROM {values})"
+    double = f"(SELECT x::DOUBLE AS x, w::DOUBLE AS w, (x % 10)::DOUBLE AS v FROM {values})"
     calls = ", ".join(call(function) for function in AGGREGATES)
     found = connection.execute(f"SELECT {calls} FROM {cast}").fetchall()
     assert bits(found) == bits(connection.execute(f"SELECT {calls} FROM {double}").fetchall())
@@ -191,7 +192,8 @@ def test_columns_that_are_not_numbers(
     connection: duckdb.DuckDBPyConnection, function: Function, kind: str
 ) -> None:
     for column in function.columns:
-        taken = [f"{WRONG[kind]}" if c == column else c for c in function.columns]
+        given = zip(function.columns, columns_of(function), strict=True)
+        taken = [WRONG[kind] if name == column else text for name, text in given]
         for query in (
             f"SELECT {call(function, taken)} FROM {VALUES}",
             f"SELECT w, {call(function, taken)} FROM {VALUES} GROUP BY w",

@@ -10,7 +10,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from midspread.udfs import Function
-from tests.udfs.calling import AGGREGATES, NAMES, answers, bits, figures, rows
+from tests.udfs.calling import AGGREGATES, NAMES, answers, bits, figures, partners, rows
 
 each_function = pytest.mark.parametrize("function", AGGREGATES, ids=NAMES)
 REPRODUCIBLE = settings(max_examples=60, deadline=None, derandomize=True)
@@ -47,7 +47,9 @@ def moved(
     ):
         if old is not None and family == "location":
             old = old * factor + shift
-        if old is not None and family == "scale":
+        if old is not None and family == "level":
+            old = old * factor + shift
+        if old is not None and family in ("scale", "slope"):
             old = old * factor
         pairs.append((old, new))
     return pairs
@@ -117,8 +119,10 @@ def test_sign(
     function = AGGREGATES[NAMES.index(name)]
     groups = samples(generator)
     mirrored = [[-x for x in group] for group in groups]
-    before = answers(connection, function, groups, prob=0.5)
-    after = answers(connection, function, mirrored, prob=0.5)
+    # Measurements that stay as they are; weights would have to be all alike.
+    kept = [partners(group) for group in groups] if function.family == "association" else None
+    before = answers(connection, function, groups, kept, prob=0.5)
+    after = answers(connection, function, mirrored, kept, prob=0.5)
     for old, new in zip(before, after, strict=True):
         if isinstance(old, dict):
             assert -new["upper"] == pytest.approx(old["lower"], rel=1e-12)
@@ -127,7 +131,7 @@ def test_sign(
         if old is None:
             assert new is None
             continue
-        turns = function.family in ("location", "weighted") or name in SIGNED
+        turns = function.family in ("location", "weighted", "association") or name in SIGNED
         expected = -old if turns else old
         assert new == pytest.approx(expected, rel=1e-12, abs=1e-12)
 
