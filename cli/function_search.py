@@ -64,6 +64,10 @@ SYNONYMS: Final[Mapping[str, tuple[str, ...]]] = {
     "robust": ("location", "scale", "breakdown"),
     "shape": ("shape",),
     "mad": ("mad", "deviation"),
+    "transform": ("re", "expression", "power", "rung"),
+    "logarithm": ("rung", "log", "power"),
+    "normality": ("power", "normal"),
+    "straighten": ("straightening", "power", "rung"),
     "cut": ("trimmed", "trim"),
 }
 

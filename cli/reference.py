@@ -20,7 +20,7 @@ FAMILIES: Final[Mapping[str, str]] = {
     "scale": "how much the values spread",
     "shape": "how the values are shaped",
     "association": "how two columns hang together",
-    "re-expression": "values on another scale, row by row",
+    "re-expression": "values on another scale, and which scale to choose",
     "resampling": "how sure it is, from the data themselves",
     "tables": "whole tables of answers, in FROM",
 }

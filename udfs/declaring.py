@@ -17,6 +17,7 @@ from midspread.udfs.parameters import Parameter, ParameterError
 
 __all__ = [
     "NULL",
+    "Family",
     "Function",
     "Helper",
     "Parameter",

@@ -120,6 +120,8 @@ def figures(function: Function, answer: Any) -> list[tuple[str, float | None]]:
         return [("shape", None)]
     records = answer if isinstance(answer, list) else [answer]
     known = _LINE_FAMILIES if "slope" in function.fields else _FIELD_FAMILIES
+    if function.family == "re-expression":
+        known = {}
     return [
         (known.get(name, "shape"), record[name])
         for record in records

@@ -125,7 +125,7 @@ def test_infinities_that_are_cut_do_no_harm(
     for huge, infinite in ((up, inf_up), (down, inf_down)):
         unmoved = all(x is not None and abs(x) < 1e6 for _, x in figures(function, huge))
         assert unmoved or function.name not in RESISTANT
-        if unmoved:
+        if unmoved and function.family != "re-expression":  # a logarithm takes 1e300 for 690
             assert bits([infinite]) == bits([huge])
 
 
