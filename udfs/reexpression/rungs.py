@@ -152,7 +152,7 @@ def folded_power(f: Values, power: Values) -> Values:
     columns=("rank", "n"),
     formula="Φ⁻¹((rank − 3/8) / (n + 1/4))",
     source="Blom 1958, Statistical Estimates and Transformed Beta-Variables, Wiley",
-    example="normal_score(CAST(rank() OVER (ORDER BY dwell_s) AS DOUBLE), 500)",
+    example="normal_score(boardings, 60)",
 )
 def normal_score(rank: Values, n: Values) -> Values:
     """Where the value of this rank would stand if the n values were standard normal.
@@ -171,8 +171,8 @@ def normal_score(rank: Values, n: Values) -> Values:
 
     Notes
     -----
-    Normal scores keep the order of the values and drop their distances. DuckDB does not know the
-    type of rank() OVER (…) in time: CAST it to DOUBLE, or take the ranks in a subquery.
+    Normal scores keep the order of the values and drop their distances. DuckDB does not
+    know the type of rank() OVER (…) in time: take the ranks in a subquery and score them outside.
 
     References
     ----------
