@@ -146,7 +146,8 @@ def visits() -> Iterator[duckdb.DuckDBPyConnection]:
         connection.execute(
             "CREATE TABLE visits AS SELECT i AS visit, 'route ' || i % 3 AS route, "
             "(hash(i) % 900) / 10.0 AS dwell_s, i % 40 AS boardings, "
-            "if(i % 2 = 0, 'cash box', 'tap reader') AS payment FROM range(500) AS t(i)"
+            "i % 7 AS vehicle, if(i % 2 = 0, 'cash box', 'tap reader') AS payment "
+            "FROM range(500) AS t(i)"
         )
         yield connection
 

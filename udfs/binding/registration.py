@@ -54,9 +54,9 @@ def register(
     if threads is None:
         row = connection.execute("SELECT current_setting('threads')").fetchone()
         threads = int(row[0]) if row else 1
+    listed = functions().values()  # also imports the modules that declare helpers
     binding = _Binding(connection, Work(control or Control(), threads))
     binding.register_shared()
-    listed = functions().values()
     for register_one, kind in (
         (binding.register_aggregate, "aggregate"),
         (binding.register_batch, "batch"),
