@@ -1,15 +1,20 @@
 """A statistic computed for many groups from Python."""
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 
-from midspread.udfs.binding.computing import Work
 from midspread.udfs.declaring import NULL, Values
 from midspread.udfs.drivers import driver
 from midspread.udfs.grouped import Groups, Task, row_numbers, run
 from midspread.udfs.resampling.statistics import Statistic
 
+if TYPE_CHECKING:
+    # Not at run time: it loads Arrow, and looking up the catalogue must not.
+    from midspread.udfs.binding.computing import Work
 
-def evaluate(statistic: Statistic, groups: Groups, work: Work) -> Values:
+
+def evaluate(statistic: Statistic, groups: Groups, work: "Work") -> Values:
     """The statistic of each group; NaN where a group holds NaN, `NULL` where it has too few values.
 
     Values need not be sorted. A group's answer does not depend on the order of its values.
