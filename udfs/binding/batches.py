@@ -2,7 +2,7 @@
 
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, Final
 
 import numpy as np
 import numpy.typing as npt
@@ -22,6 +22,9 @@ from midspread.udfs.declaring import Function, Values, null_mask
 from midspread.udfs.drivers import Indices
 from midspread.udfs.grouped import Groups
 from midspread.udfs.parameters import ParameterError
+
+NO_RECORD: Final = "no record"
+"""What a batch aggregate may return besides its fields: which groups are NULL as a whole."""
 
 
 @dataclass(frozen=True)
@@ -182,9 +185,10 @@ def compute_batch(function: Function, work: Work, *arguments: Any) -> pa.Array:
     assert function.kernel is not None
     batch = Batch(function, work, arguments)
     found = function.kernel(batch)
-    return records(
-        function.fields, function.field_types, found, batch.lengths < function.smallest_n
-    )
+    missing = batch.lengths < function.smallest_n
+    if NO_RECORD in found:
+        missing |= found[NO_RECORD]
+    return records(function.fields, function.field_types, found, missing)
 
 
 def records(

@@ -99,28 +99,26 @@ def counted_value(
     sums: Values,
 ) -> float:
     """A statistic of the resample of `total` values that has row j ``counts[unit[j]]`` times."""
+    g = 0
+    part = 0.5
+    is_mean = False
     if form == QUANTILE:
         low, high, part = quantile_place(total, p[0], p[1])
-        row, before = _row_of(low, unit, counts, 0, 0, step, below)
-        if part == 0.0:
-            return x[row]
-        other, _ = _row_of(high, unit, counts, row, before, 0, below)
-        return x[other] if part == 1.0 else between(x[row], x[other], part)
-    g = cut_from_each_tail(total, p[0])
-    if p[0] == 0.5 or 2 * g >= total:
-        row, before = _row_of((total - 1) // 2, unit, counts, 0, 0, step, below)
-        if total % 2 == 1:
-            return x[row]
-        other, _ = _row_of(total // 2, unit, counts, row, before, 0, below)
-        return midpoint(x[row], x[other])
-    first, before_first = _row_of(g, unit, counts, 0, 0, step, below)
-    if step > 0:
-        last, before_last = _row_of(total - g - 1, unit, counts, 0, 0, step, below)
     else:
-        last, before_last = _row_of(total - g - 1, unit, counts, first, before_first, 0, below)
+        g = cut_from_each_tail(total, p[0])
+        is_mean = p[0] != 0.5 and 2 * g < total
+        low = g if is_mean else (total - 1) // 2
+        high = total - 1 - low
+    first, before_first = _row_of(low, unit, counts, 0, 0, step, below)
+    near = high <= low + 1
+    last, before_last = _row_of(high, unit, counts, first, before_first, 0 if near else step, below)
     low_value, high_value = x[first], x[last]
-    if low_value == high_value:
+    if low_value == high_value or part == 0.0:
         return low_value
+    if not is_mean:
+        if form == QUANTILE:
+            return high_value if part == 1.0 else between(low_value, high_value, part)
+        return midpoint(low_value, high_value)
     middle = (before_first + counts[unit[first]] - g) * (low_value - origin)
     middle += (total - g - before_last) * (high_value - origin)
     middle += _sum_of_rows(x, unit, counts, origin, first + 1, last, step, sums)
@@ -170,27 +168,24 @@ def _sum_of_rows(
     step: int,
     sums: Values,
 ) -> float:
-    """Σ counts · (x − origin) over start ≤ row < stop."""
-    if step > 0:
-        first, last = (start + step - 1) // step, stop // step
-        if first < last:
-            total = _sum_walked(x, unit, counts, origin, start, first * step)
-            lost = 0.0
-            for u in range(counts.size):
-                total, lost = add(total, lost, counts[u] * (sums[last, u] - sums[first, u]))
-            return total + lost + _sum_walked(x, unit, counts, origin, last * step, stop)
-    return _sum_walked(x, unit, counts, origin, start, stop)
+    """Σ counts · (x − origin) over start ≤ row < stop: by marks, and row by row at both ends.
 
-
-@compiled
-def _sum_walked(
-    x: Values, unit: Small, counts: Small, origin: float, start: int, stop: int
-) -> float:
-    """The same, row by row: plainly within a block, blocks compensated."""
+    Rows are added plainly within a block; blocks are compensated.
+    """
     total = lost = 0.0
+    between_marks, rest = stop, stop
+    if step > 0:
+        lower, upper = (start + step - 1) // step, stop // step
+        if lower < upper:
+            between_marks, rest = lower * step, upper * step
+            for u in range(counts.size):
+                total, lost = add(total, lost, counts[u] * (sums[upper, u] - sums[lower, u]))
     first = start
     while first < stop:
-        end = min(first + _BLOCK, stop)
+        if first == between_marks:
+            first = rest
+            continue
+        end = min(first + _BLOCK, between_marks if first < between_marks else stop)
         s0 = s1 = 0.0
         j = first
         while j + 2 <= end:

@@ -133,10 +133,9 @@ def sum_of_blocks(key: np.uint64, block: int, sums: Values) -> float:
         length = min(block, n - drawn)
         start = below(key, number, n)
         end = start + length
-        if end <= n:
-            value = sums[end] - sums[start]
-        else:
-            value = (sums[n] - sums[start]) + sums[end - n]
+        value = sums[min(end, n)] - sums[start]
+        if end > n:
+            value += sums[end - n]
         total, lost = add(total, lost, value)
         drawn += length
         number += 1
@@ -219,7 +218,7 @@ def written_resamples(
     blocks: Indices,
     parts: Indices,
     seeds: Values,
-    form: int,
+    form: int,  # noqa: ARG001 - one signature for both loops
     p: Values,
     smallest: int,
     first: int,
