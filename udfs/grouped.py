@@ -10,7 +10,7 @@ import functools
 import itertools
 import os
 import threading
-from collections.abc import Callable, Iterable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, field
 from typing import Final
@@ -140,33 +140,18 @@ def run(
     portions = _portions(groups.offsets)
     total = int(groups.offsets[-1] - groups.offsets[0])
     helpers = min(threads - 1, len(portions) - 1, total // _WORTH_A_THREAD)
-    tasks_of_portions = (
-        functools.partial(_work_off, groups, lengths, *portion, tasks, out, rows, control)
-        for portion in portions
-    )
-    in_turn(tasks_of_portions, control, 1 + helpers)
-
-
-def in_turn(tasks: Iterable[Callable[[], None]], control: Control, threads: int) -> None:
-    """Do every task; up to so many threads, this one among them, take the next in turn.
-
-    Raises
-    ------
-    Stopped
-        When the control asked to stop; tasks not begun by then are left undone.
-    """
-    waiting = iter(tasks)
+    waiting = iter(portions)
     taking = threading.Lock()
 
     def work() -> None:
         while not control.stopped:
             with taking:
-                task = next(waiting, None)
-            if task is None:
+                portion = next(waiting, None)
+            if portion is None:
                 return
-            task()
+            _work_off(groups, lengths, *portion, tasks, out, rows, control)
 
-    pending = [_pool().submit(work) for _ in range(threads - 1)]
+    pending = [_pool().submit(work) for _ in range(helpers)]
     try:
         work()
     finally:

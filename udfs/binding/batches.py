@@ -2,7 +2,7 @@
 
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any, Final
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -18,13 +18,10 @@ from midspread.udfs.binding.arrow_columns import (
     single_chunk,
 )
 from midspread.udfs.binding.computing import Work, groups_of
-from midspread.udfs.declaring import Function, Values, null_mask
+from midspread.udfs.declaring import NO_RECORD, Function, Values, null_mask
 from midspread.udfs.drivers import Indices
 from midspread.udfs.grouped import Groups
 from midspread.udfs.parameters import ParameterError
-
-NO_RECORD: Final = "no record"
-"""What a batch aggregate may return besides its fields: which groups are NULL as a whole."""
 
 
 @dataclass(frozen=True)

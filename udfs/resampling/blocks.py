@@ -3,13 +3,12 @@
 import functools
 from collections.abc import Callable
 from dataclasses import replace
-from typing import Any, Final
+from typing import TYPE_CHECKING, Any, Final
 
 import numpy as np
 
-from midspread.udfs.binding.batches import NO_RECORD, Batch
 from midspread.udfs.compiling import compile_driver
-from midspread.udfs.declaring import ParameterError, batch_aggregate
+from midspread.udfs.declaring import NO_RECORD, ParameterError, batch_aggregate
 from midspread.udfs.drivers import Indices
 from midspread.udfs.grouped import row_numbers
 from midspread.udfs.parameters import OPTIONAL, Parameter
@@ -18,6 +17,9 @@ from midspread.udfs.resampling.counted_batches import Rows, bootstrapped
 from midspread.udfs.resampling.parameters import CONFIDENCE, METHOD, RESAMPLES
 from midspread.udfs.resampling.randomness import SEED
 from midspread.udfs.resampling.statistics import STATISTIC
+
+if TYPE_CHECKING:
+    from midspread.udfs.binding.batches import Batch
 
 BLOCK: Final = Parameter(
     "block",
@@ -64,7 +66,7 @@ BLOCK_METHOD: Final = replace(
     smallest_n=2,
     example="bootstrap_blocks(dwell_s, visit, statistic := 'trimmed_mean(0.2)')",
 )
-def bootstrap_blocks(batch: Batch) -> dict[str, Any]:
+def bootstrap_blocks(batch: "Batch") -> dict[str, Any]:
     """Interval for a statistic of a series, whose neighbouring values resemble one another.
 
     Blocks of successive values are drawn, so that what follows what within a block stays as it

@@ -8,16 +8,14 @@ import functools
 import itertools
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
-from typing import Any, Final
+from typing import TYPE_CHECKING, Any, Final
 
 import numpy as np
 
-from midspread.udfs.binding.batches import Batch
-from midspread.udfs.binding.computing import Work
 from midspread.udfs.compiling import compile_driver
 from midspread.udfs.declaring import NULL, Values, declared, null_mask
 from midspread.udfs.drivers import Indices
-from midspread.udfs.grouped import in_turn, row_numbers
+from midspread.udfs.grouped import Control, row_numbers
 from midspread.udfs.resampling.counted import GENERAL, QUANTILE, TAME, Small, form_of
 from midspread.udfs.resampling.counted_drawing import (
     SIGNATURE,
@@ -27,11 +25,16 @@ from midspread.udfs.resampling.counted_drawing import (
 from midspread.udfs.resampling.evaluating import evaluate
 from midspread.udfs.resampling.intervals import acceleration, intervals
 from midspread.udfs.resampling.statistics import Statistic, compiled_for, read_statistic
+from midspread.udfs.resampling.working import work_off
+
+if TYPE_CHECKING:
+    from midspread.udfs.binding.batches import Batch
 
 PARTS_LEFT_OUT: Final = 1000
 """More units than this are left out in so many parts, not one by one."""
 
 _PORTION_WORK: Final = 1 << 25
+_PORTION_ROWS: Final = 1 << 18
 _PORTION_DRAWS: Final = 1 << 20
 _SHARED_WORK: Final = 1 << 28
 """Rows times resamples: worked on at once by one thread; shared among threads from here on."""
@@ -76,6 +79,7 @@ class Rows:
 class _Plan:
     """What some groups of a batch have in common."""
 
+    text: str
     statistic: Statistic
     method: str
     resamples: int
@@ -85,18 +89,22 @@ LayOut = Callable[[Indices], Rows]
 """From numbers of groups to their rows; a group of fewer than two units is not drawn from."""
 
 
-def bootstrapped(batch: Batch, lay_out: LayOut) -> dict[str, Any]:
+def bootstrapped(batch: "Batch", lay_out: LayOut) -> dict[str, Any]:
     """The figures of each group: estimate, lower, upper, se, bias, resamples, units and blocks."""
     fields = ("estimate", "lower", "upper", "se", "bias", "resamples")
     found = {name: np.full(batch.size, NULL) for name in fields}
     found["units"] = np.zeros(batch.size)
     found["blocks"] = np.zeros(batch.size)
+    control = batch.work.control
     confidence, seeds = batch.number("confidence"), batch.number("seed")
+    known: dict[str, Values] = {}
     for plan, members in _plans(batch):
-        estimates = evaluate(plan.statistic, batch.groups("x"), batch.work)
+        if plan.text not in known:
+            known[plan.text] = evaluate(plan.statistic, batch.groups("x"), batch.work)
+        estimates = known[plan.text]
         found["estimate"][members] = estimates[members]
 
-        def work_off(groups: Indices, plan: _Plan, estimates: Values, threads: int) -> None:
+        def draw_and_limit(groups: Indices, plan: _Plan, estimates: Values, threads: int) -> None:
             rows = lay_out(groups)
             found["units"][groups] = rows.units
             found["blocks"][groups] = rows.blocks
@@ -105,13 +113,12 @@ def bootstrapped(batch: Batch, lay_out: LayOut) -> dict[str, Any]:
             if not drawn.size:
                 return
             nothing = np.zeros(drawn.size, dtype=np.int64)
-            work = Work(batch.work.control, threads)
-            draws = _resampled(plan, rows, nothing, seeds[drawn], plan.resamples, work)
+            draws = _resampled(plan, rows, nothing, seeds[drawn], plan.resamples, control, threads)
             at = estimates[drawn]
             _unify_ties(draws, at)
             left = None
             if plan.method == "bca":
-                left = _accelerations(plan, rows, seeds[drawn], work)
+                left = _accelerations(plan, rows, seeds[drawn], control, threads)
             limits = intervals(plan.method, at, draws, confidence[drawn], accelerations=left)
             for name in ("lower", "upper", "se", "bias", "resamples"):
                 found[name][drawn] = getattr(limits, name)
@@ -119,17 +126,17 @@ def bootstrapped(batch: Batch, lay_out: LayOut) -> dict[str, Any]:
         lengths = batch.lengths
         shared = members[lengths[members] * plan.resamples >= _SHARED_WORK]
         portions = _portions(np.setdiff1d(members, shared), lengths, plan.resamples)
-        in_turn(
-            (functools.partial(work_off, part, plan, estimates, 1) for part in portions),
-            batch.work.control,
+        work_off(
+            (functools.partial(draw_and_limit, part, plan, estimates, 1) for part in portions),
+            control,
             batch.work.threads,
         )
         for group in shared:
-            work_off(np.array([group]), plan, estimates, batch.work.threads)
+            draw_and_limit(np.array([group]), plan, estimates, batch.work.threads)
     return found
 
 
-def _plans(batch: Batch) -> Iterator[tuple[_Plan, Indices]]:
+def _plans(batch: "Batch") -> Iterator[tuple[_Plan, Indices]]:
     """Groups by what they ask for."""
     numbers = batch.number("resamples")
     asked: dict[tuple[str, str, int], list[int]] = {}
@@ -138,24 +145,31 @@ def _plans(batch: Batch) -> Iterator[tuple[_Plan, Indices]]:
         asked.setdefault((text, method, int(resamples)), []).append(group)
     for (text, method, resamples), members in asked.items():
         statistic = read_statistic(batch.function.name, text)
-        yield _Plan(statistic, method, resamples), np.array(members, dtype=np.int64)
+        yield _Plan(text, statistic, method, resamples), np.array(members, dtype=np.int64)
 
 
 def _portions(members: Indices, lengths: Indices, resamples: int) -> Iterator[Indices]:
     """Runs of groups that are little enough work for one thread at a time."""
     most = max(_PORTION_DRAWS // resamples, 1)
+    at_once = min(_PORTION_WORK // resamples, _PORTION_ROWS)
     ends = np.cumsum(lengths[members])
     start = 0
     while start < members.size:
         done = ends[start - 1] if start else 0
-        stop = int(np.searchsorted(ends, done + _PORTION_WORK // resamples, side="right"))
+        stop = int(np.searchsorted(ends, done + at_once, side="right"))
         stop = min(max(stop, start + 1), start + most)
         yield members[start:stop]
         start = stop
 
 
 def _resampled(
-    plan: _Plan, rows: Rows, parts: Indices, seeds: Values, resamples: int, work: Work
+    plan: _Plan,
+    rows: Rows,
+    parts: Indices,
+    seeds: Values,
+    resamples: int,
+    control: Control,
+    threads: int,
 ) -> Values:
     """The statistic of every resample, a row for each group; or with each part left out."""
     out = np.full((rows.units.size, resamples), NULL)
@@ -173,9 +187,9 @@ def _resampled(
         loop = _loop(plan.statistic.function.name if loop_form == GENERAL else "")
         some = rows.only(chosen)
         part = out if chosen.all() else out[chosen]
-        shares = _SHARES * work.threads if work.threads > 1 else 1
+        shares = _SHARES * threads if threads > 1 else 1
         bounds = np.unique(np.linspace(0, resamples, shares + 1).astype(np.int64))
-        in_turn(
+        work_off(
             (
                 functools.partial(
                     loop,
@@ -192,12 +206,12 @@ def _resampled(
                     int(first),
                     int(stop),
                     part,
-                    work.control.cells,
+                    control.cells,
                 )
                 for first, stop in itertools.pairwise(bounds)
             ),
-            work.control,
-            work.threads,
+            control,
+            threads,
         )
         if part is not out:
             out[chosen] = part
@@ -221,9 +235,11 @@ def _unify_ties(draws: Values, estimates: Values) -> None:
     np.copyto(draws, np.broadcast_to(centre, draws.shape), where=near)
 
 
-def _accelerations(plan: _Plan, rows: Rows, seeds: Values, work: Work) -> Values:
+def _accelerations(
+    plan: _Plan, rows: Rows, seeds: Values, control: Control, threads: int
+) -> Values:
     """The acceleration of bca from the jackknife over units, or over parts of them."""
     parts = np.minimum(rows.units, PARTS_LEFT_OUT)
-    left = _resampled(plan, rows, parts, seeds, int(parts.max()), work)
+    left = _resampled(plan, rows, parts, seeds, int(parts.max()), control, threads)
     kept = ~null_mask(left).reshape(left.shape)
     return np.array([acceleration(row[some]) for row, some in zip(left, kept, strict=True)])

@@ -1,12 +1,11 @@
 """`bootstrap_units`: whole units resampled, for rows that are not independent."""
 
 from dataclasses import replace
-from typing import Any, Final
+from typing import TYPE_CHECKING, Any, Final
 
 import numpy as np
 
-from midspread.udfs.binding.batches import NO_RECORD, Batch
-from midspread.udfs.declaring import batch_aggregate
+from midspread.udfs.declaring import NO_RECORD, batch_aggregate
 from midspread.udfs.drivers import Indices
 from midspread.udfs.grouped import row_numbers
 from midspread.udfs.resampling.counted import Small
@@ -14,6 +13,9 @@ from midspread.udfs.resampling.counted_batches import Rows, bootstrapped
 from midspread.udfs.resampling.parameters import CONFIDENCE, METHOD, RESAMPLES
 from midspread.udfs.resampling.randomness import SEED
 from midspread.udfs.resampling.statistics import STATISTIC
+
+if TYPE_CHECKING:
+    from midspread.udfs.binding.batches import Batch
 
 UNIT_METHOD: Final = replace(
     METHOD, default="'percentile'", choices=("percentile", "basic", "normal", "bca")
@@ -47,7 +49,7 @@ COST: Final = (
     smallest_n=2,
     example="bootstrap_units(dwell_s, vehicle, statistic := 'trimmed_mean(0.2)')",
 )
-def bootstrap_units(batch: Batch) -> dict[str, Any]:
+def bootstrap_units(batch: "Batch") -> dict[str, Any]:
     """Interval for a statistic when rows belong to units, such as vehicles or days.
 
     Rows of one unit resemble one another; drawn one by one they would make the interval too
