@@ -46,7 +46,9 @@ def refresh(names: tuple[str, ...], dry_run: bool, settings: Settings) -> None:
         for made in refresh_grids(lambda: settings.session(screen), path, names, about):
             screen.clear()
             done += 1
-            if made.failure:
+            if made.is_skipped:
+                click.echo(f"{made.grid.name}: left as it is, because {made.failure} failed")
+            elif made.failure:
                 failures += 1
                 click.echo(f"{made.grid.name}: failed, its last good contents stay: {made.failure}")
             elif made.is_changed:

@@ -278,7 +278,7 @@ class Session:
         self._attach_sources()
         question = None
         script = [*self._definitions, statement.text]
-        self._bring_grids(script)
+        self._warn_of_stale(self._bring_grids(script))
         if self._cache is not None and statement.kind is Kind.QUERY:
             question = self._cache.question(
                 script, self._settings, self._connection, self._has_macros, self._stamps()
@@ -314,6 +314,12 @@ class Session:
             if self._cache is not None and self._cache.is_named:
                 raise
             return []  # a store that cannot be read turns off the cache with a word of its own
+
+    def _warn_of_stale(self, read: Sequence[str]) -> None:
+        if self._grids is not None and read:
+            with self.cursor() as connection:
+                for line in self._grids.stale(read, connection, self._functions):
+                    self._notice(line)
 
     def _stamps(self) -> dict[str, int]:
         return self._grids.stamps if self._grids is not None else {}

@@ -2,7 +2,7 @@
 
 import contextlib
 import os
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 from datetime import datetime
 from enum import StrEnum
@@ -45,6 +45,7 @@ def freshness_of_all(
     connection: duckdb.DuckDBPyConnection,
     functions: Mapping[str, Function],
     store_folder: Path,
+    names: Collection[str] | None = None,
 ) -> dict[str, Freshness]:
     """The state of every grid, by folded name.
 
@@ -58,10 +59,12 @@ def freshness_of_all(
         Our functions by name, for their versions.
     store_folder : Path
         Where the store is: grids' folders are relative to it.
+    names : collection of str, optional
+        Only these grids, by folded name, and all they rest on.
     """
     looked_at: dict[tuple[str, str], list[list[Any]]] = {}
     found: dict[str, Freshness] = {}
-    for name in in_order(grids):
+    for name in in_order(grids, names):
         grid = grids[name]
         why = reasons(grid, grids, connection, functions, store_folder, looked_at)
         why += [
@@ -104,11 +107,11 @@ def reasons(
     ]
 
 
-def in_order(grids: Mapping[str, Grid]) -> list[str]:
-    """Folded names, each after the grids it reads; those in a circle come in any order."""
+def in_order(grids: Mapping[str, Grid], names: Collection[str] | None = None) -> list[str]:
+    """Folded names, each after the grids it reads: of all grids, or some and all they rest on."""
     order: list[str] = []
     done: set[str] = set()
-    for start in grids:
+    for start in grids if names is None else names:
         waiting = [(start, False)]
         while waiting:
             name, is_ready = waiting.pop()

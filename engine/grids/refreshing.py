@@ -38,13 +38,16 @@ class Refreshed:
         What had made it stale.
     is_changed : bool
         Whether its contents are others than before.
+    is_skipped : bool
+        Whether it was left as it is because a grid it reads failed.
     failure : str
-        Why it could not be computed; empty when it could.
+        Why it could not be computed, or the grid that failed; empty when it could.
     """
 
     grid: Grid
     why: tuple[str, ...]
     is_changed: bool = False
+    is_skipped: bool = False
     failure: str = ""
 
 
@@ -65,29 +68,19 @@ def plan(
     MidspreadError
         When there is no grid of a name.
     """
-    wanted = set(grids) if not names else _with_what_they_rest_on(grids, names)
+    wanted = _checked(grids, names) if names else None
     return [
-        grids[name]
-        for name in in_order(grids)
-        if name in wanted and states[name].state is not State.FRESH
+        grids[name] for name in in_order(grids, wanted) if states[name].state is not State.FRESH
     ]
 
 
-def _with_what_they_rest_on(grids: Mapping[str, Grid], names: Sequence[str]) -> set[str]:
-    waiting = []
+def _checked(grids: Mapping[str, Grid], names: Sequence[str]) -> list[str]:
     for name in names:
         if name.casefold() not in grids:
             raise MidspreadError(
                 f"refresh: there is no grid {name}; midspread show lists those there are."
             )
-        waiting.append(name.casefold())
-    found: set[str] = set()
-    while waiting:
-        folded = waiting.pop()
-        if folded in grids and folded not in found:
-            found.add(folded)
-            waiting += [other.casefold() for other in grids[folded].reads]
-    return found
+    return [name.casefold() for name in names]
 
 
 def look(session: "Session", store_path: Path) -> tuple[dict[str, Grid], dict[str, Freshness]]:
@@ -138,7 +131,7 @@ def refresh(
         broken = [other for other in grid.reads if other.casefold() in failed]
         if broken:
             failed.add(grid.folded)
-            yield Refreshed(grid, states[grid.folded].why, failure=f"{broken[0]} failed")
+            yield Refreshed(grid, states[grid.folded].why, is_skipped=True, failure=broken[0])
             continue
         made = _refresh_one(open_session, store_path, grid, bool(grid.failure))
         if made is None:

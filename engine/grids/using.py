@@ -1,13 +1,15 @@
 """Grids in a session: ``FROM grid`` reads a copy of its rows."""
 
-from collections.abc import Collection
+from collections.abc import Collection, Mapping
 from pathlib import Path
 
 import duckdb
 
 from midspread.engine.grids import ledger
+from midspread.engine.grids.freshness import State, freshness_of_all
 from midspread.engine.store.quoting import literal, quoted
 from midspread.engine.store.store import Store
+from midspread.udfs import Function
 
 _HIDDEN = "_midspread_store"
 
@@ -63,6 +65,36 @@ class GridsInUse:
         if new:
             self._copy(store, new)
         return [name for name, _ in wanted]
+
+    def stale(
+        self,
+        names: Collection[str],
+        connection: duckdb.DuckDBPyConnection,
+        functions: Mapping[str, Function],
+    ) -> list[str]:
+        """A line for each of some grids that is not fresh.
+
+        Parameters
+        ----------
+        names : collection of str
+            The grids.
+        connection : duckdb.DuckDBPyConnection
+            Where patterns of files are matched.
+        functions : mapping
+            Our functions by name, for their versions.
+        """
+        store = Store.open(self.path, create=False)
+        with store.reading() as engine:
+            grids = ledger.grids(engine)
+        store.close()
+        wanted = [name.casefold() for name in names if name.casefold() in grids]
+        states = freshness_of_all(grids, connection, functions, store.path.parent, wanted)
+        return [
+            f"{grids[name].name} is {states[name].state} ({'; '.join(states[name].why)}); "
+            f"midspread refresh {grids[name].name} computes it again"
+            for name in wanted
+            if states[name].state is not State.FRESH
+        ]
 
     def _copy(self, store: Store, names: list[str]) -> None:
         run = self._connection.execute
