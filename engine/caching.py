@@ -90,7 +90,7 @@ class AnswerCache:
         on_notice: Callable[[str], None],
     ) -> None:
         self._path = path
-        self.is_named = is_named
+        self._is_named = is_named
         self._functions = functions
         self._on_notice = on_notice
         self._answers: Answers | None = None
@@ -197,7 +197,7 @@ class AnswerCache:
 
     def _turn_off(self, error: StoreError) -> None:
         self._answers, self._is_off = None, True
-        if self.is_named and isinstance(error, _UNUSABLE):
+        if self._is_named and isinstance(error, _UNUSABLE):
             raise error
         self._on_notice(f"cache off: {error}")
 

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Final, TypeVar
 import duckdb
 
 from midspread.engine.answer import Progress
-from midspread.engine.grids.computing import RESULT
+from midspread.engine.grids.model import RESULT
 from midspread.engine.parsing import NotParsed, literal
 from midspread.engine.statements import Kind, Statement
 from midspread.udfs import Function

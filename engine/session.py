@@ -16,9 +16,6 @@ from midspread.engine.answer import Answer, Progress
 from midspread.engine.caching import AnswerCache, Question, when
 from midspread.engine.connecting import attach, checked_sources, connect
 from midspread.engine.errors import MidspreadError, StoreError, UsageError
-from midspread.engine.grids.computing import Computed, Inquiry
-from midspread.engine.grids.grouping import grouped_by
-from midspread.engine.grids.reading import tables_read
 from midspread.engine.grids.using import GridsInUse
 from midspread.engine.guard import Guard
 from midspread.engine.inputs.canonical import canonical_sql
@@ -32,6 +29,8 @@ from midspread.udfs import functions
 
 if TYPE_CHECKING:
     import pyarrow as pa
+
+    from midspread.engine.grids.computing import Computed
 
 __all__ = ["Answer", "Progress", "Session"]
 
@@ -154,7 +153,7 @@ class Session:
             texts.append(self._runner.expand(statement))
         return ";\n".join(texts)
 
-    def materialise(self, command: str, sql: str) -> Computed:
+    def materialise(self, command: str, sql: str) -> "Computed":
         """Compute a script's one query into a scratch database, there until the session closes.
 
         Parameters
@@ -169,6 +168,10 @@ class Session:
         MidspreadError
             With one sentence for the user.
         """
+        from midspread.engine.grids.computing import Computed, Inquiry
+        from midspread.engine.grids.grouping import grouped_by
+        from midspread.engine.grids.reading import tables_read
+
         statements = self._read(sql)
         last = statements[-1]
         if last.kind is not Kind.QUERY or sum(one.answers for one in statements) != 1:
@@ -311,8 +314,6 @@ class Session:
         try:
             return self._grids.bring(names)
         except StoreError:
-            if self._cache is not None and self._cache.is_named:
-                raise
             return []  # a store that cannot be read turns off the cache with a word of its own
 
     def _warn_of_stale(self, read: Sequence[str]) -> None:

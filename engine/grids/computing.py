@@ -7,7 +7,6 @@ from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import version
 from pathlib import Path
-from typing import Final
 
 import duckdb
 
@@ -19,9 +18,6 @@ from midspread.engine.inputs.fingerprints import (
     reason_not_to_keep,
 )
 from midspread.udfs import Function
-
-RESULT: Final = "result"
-"""The table that holds the rows in the scratch database."""
 
 
 @dataclass(frozen=True)

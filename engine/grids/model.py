@@ -12,6 +12,8 @@ from midspread.engine.errors import UsageError
 _RESERVED: Final = frozenset({"main", "temp", "memory", "system", "store", "information_schema"})
 _FILE_LIKE: Final = re.compile(r"[./\\*?\[\]]")
 MOST_LETTERS: Final = 120
+RESULT: Final = "result"
+"""The table that holds a grid's new rows in their scratch database."""
 
 
 class GridKind(StrEnum):
