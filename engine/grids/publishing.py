@@ -8,7 +8,8 @@ import duckdb
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
-from midspread.engine.grids.model import RESULT, Column, ColumnKind, Computed, Grid
+from midspread.engine.grids.computing import Computed
+from midspread.engine.grids.model import RESULT, Column, ColumnKind, Grid
 from midspread.engine.grids.tables import contents_query, key_text
 from midspread.engine.store.quoting import literal, quoted
 
