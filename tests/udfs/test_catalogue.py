@@ -20,6 +20,13 @@ EVERY = tuple(functions().values())
 each_entry = pytest.mark.parametrize("function", EVERY, ids=[f.name for f in EVERY])
 each_function = pytest.mark.parametrize("function", AGGREGATES, ids=NAMES)
 
+_INTERVAL = {
+    "statistic": "'trimmed_mean(0.2)'",
+    "confidence": 0.95,
+    "method": "'bca'",
+    "resamples": 2000,
+    "seed": 0,
+}
 DEFINED = {
     # name: parameters with their defaults, as the definitions give them
     "trimmed_mean": {"share": 0.2},
@@ -62,6 +69,10 @@ DEFINED = {
     "box_cox_power": {},
     "yeo_johnson_power": {},
     "symmetry_power": {},
+    "bootstrap_interval": _INTERVAL,
+    "bootstrap_interval_yx": {**_INTERVAL, "statistic": "'spearman'"},
+    "jackknife": {"statistic": "'trimmed_mean(0.2)'"},
+    "jackknife_yx": {"statistic": "'spearman'"},
 }
 _POWER_FIELDS = ("power", "lower", "upper", "log_likelihood")
 FIELDS = {
@@ -71,12 +82,19 @@ FIELDS = {
     "adjusted_fences": ("lower", "upper"),
     "box_cox_power": _POWER_FIELDS,
     "yeo_johnson_power": _POWER_FIELDS,
+    **dict.fromkeys(
+        ("bootstrap_interval", "bootstrap_interval_yx"),
+        ("estimate", "lower", "upper", "se", "bias", "n", "resamples"),
+    ),
+    **dict.fromkeys(("jackknife", "jackknife_yx"), ("estimate", "bias", "se", "n")),
 }
 COLUMNS = {
     "box_cox_back": ("v",),
     "yeo_johnson_back": ("v",),
     "folded_power": ("f",),
     "normal_score": ("rank", "n"),
+    "bootstrap_interval_yx": ("y", "x"),
+    "jackknife_yx": ("y", "x"),
 }
 
 

@@ -1,0 +1,195 @@
+"""Resamples of sorted values, drawn as counts or as sums; n values drawn n times.
+
+A resample is multinomial: how often each value is drawn. Over long runs of values the number of
+draws that fall in each block is drawn first, by binomial splitting, which is exact; what is drawn
+within a block then stays in the processor's cache. Whole numbers below a bound are exactly uniform
+(Lemire 2019).
+"""
+
+from typing import Final
+
+import numpy as np
+import numpy.typing as npt
+
+from midspread.udfs.declaring import Values, compiled
+from midspread.udfs.resampling.randomness import mixed
+from midspread.udfs.resampling.variates import GOLDEN, HALF, LOW_HALF, binomial
+
+Counts = npt.NDArray[np.int32]
+
+BLOCK: Final = 4096
+"""Values in a block; a power of 2, so that bits of a word are numbers within it."""
+_BITS: Final = 12
+_MASK: Final = np.uint64(BLOCK - 1)
+_LANE1: Final = np.uint64(_BITS)
+_LANE2: Final = np.uint64(2 * _BITS)
+_LANE3: Final = np.uint64(3 * _BITS)
+_LANE4: Final = np.uint64(4 * _BITS)
+
+
+@compiled
+def clear(counts: Counts) -> None:
+    """Set all to 0."""
+    for i in range(counts.size):
+        counts[i] = 0
+
+
+@compiled
+def count_draws(state: np.uint64, counts: Counts, draws: int) -> np.uint64:
+    """Draw so many times from as many values as there are counts, and count."""
+    size = counts.size
+    if size == 1:
+        counts[0] += draws
+        return state
+    span = np.uint64(size)
+    unfair = np.uint64((1 << 32) % size)
+    left = draws
+    while left >= 2:
+        state = state + GOLDEN
+        bits = mixed(state)
+        low = (bits & LOW_HALF) * span
+        high = (bits >> HALF) * span
+        if (low & LOW_HALF) >= unfair:
+            counts[low >> HALF] += 1
+            left -= 1
+        if (high & LOW_HALF) >= unfair:
+            counts[high >> HALF] += 1
+            left -= 1
+    while left >= 1:
+        state = state + GOLDEN
+        low = (mixed(state) & LOW_HALF) * span
+        if (low & LOW_HALF) >= unfair:
+            counts[low >> HALF] += 1
+            left -= 1
+    return state
+
+
+@compiled
+def resample_into(state: np.uint64, counts: Counts, x: Values, y: Values) -> np.uint64:
+    """Write a resample of sorted x into y, sorted; counts is scratch for a block."""
+    n = x.size
+    left = n
+    at = 0
+    start = 0
+    while start < n:
+        stop = min(start + BLOCK, n)
+        own = left
+        if stop < n:
+            own, state = binomial(state, left, (stop - start) / (n - start))
+        left -= own
+        block = counts[: stop - start]
+        clear(block)
+        state = count_draws(state, block, own)
+        for i in range(stop - start):
+            for _ in range(block[i]):
+                y[at] = x[start + i]
+                at += 1
+        start = stop
+    return state
+
+
+@compiled
+def resample_rows(state: np.uint64, counts: Counts, rows: npt.NDArray[np.int64]) -> np.uint64:
+    """Write the row numbers of a resample, ascending; counts is scratch for a block."""
+    n = rows.size
+    left = n
+    at = 0
+    start = 0
+    while start < n:
+        stop = min(start + BLOCK, n)
+        own = left
+        if stop < n:
+            own, state = binomial(state, left, (stop - start) / (n - start))
+        left -= own
+        block = counts[: stop - start]
+        clear(block)
+        state = count_draws(state, block, own)
+        for i in range(stop - start):
+            for _ in range(block[i]):
+                rows[at] = start + i
+                at += 1
+        start = stop
+    return state
+
+
+@compiled
+def sum_draws(state: np.uint64, v: Values, draws: int) -> tuple[float, float, np.uint64]:
+    """Draw so many times from v: the sum and the sum of squares of what is drawn."""
+    n = v.size
+    total = squares = 0.0
+    left = draws
+    start = 0
+    while start < n and left > 0:
+        stop = min(start + BLOCK, n)
+        own = left
+        if stop < n:
+            own, state = binomial(state, left, (stop - start) / (n - start))
+        left -= own
+        block = v[start:stop]
+        if stop - start == BLOCK:
+            part, square, state = _sum_of_whole_block(state, block, own)
+        else:
+            part, square, state = _sum_of_part_block(state, block, own)
+        total += part
+        squares += square
+        start = stop
+    return total, squares, state
+
+
+@compiled
+def _sum_of_whole_block(state: np.uint64, v: Values, draws: int) -> tuple[float, float, np.uint64]:
+    """Five numbers below 4096 from each word."""
+    s0 = s1 = q0 = q1 = 0.0
+    for _ in range(draws // 5):
+        state = state + GOLDEN
+        bits = mixed(state)
+        a = v[bits & _MASK]
+        b = v[(bits >> _LANE1) & _MASK]
+        c = v[(bits >> _LANE2) & _MASK]
+        d = v[(bits >> _LANE3) & _MASK]
+        e = v[(bits >> _LANE4) & _MASK]
+        s0 += (a + b) + (c + d)
+        s1 += e
+        q0 += (a * a + b * b) + (c * c + d * d)
+        q1 += e * e
+    state = state + GOLDEN
+    bits = mixed(state)
+    for _ in range(draws % 5):
+        a = v[bits & _MASK]
+        bits >>= _LANE1
+        s1 += a
+        q1 += a * a
+    return s0 + s1, q0 + q1, state
+
+
+@compiled
+def _sum_of_part_block(state: np.uint64, v: Values, draws: int) -> tuple[float, float, np.uint64]:
+    """Two numbers below any bound from each word."""
+    span = np.uint64(v.size)
+    unfair = np.uint64((1 << 32) % v.size)
+    s0 = s1 = q0 = q1 = 0.0
+    left = draws
+    while left >= 2:
+        state = state + GOLDEN
+        bits = mixed(state)
+        low = (bits & LOW_HALF) * span
+        high = (bits >> HALF) * span
+        if (low & LOW_HALF) >= unfair:
+            a = v[low >> HALF]
+            s0 += a
+            q0 += a * a
+            left -= 1
+        if (high & LOW_HALF) >= unfair:
+            b = v[high >> HALF]
+            s1 += b
+            q1 += b * b
+            left -= 1
+    while left >= 1:
+        state = state + GOLDEN
+        low = (mixed(state) & LOW_HALF) * span
+        if (low & LOW_HALF) >= unfair:
+            a = v[low >> HALF]
+            s0 += a
+            q0 += a * a
+            left -= 1
+    return s0 + s1, q0 + q1, state
