@@ -21,6 +21,7 @@ FAMILIES: Final[Mapping[str, str]] = {
     "shape": "how the values are shaped",
     "association": "how two columns hang together",
     "re-expression": "values on another scale, and which scale to choose",
+    "comparison": "how groups differ",
     "resampling": "how sure it is, from the data themselves",
     "tables": "whole tables of answers, in FROM",
 }

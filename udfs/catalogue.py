@@ -14,6 +14,7 @@ _FAMILIES = (
     "shape",
     "association",
     "reexpression",
+    "comparison",
     "resampling",
     "tables",
 )

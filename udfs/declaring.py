@@ -43,7 +43,15 @@ NULL: Final[float] = struct.unpack("<d", struct.pack("<Q", _NULL_BITS))[0]
 """What a kernel returns for NULL: a NaN whose payload no arithmetic produces."""
 
 Family = Literal[
-    "location", "weighted", "scale", "shape", "association", "re-expression", "resampling", "tables"
+    "location",
+    "weighted",
+    "scale",
+    "shape",
+    "association",
+    "re-expression",
+    "comparison",
+    "resampling",
+    "tables",
 ]
 Kind = Literal["aggregate", "batch", "row", "table"]
 Anything = TypeVar("Anything", bound=Callable[..., Any])

@@ -137,8 +137,25 @@ def run(
         When the control asked the loops to stop.
     """
     lengths = groups.lengths
-    portions = _portions(groups.offsets)
-    total = int(groups.offsets[-1] - groups.offsets[0])
+
+    def work_off(start: int, stop: int) -> None:
+        _work_off(groups, lengths, start, stop, tasks, out, rows, control)
+
+    over_portions(groups.offsets, work_off, control, threads)
+
+
+def over_portions(
+    offsets: Indices, work_off: Callable[[int, int], None], control: Control, threads: int
+) -> None:
+    """Call ``work_off(start, stop)`` for portions of the groups, several threads taking turns.
+
+    Raises
+    ------
+    Stopped
+        When the control asked the loops to stop.
+    """
+    portions = _portions(offsets)
+    total = int(offsets[-1] - offsets[0])
     helpers = min(threads - 1, len(portions) - 1, total // _WORTH_A_THREAD)
     waiting = iter(portions)
     taking = threading.Lock()
@@ -149,7 +166,7 @@ def run(
                 portion = next(waiting, None)
             if portion is None:
                 return
-            _work_off(groups, lengths, *portion, tasks, out, rows, control)
+            work_off(*portion)
 
     pending = [_pool().submit(work) for _ in range(helpers)]
     try:

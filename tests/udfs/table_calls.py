@@ -9,6 +9,8 @@ CALLS = {
     "robust_summary": "robust_summary({}, 'dwell_s'{})",
     "trim_path": "trim_path({}, 'dwell_s'{})",
     "held_out_errors": "held_out_errors({}, 'dwell_s'{})",
+    "power_ladder": "power_ladder({}, 'dwell_s'{})",
+    "group_differences": "group_differences({}, 'dwell_s', 'ramp_used'{})",
     "value_profile": "value_profile({}, columns := 'dwell_s'{})",
 }
 EVERY = pytest.mark.parametrize("function", CALLS)

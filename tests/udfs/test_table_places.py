@@ -102,7 +102,7 @@ def test_names_with_spaces_quotes_and_other_letters(
     larkmoor.execute(
         f"CREATE OR REPLACE TEMP TABLE {identifier} AS SELECT route AS {identifier}, "
         f'dwell_s AS "{other_key.replace(chr(34), chr(34) * 2).replace(chr(39) * 2, chr(39))}" '
-        "FROM visits"
+        ", ramp_used FROM visits"
     )
     quoted_table = text if "." not in name else identifier
     call = CALLS[function].format(f"'{quoted_table}'", f", by := '{text}'")
@@ -126,7 +126,7 @@ OWN_NAMES = """
 def test_a_column_named_like_a_parameter_is_the_column(
     larkmoor: duckdb.DuckDBPyConnection, function: str, name: str
 ) -> None:
-    table = f'(SELECT dwell_s AS "{name}", route FROM visits)'
+    table = f'(SELECT dwell_s AS "{name}", route, ramp_used FROM visits)'
     call = CALLS[function].format(f"'{table}'", ", by := 'route'").replace("'dwell_s'", f"'{name}'")
     expected = answer(larkmoor, "FROM " + CALLS[function].format("'visits'", ", by := 'route'"))
     rows = answer(larkmoor, f"FROM {call}")
@@ -142,7 +142,7 @@ def test_a_column_named_like_a_parameter_is_the_column(
 def test_a_key_named_like_a_parameter_is_the_key(
     larkmoor: duckdb.DuckDBPyConnection, function: str, name: str
 ) -> None:
-    table = f"'(SELECT dwell_s, route AS \"{name}\" FROM visits)'"
+    table = f"'(SELECT dwell_s, ramp_used, route AS \"{name}\" FROM visits)'"
     call = "FROM " + CALLS[function].format(table, f", by := '{name}'")
     if name in functions()[function].fields:
         assert f"{function}: by names {name}, which is also" in complaint(larkmoor, call)

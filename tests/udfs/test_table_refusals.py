@@ -101,7 +101,7 @@ def test_columns_that_are_no_numbers(
         ("'nowhere.parquet'", "nowhere.parquet"),
         ("'nowhere-*.parquet'", "nowhere-*.parquet"),
         ("'visits', by := 'depot'", '"depot"'),
-        ("'(SELECT 1 AS a)'", '"dwell_s"'),
+        ("'(SELECT true AS ramp_used)'", '"dwell_s"'),
     ],
 )
 def test_what_is_missing_is_named(

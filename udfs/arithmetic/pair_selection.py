@@ -16,10 +16,12 @@ import numpy as np
 from midspread.udfs.arithmetic.pair_tables import (
     DIFFERENCES,
     RATIOS,
+    SHIFTS,
     SUMS,
     Places,
     count_differences,
     count_ratios,
+    count_shifts,
     count_sums,
     entry,
     first_column,
@@ -27,6 +29,7 @@ from midspread.udfs.arithmetic.pair_tables import (
 )
 from midspread.udfs.arithmetic.quickselect import GOLDEN, put_in_place
 from midspread.udfs.declaring import Values, compiled
+from midspread.udfs.drivers import STOP, Indices
 
 _FEW: Final = 64
 _ROWS_PER_DRAW: Final = 3
@@ -94,6 +97,28 @@ def ordered_ratios(a: Values, b: Values, k: int, last: int) -> tuple[float, floa
             return room[0], room[1]
         left, before = _narrow(places, k, last, up_to_low, up_to_high, left, before)
     return _finish(RATIOS, a, b, places, room, k - before, last - before)
+
+
+@compiled
+def ordered_shifts(
+    a: Values, b: Values, k: int, last: int, control: Indices
+) -> tuple[float, float]:
+    """Do for b_j − a_i, all i and j, what `ordered_sums` does for the sums.
+
+    Two samples may be the whole of a table: it looks for the request to stop, and then gives NaN.
+    """
+    places, room, left, before = _start(SHIFTS, a, b)
+    rounds = 0
+    while left > room.size:
+        if control[STOP] != 0:
+            return math.nan, math.nan
+        rounds += 1
+        low, high = _bracket(SHIFTS, a, b, places, room, k - before, left, rounds)
+        up_to_low, up_to_high = count_shifts(a, b, low, high, places[2], places[3])
+        if _met(SHIFTS, a, b, places, room, k, last, low, high, up_to_low, up_to_high):
+            return room[0], room[1]
+        left, before = _narrow(places, k, last, up_to_low, up_to_high, left, before)
+    return _finish(SHIFTS, a, b, places, room, k - before, last - before)
 
 
 @compiled

@@ -9,6 +9,7 @@ kind       entry (i, j)        pairs
 SUMS       a[i] + b[j]         i ≤ j, with a = b ascending
 DIFFERENCES b[j] − a[i]        i < j, with a = b ascending
 RATIOS     b[j] / a[i]         all, a and b positive and ascending
+SHIFTS     b[j] − a[i]         all, a and b ascending
 ========== =================== ======================================
 
 All values are finite. Rounding keeps the order of the exact entries, so the tables grow along
@@ -26,6 +27,7 @@ from midspread.udfs.declaring import Values, compiled
 SUMS: Final = 0
 DIFFERENCES: Final = 1
 RATIOS: Final = 2
+SHIFTS: Final = 3
 
 Places = npt.NDArray[np.int32]
 """One column number for each row: a staircase through a table (32 bits: memory is the limit)."""
@@ -36,9 +38,9 @@ def entry(kind: int, a: Values, b: Values, i: int, j: int) -> float:
     """The number of the pair (i, j)."""
     if kind == SUMS:
         return a[i] + b[j]
-    if kind == DIFFERENCES:
-        return b[j] - a[i]
-    return b[j] / a[i]
+    if kind == RATIOS:
+        return b[j] / a[i]
+    return b[j] - a[i]
 
 
 @compiled
@@ -160,6 +162,25 @@ def count_ratios(
     for row in range(p, rows):
         ends_high[row] = columns
     return count + (rows - i) * columns, count_high + (rows - p) * columns
+
+
+@compiled
+def count_shifts(
+    a: Values, b: Values, low: float, high: float, ends_low: Places, ends_high: Places
+) -> tuple[int, int]:
+    """Do for the differences of two samples what `count_sums` does for sums."""
+    return _count_up_to(a, b, low, ends_low), _count_up_to(a, b, high, ends_high)
+
+
+@compiled
+def _count_up_to(a: Values, b: Values, bound: float, ends: Places) -> int:
+    count, j = 0, 0
+    for i in range(a.size):
+        while j < b.size and b[j] - a[i] <= bound:
+            j += 1
+        ends[i] = j
+        count += j
+    return count
 
 
 @compiled

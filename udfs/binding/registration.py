@@ -56,6 +56,7 @@ def register(
         threads = int(row[0]) if row else 1
     listed = functions().values()  # also imports the modules that declare helpers
     binding = _Binding(connection, Work(control or Control(), threads))
+    listed = functions().values()  # which also declares the helpers of the families
     binding.register_shared()
     for register_one, kind in (
         (binding.register_aggregate, "aggregate"),

@@ -1,0 +1,1 @@
+"""What differs between the levels of a label, by how much and where."""
