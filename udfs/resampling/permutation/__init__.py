@@ -1,0 +1,1 @@
+"""How the permutation tests compute; they are declared in `permutation_tests`."""
