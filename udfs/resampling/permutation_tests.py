@@ -98,9 +98,9 @@ def permutation_test(batch: "Batch") -> dict[str, Any]:
     -------
     struct
         estimate (the difference, also when studentized), p_value, resamples (arrangements gone
-        through), exact (whether these are all). NULL for a group with one label only, or
-        without the baseline. estimate and p_value are NULL where a label has too few values for
-        the statistic, and NaN when a value is NaN.
+        through), exact (whether these are all). All NULL for a group with one label only;
+        estimate and p_value are NULL where a label has too few values for the statistic, and
+        NaN when a value is NaN.
 
     Notes
     -----
@@ -171,9 +171,9 @@ def permutation_test_k(batch: "Batch") -> dict[str, Any]:
     Returns
     -------
     struct
-        estimate (T, in the square of the unit of x), p_value, resamples, exact. NULL for a group
-        with one label only. estimate and p_value are NULL where a label has too few values for
-        the statistic, and NaN when a value is NaN.
+        estimate (T, in the square of the unit of x), p_value, resamples, exact. All NULL for a
+        group with one label only; estimate and p_value are NULL where a label has too few values
+        for the statistic, and NaN when a value is NaN.
 
     Notes
     -----

@@ -52,11 +52,14 @@ def compute_comparison(batch: Batch, *, two_labels: bool) -> dict[str, Any]:
     resamples, seeds = batch.number("resamples"), batch.number("seed")
     sides = side_numbers(["greater"] * batch.size)
     studentize = np.zeros(batch.size, dtype=np.bool_)
-    baselines = None
+    baselines, unknown = None, None
     if two_labels:
         sides = side_numbers(batch.texts("alternative"))
         studentize = batch.flags("studentize")
-        baselines = batch.levels("baseline", "label")
+        try:
+            baselines = batch.levels("baseline", "label")
+        except ParameterError as error:
+            unknown = error
         for g in np.flatnonzero(studentize):
             _check_standard_error(name, statistics[texts[g]], texts[g])
     keys = batch.keys("label")
@@ -66,6 +69,8 @@ def compute_comparison(batch: Batch, *, two_labels: bool) -> dict[str, Any]:
     found = Outcome(batch.size)
     cells = cells_of(batch.numbers("x"), batch.lengths, strata, keys.codes, batch.work)
     chosen, labels = eligible(name, cells, batch.size, keys.values, two_labels, baselines)
+    if unknown is not None and chosen.size:
+        raise unknown  # not where all have one label: then the answer is NULL with any baseline
     alike: dict[tuple[str, bool], list[int]] = {}
     for g in chosen.tolist():
         alike.setdefault((texts[g], bool(studentize[g])), []).append(g)

@@ -107,10 +107,16 @@ def eligible(
     own = rank - first[cells.groups]
     chosen = counts >= 2
     if baselines is not None:
-        given = np.flatnonzero((baselines >= 0) & chosen)
+        given = np.flatnonzero((baselines != -1) & chosen)
         is_first = pairs[first[given], 1] == baselines[given]
         is_second = pairs[first[given] + 1, 1] == baselines[given]
-        chosen[given[~(is_first | is_second)]] = False
+        if not (is_first | is_second).all():
+            group = int(given[~(is_first | is_second)][0])
+            seen = [str(values[int(pairs[first[group] + i, 1])].as_py()) for i in range(2)]
+            raise ParameterError(
+                f"{function}: baseline must be a label of its group, but the group holds "
+                f"{seen[0]} and {seen[1]}; give one of these, or leave baseline out."
+            )
         swapped = np.zeros(size, dtype=np.bool_)
         swapped[given[is_second]] = True
         own = np.where(swapped[cells.groups], 1 - own, own)
