@@ -47,6 +47,8 @@ SYNONYMS: Final[Mapping[str, tuple[str, ...]]] = {
     "correlation": ("association", "correlation", "spearman", "kendall"),
     "relation": ("association", "correlation"),
     "depend": ("association", "correlation"),
+    "regression": ("line", "slope", "association"),
+    "trend": ("slope", "line", "association"),
     "percentile": ("quantile",),
     "quartile": ("quantile", "fourths", "iqr"),
     "peak": ("mode",),

@@ -85,6 +85,7 @@ class Function:
     description: str
     version: int = 1
     shares_sort: bool = False
+    watches: bool = False
     kernel: Callable[..., Any] | None = None
     rows: Callable[[int], int] | None = None
     labels: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
@@ -154,6 +155,7 @@ def aggregate(
     rows: Callable[[int], int] | None = None,
     labels: Mapping[str, tuple[str, ...]] | None = None,
     linear: bool = True,
+    watches: bool = False,
     version: int = 1,
 ) -> Callable[[Anything], Anything]:
     """Declare an aggregate function; the decorated function is its kernel.
@@ -177,6 +179,9 @@ def aggregate(
         Fields that hold an index into these texts.
     linear : bool
         O(n) once the values are sorted, so that several functions may share one sort.
+    watches : bool
+        The kernel takes the cells of the control last and heeds a request to stop by itself: for
+        what takes seconds on one large group.
     version : int
         Raised whenever the results change, so that kept answers are computed again.
 
@@ -203,6 +208,7 @@ def aggregate(
             example=example,
             description=inspect.cleandoc(kernel.__doc__ or ""),
             version=version,
+            watches=watches,
             shares_sort=linear and not fields and columns == ("x",),
             kernel=kernel,
             rows=rows,

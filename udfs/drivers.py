@@ -58,6 +58,32 @@ def _over_groups(
         control[DONE] += n
 
 
+def _over_watching_groups(
+    values: Values,
+    weights: Values,
+    starts: Indices,
+    lengths: Indices,
+    groups: Indices,
+    parameters: Values,
+    smallest: int,
+    out: Values,
+    rows: Indices,
+    column: int,
+    control: Indices,
+) -> None:
+    """Do what `_over_groups` does with a kernel that itself watches for a request to stop."""
+    for r in range(groups.size):
+        if control[STOP] != 0:
+            return
+        n = lengths[r]
+        group = groups[r]
+        if n >= smallest and n > 0:
+            x = values[starts[r] : starts[r] + n]
+            w = weights[starts[r] : starts[r] + n] if weights.size > 0 else weights
+            watching_adapter(x, w, parameters, group, out, rows, column, control)
+        control[DONE] += n
+
+
 @compiled
 def _not_a_number(x: Values, w: Values) -> bool:
     """Whether a group holds a NaN; sorting puts them last."""
@@ -73,6 +99,20 @@ def adapter(
     x: Values, w: Values, parameters: Values, g: int, out: Values, rows: Indices, column: int
 ) -> None:
     """Stands for one of the adapters below."""
+    raise TypeError("replaced when a driver is compiled")
+
+
+def watching_adapter(
+    x: Values,
+    w: Values,
+    parameters: Values,
+    g: int,
+    out: Values,
+    rows: Indices,
+    column: int,
+    control: Indices,
+) -> None:
+    """Stands for one of the adapters below that hand on the control."""
     raise TypeError("replaced when a driver is compiled")
 
 
@@ -131,6 +171,26 @@ def _record_xw1(
 
 
 @compiled
+def _watching_record_xw0(
+    x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int, control: Indices
+) -> None:
+    if _not_a_number(x, w):
+        out[rows[g], c:] = math.nan
+    else:
+        kernel(x, w, out[rows[g], c:], control)
+
+
+@compiled
+def _watching_record_xw1(
+    x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int, control: Indices
+) -> None:
+    if _not_a_number(x, w):
+        out[rows[g], c:] = math.nan
+    else:
+        kernel(x, w, p[0, g], out[rows[g], c:], control)
+
+
+@compiled
 def _record_x0(x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int) -> None:
     if _not_a_number(x, w):
         out[rows[g], c:] = math.nan
@@ -183,14 +243,20 @@ _ADAPTERS: Final[dict[tuple[str, int, int], Callable[..., None]]] = {
     ("record", 2, 1): _record_xw1,
     ("list", 1, 0): _list_x0,
 }
+_WATCHING_ADAPTERS: Final[dict[tuple[str, int, int], Callable[..., None]]] = {
+    ("record", 2, 0): _watching_record_xw0,
+    ("record", 2, 1): _watching_record_xw1,
+}
 
 
 def driver(function: Function) -> Callable[..., None]:
     """The compiled loop of an aggregate; compiled or loaded from disk on the first call."""
     assert function.kernel is not None
     shape = "list" if function.rows else "record" if function.fields else "number"
-    chosen = _ADAPTERS[shape, len(function.columns), len(function.parameters)]
-    return _compiled_loop(function.name, function.kernel, chosen)
+    form = shape, len(function.columns), len(function.parameters)
+    if function.watches:
+        return _watching_loop(function.name, function.kernel, _WATCHING_ADAPTERS[form])
+    return _compiled_loop(function.name, function.kernel, _ADAPTERS[form])
 
 
 def summary_driver(name: str, function: Callable[..., None]) -> Callable[..., None]:
@@ -210,3 +276,11 @@ def _compiled_loop(
     return compile_driver(
         _over_groups, {"adapter": chosen, "kernel": kernel_function}, name, _SIGNATURE
     )
+
+
+@functools.cache
+def _watching_loop(
+    name: str, kernel_function: Callable[..., Any], chosen: Callable[..., None]
+) -> Callable[..., None]:
+    replacements = {"watching_adapter": chosen, "kernel": kernel_function}
+    return compile_driver(_over_watching_groups, replacements, name, _SIGNATURE)

@@ -15,6 +15,7 @@ sys.path.insert(0, str(Path(__file__).parent))
 
 import against_engine
 import against_pandas
+import association
 import growth
 import memory
 import processes
@@ -24,6 +25,7 @@ SECTIONS: dict[str, Callable[[int], list[Figure]]] = {
     "engine": against_engine.measure,
     "pandas": against_pandas.measure,
     "growth": growth.measure,
+    "association": association.measure,
     "memory": memory.measure,
     "processes": processes.measure,
 }

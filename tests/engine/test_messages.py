@@ -39,6 +39,7 @@ SENTENCES: Final = {
     "SELECT trimmed_mean() FROM visits": ["x is missing", "trimmed_mean(x, share := 0.2)"],
     "SELECT quantile_hf(dwell_s) FROM visits": ["prob is missing"],
     "SELECT weighted_median(dwell_s) FROM visits": ["w is missing"],
+    "SELECT theil_sen(dwell_s) FROM visits": ["x is missing"],
     "SELECT mad_scale(DISTINCT dwell_s, 1) FROM visits": ["takes one argument", "got 2"],
     "SELECT trimmed_mean(dwell_s, share := 0.1, share := 0.2) FROM visits": ["twice"],
     "SELECT mad_scale(stop) FROM visits": ["mad_scale: x must be a number", "VARCHAR", "CAST"],
@@ -65,6 +66,7 @@ SENTENCES: Final = {
     "WITH a AS (SELECT mad_scale(DISTINCT dwel_s) FROM visits) FROM a": ["no column dwel_s"],
     "SELECT trimmed_mean(dwell_s, shar) FROM visits": ["no column shar "],
     "SELECT weighted_median(DISTINCT dwell_s, boardings) FROM visits": ["DISTINCT", "one column"],
+    "SELECT spearman(DISTINCT dwell_s, boardings) FROM visits": ["DISTINCT", "one column"],
     "SELECT dwell_s.mad_scale() FILTER (WHERE ramp_used) FROM visits": ["FILTER", "mad_scale(x)"],
     "SELECT mad_scale(iqr_scale(dwell_s)) FROM visits": ["one aggregate is within another"],
     # where a function goes

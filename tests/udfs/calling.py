@@ -53,7 +53,7 @@ def call(function: Function, columns: Sequence[str] | None = None, **parameters:
 def partners(group: Group) -> list[float]:
     """A second value for each: loosely related to where it stands among the distinct values."""
     places = {x: i for i, x in enumerate(sorted({x for x in group if x is not None}))}
-    return [0.0 if x is None else places[x] + places[x] * 37 % 11 for x in group]
+    return [0.0 if x is None else float(places[x] + places[x] * 37 % 11) for x in group]
 
 
 def table(groups: Sequence[Group], seconds: Sequence[Group] | None = None) -> pa.Table:

@@ -58,6 +58,12 @@ DEFINED = {
     "adjusted_fences": {},
     "spearman": {},
     "kendall_tau": {},
+    "theil_sen": {"confidence": 0.95},
+    "repeated_median": {},
+    "resistant_line": {},
+    "winsorized_corr": {"share": 0.2},
+    "percentage_bend_corr": {"share": 0.2},
+    "bisquare_corr": {},
     "rung": {"power": None},
     "box_cox": {"power": None},
     "box_cox_back": {"power": None},
@@ -80,6 +86,9 @@ FIELDS = {
     "letter_values": ("letter", "depth", "lower", "mid", "upper", "spread"),
     "fences": ("lower", "upper"),
     "adjusted_fences": ("lower", "upper"),
+    "theil_sen": ("slope", "intercept", "lower", "upper"),
+    "repeated_median": ("slope", "intercept"),
+    "resistant_line": ("slope", "intercept", "half_slope_ratio"),
     "box_cox_power": _POWER_FIELDS,
     "yeo_johnson_power": _POWER_FIELDS,
     **dict.fromkeys(
@@ -141,7 +150,8 @@ def test_named_as_its_kernel(function: Function) -> None:
     assert function.kernel.__name__ == function.name
     taken = list(inspect.signature(function.kernel).parameters)
     own = [*function.columns, *(parameter.name for parameter in function.parameters)]
-    assert taken == own + (["out"] if function.fields else [])
+    own += ["out"] if function.fields else []
+    assert taken == own + (["control"] if function.watches else [])
     assert inspect.getmodule(function.kernel).__name__.startswith("midspread.udfs.")  # type: ignore[union-attr]
 
 

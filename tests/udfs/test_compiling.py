@@ -146,13 +146,15 @@ def test_compiled_as_uncompiled(
     for group, answer in zip(groups, found, strict=True):
         second = np.ones_like(group) if "w" in function.columns else np.array(partners(group))
         columns = [group, second][: len(function.columns)]
+        control = [np.zeros(2, np.int64)] if function.watches else []
         if not function.fields:
             plain = function.kernel(*columns, *parameters)
             assert bits(answer) == bits(none_for_null(plain))
             continue
         records = 1 if function.rows is None else function.rows(group.size)
         out = np.full((records, len(function.fields)), declaring.NULL)
-        function.kernel(*columns, *parameters, out[0] if function.rows is None else out)
+        answer_in = out[0] if function.rows is None else out
+        function.kernel(*columns, *parameters, answer_in, *control)
         rows = [answer] if function.rows is None else answer
         assert len(rows) == records
         for row, numbers in zip(rows, out, strict=True):
