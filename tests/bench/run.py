@@ -18,6 +18,7 @@ import against_pandas
 import association
 import growth
 import memory
+import permutation
 import processes
 from measuring import Figure, print_figures
 
@@ -27,6 +28,7 @@ SECTIONS: dict[str, Callable[[int], list[Figure]]] = {
     "growth": growth.measure,
     "association": association.measure,
     "memory": memory.measure,
+    "permutation": permutation.measure,
     "processes": processes.measure,
 }
 
