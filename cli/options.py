@@ -23,6 +23,12 @@ class Settings:
     threads: int | None = None
     store: Path | None = None
 
+    def store_path(self) -> Path:
+        """The store this command works with; it may not exist yet."""
+        from midspread.engine.store.finding import find_store
+
+        return find_store(Path(), self.store)
+
     def session(
         self,
         screen: "Screen",
@@ -44,6 +50,14 @@ class Settings:
             on_notice=screen.notice,
             on_progress=screen.progress,
         )
+
+
+def names_in(option: str, text: str) -> list[str]:
+    """Names given with commas between them."""
+    names = [name.strip() for name in text.split(",")]
+    if not all(names):
+        raise click.UsageError(f"{option} takes names with commas between them, got {text!r}")
+    return names
 
 
 class _Source(click.ParamType[tuple[str, Path]]):

@@ -11,7 +11,8 @@ import click
 from midspread.cli.help import HelpfulCommand
 from midspread.cli.options import Count, Settings, attach_option, engine_options
 from midspread.cli.screen import Screen, result_console
-from midspread.engine.errors import MidspreadError, UsageError
+from midspread.cli.scripts import read_script
+from midspread.engine.errors import UsageError
 
 if TYPE_CHECKING:
     from midspread.engine.session import Answer, Session
@@ -84,7 +85,7 @@ def query(
     given, temporary views among them; each SELECT is printed in turn. Sources are only read. An
     answer is kept in the store: asked again over unchanged files, it comes from there.
     """
-    script = _script(sql, script_file)
+    script = read_script("query", sql, script_file)
     if out is not None:
         _check_target(out, replace, form)
     elif replace:
@@ -101,33 +102,6 @@ def query(
             answer = _only_answer(session, script, recompute, f"--format {chosen}")
             screen.clear()
             _print_as(answer, chosen)
-
-
-def _script(sql: str | None, file: Path | None) -> str:
-    """The SQL itself, from the argument, a file or standard input."""
-    if (sql is None) == (file is None):
-        found = "both are" if sql is not None else "neither is"
-        raise UsageError(
-            f"query: it takes SQL in quotes or --file FILE (- for standard input), and {found} "
-            "given; give one of them."
-        )
-    if sql is not None:
-        return sql
-    assert file is not None
-    try:
-        if str(file) == "-":
-            return sys.stdin.buffer.read().decode("utf-8-sig")
-        return file.read_text(encoding="utf-8-sig")
-    except UnicodeDecodeError as error:
-        raise MidspreadError(
-            f"query: {file} is not text in UTF-8 (byte {error.start + 1}); save it as UTF-8."
-        ) from None
-    except OSError as error:
-        reason = (error.strerror or "it cannot be read").lower()
-        raise MidspreadError(
-            f"query: the file {file} cannot be read ({reason}); give the path of a text file "
-            "that holds SQL."
-        ) from None
 
 
 def _check_target(out: Path, replace: bool, form: str | None) -> None:

@@ -35,6 +35,7 @@ class Screen:
         self._quiet = quiet
         self._is_terminal = sys.stderr.isatty()
         self._display: ProgressDisplay | None = None
+        self.work = "working"
 
     def __enter__(self) -> Self:
         return self
@@ -56,7 +57,7 @@ class Screen:
     def progress(self, made: "Progress") -> None:
         """Show how far a query is; the session calls this every now and then."""
         if self._is_terminal and made.seconds >= BAR_AFTER_SECONDS:
-            self._show(_current_work(), made.fraction, made.elements, made.seconds)
+            self._show(_current_work(self.work), made.fraction, made.elements, made.seconds)
 
     def building(self, what: str) -> Callable[[float], None]:
         """A function that shows what share of something is done."""
@@ -103,11 +104,11 @@ def result_console() -> "Console":
     return Results(width=width, highlight=False, emoji=False, markup=False)
 
 
-def _current_work() -> str:
+def _current_work(otherwise: str) -> str:
     from midspread.udfs.compiling import activity
 
     compiling = activity()
-    return f"compiling {compiling.strip('_')}, only once" if compiling else "working"
+    return f"compiling {compiling.strip('_')}, only once" if compiling else otherwise
 
 
 def _new_display() -> "ProgressDisplay":

@@ -134,10 +134,12 @@ def _show_what_there_is(
 ) -> None:
     from rich.text import Text
 
+    from midspread.cli.grid_lines import grid_lines
     from midspread.cli.store import store_lines
     from midspread.cli.tables import HEAD, print_lines
 
-    lines = [Text("The store of kept answers", style=HEAD), *store_lines(settings.store), Text()]
+    lines = [Text("The store", style=HEAD), *store_lines(settings.store), Text()]
+    lines += [Text("Grids", style=HEAD), *grid_lines(settings), Text()]
     lines.append(Text("Sources", style=HEAD))
     if not sources:
         lines.append(Text("none; name a database file with --attach NAME=PATH"))

@@ -103,6 +103,7 @@ class AnswerCache:
         settings: Collection[str],
         connection: duckdb.DuckDBPyConnection,
         macros_possible: bool,
+        grids: Mapping[str, int] | None = None,
     ) -> Question | None:
         """Look at what a query rests on; None when its answer can be neither found nor kept.
 
@@ -116,6 +117,8 @@ class AnswerCache:
             The session's.
         macros_possible : bool
             Whether there may be macros that are not ours.
+        grids : mapping, optional
+            Stamps of the grids that are tables of the session.
         """
         if self._is_off:
             return None
@@ -125,6 +128,7 @@ class AnswerCache:
             table_functions=self._tables(),
             macros_possible=macros_possible,
             seen=self._seen,
+            grids=grids,
         )
         before = inputs.look()
         if before.fingerprint is None:

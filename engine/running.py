@@ -1,14 +1,17 @@
 """Runs statements: our functions registered, the text rewritten, errors put in our words."""
 
 from collections.abc import Callable, Mapping
+from contextlib import AbstractContextManager
 from dataclasses import dataclass
 from functools import cached_property
+from pathlib import Path
 from typing import TYPE_CHECKING, Final, TypeVar
 
 import duckdb
 
 from midspread.engine.answer import Progress
-from midspread.engine.parsing import NotParsed
+from midspread.engine.grids.model import RESULT
+from midspread.engine.parsing import NotParsed, literal
 from midspread.engine.statements import Kind, Statement
 from midspread.udfs import Function
 
@@ -80,6 +83,27 @@ class Runner:
     def answer(self, sql: str, statement: Statement) -> "pa.Table":
         """The rows that a query gives."""
         return self._run(sql, statement, self._rows)
+
+    def write(
+        self,
+        sql: str,
+        statement: Statement,
+        path: Path,
+        watching: Callable[[], AbstractContextManager[object]],
+    ) -> tuple[int, tuple[tuple[str, str], ...]]:
+        """Write the rows of a query into a new database file; their number, names and types."""
+        database, run = "_midspread_result", self._connection.execute
+        self._equip()
+        run(f"ATTACH {literal(str(path))} AS {database}")
+        try:
+            table = f"{database}.main.{RESULT}"
+            with watching():
+                self._run(sql, statement, lambda text: run(f"CREATE TABLE {table} AS {text}"))
+            rows = run(f"SELECT count(*) FROM {table}").fetchall()[0][0]
+            described = run(f"DESCRIBE {table}").fetchall()
+            return rows, tuple((str(row[0]), str(row[1])) for row in described)
+        finally:
+            run(f"DETACH {database}")
 
     def define(self, sql: str, statement: Statement) -> None:
         """Make a view, macro or variable, or change a setting."""

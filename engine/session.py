@@ -2,22 +2,26 @@
 
 import os
 import time
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from functools import partial
 from pathlib import Path
 from types import TracebackType
 from typing import TYPE_CHECKING, Self, TypeVar
+from uuid import uuid4
 
 import duckdb
 
 from midspread.engine.answer import Answer, Progress
 from midspread.engine.caching import AnswerCache, Question, when
 from midspread.engine.connecting import attach, checked_sources, connect
-from midspread.engine.errors import MidspreadError
+from midspread.engine.errors import MidspreadError, StoreError, UsageError
+from midspread.engine.grids.using import GridsInUse
 from midspread.engine.guard import Guard
 from midspread.engine.inputs.canonical import canonical_sql
+from midspread.engine.inputs.scanning import mentions_of
 from midspread.engine.interrupts import run_interruptibly
-from midspread.engine.parsing import NotParsed
+from midspread.engine.parsing import NotParsed, one_value
 from midspread.engine.running import Runner
 from midspread.engine.statements import Kind, Statement, split
 from midspread.engine.store.finding import STORE_VARIABLE, find_store
@@ -25,6 +29,8 @@ from midspread.udfs import functions
 
 if TYPE_CHECKING:
     import pyarrow as pa
+
+    from midspread.engine.grids.computing import Computed
 
 __all__ = ["Answer", "Progress", "Session"]
 
@@ -82,14 +88,17 @@ class Session:
         self._sources = checked_sources(sources or {})
         self._connection = connect(memory=memory, threads=threads, owner=self)
         self._runner = Runner(self._connection, self._functions)
-        self._guard = Guard(
-            self._connection,
-            self._functions.keys(),
-            [name for name, function in self._functions.items() if function.kind == "table"],
-        )
+        self._table_functions = [
+            name for name, function in self._functions.items() if function.kind == "table"
+        ]
+        self._guard = Guard(self._connection, self._functions.keys(), self._table_functions)
         self._cache: AnswerCache | None = None
+        self._grids: GridsInUse | None = None
         if use_store:
-            self._cache = self._open_cache(folder or Path(), store)
+            path = find_store(folder or Path(), store)
+            is_named = store is not None or bool(os.environ.get(STORE_VARIABLE))
+            self._cache = AnswerCache(path, is_named, self._functions, self._notice)
+            self._grids = GridsInUse(path, self._connection)
         self._are_sources_attached = False
         self._definitions: list[str] = []
         self._settings: set[str] = set()
@@ -144,6 +153,65 @@ class Session:
             texts.append(self._runner.expand(statement))
         return ";\n".join(texts)
 
+    def materialise(self, command: str, sql: str) -> "Computed":
+        """Compute a script's one query into a scratch database, there until the session closes.
+
+        Parameters
+        ----------
+        command : str
+            Who asks, for messages.
+        sql : str
+            Definitions, then one SELECT.
+
+        Raises
+        ------
+        MidspreadError
+            With one sentence for the user.
+        """
+        from midspread.engine.grids.computing import Computed, Inquiry
+        from midspread.engine.grids.grouping import grouped_by
+        from midspread.engine.grids.reading import tables_read
+
+        statements = self._read(sql)
+        last = statements[-1]
+        if last.kind is not Kind.QUERY or sum(one.answers for one in statements) != 1:
+            raise UsageError(
+                f"{command}: the SQL must be one SELECT, with definitions before it; "
+                f"split it, or turn all but the last into temporary views."
+            )
+        for statement in statements[:-1]:
+            self._define(sql, statement)
+        script = [*self._definitions, last.text]
+        self._attach_sources()
+        read = tables_read(self._connection, statements, self._table_functions)
+        reads = [name for name in self._bring_grids(script) if name.casefold() in read]
+        self._settle()
+        watcher = Inquiry(
+            script,
+            self._connection,
+            self._functions,
+            {name: stamp for name, stamp in self._stamps().items() if name in read},
+        )
+        scratch = one_value(self._connection, "SELECT current_setting('temp_directory')")
+        path = Path(str(scratch)) / f"{uuid4().hex}.duckdb"
+        rows, columns = self._watched(
+            partial(self._runner.write, sql, last, path, watcher.watching)
+        )
+        return Computed(
+            path,
+            columns,
+            rows,
+            watcher.record(),
+            tuple(reads),
+            grouped_by(self._connection, last.body_text),
+        )
+
+    @contextmanager
+    def cursor(self) -> Iterator[duckdb.DuckDBPyConnection]:
+        """Another connection to the session's engine, for questions of our own."""
+        with self._connection.cursor() as cursor:
+            yield cursor
+
     def interrupt(self) -> None:
         """Stop the query that is running, from another thread; the session stays usable."""
         self._runner.stop()
@@ -162,14 +230,6 @@ class Session:
         trace: TracebackType | None,
     ) -> None:
         self.close()
-
-    def _open_cache(self, folder: Path, store: Path | None) -> AnswerCache:
-        return AnswerCache(
-            find_store(folder, store),
-            is_named=store is not None or bool(os.environ.get(STORE_VARIABLE)),
-            functions=self._functions,
-            on_notice=self._notice,
-        )
 
     def _notice(self, line: str) -> None:
         self._notices.append(line)
@@ -220,10 +280,11 @@ class Session:
         self._notices = []
         self._attach_sources()
         question = None
+        script = [*self._definitions, statement.text]
+        self._warn_of_stale(self._bring_grids(script))
         if self._cache is not None and statement.kind is Kind.QUERY:
-            script = [*self._definitions, statement.text]
             question = self._cache.question(
-                script, self._settings, self._connection, self._has_macros
+                script, self._settings, self._connection, self._has_macros, self._stamps()
             )
             kept = None if question is None or recompute else self._cache.find(question)
             if kept is not None:
@@ -242,6 +303,27 @@ class Session:
         if watch is not None:
             self._cache.keep(question, watch, statement.text, table, self._connection)
         return table
+
+    def _bring_grids(self, script: Sequence[str]) -> list[str]:
+        """Make the grids that a script names readable; which they are."""
+        if self._grids is None:
+            return []
+        names: set[str] = set()
+        for statement in script:
+            names |= mentions_of(statement, self._table_functions).names
+        try:
+            return self._grids.bring(names)
+        except StoreError:
+            return []  # a store that cannot be read turns off the cache with a word of its own
+
+    def _warn_of_stale(self, read: Sequence[str]) -> None:
+        if self._grids is not None and read:
+            with self.cursor() as connection:
+                for line in self._grids.stale(read, connection, self._functions):
+                    self._notice(line)
+
+    def _stamps(self) -> dict[str, int]:
+        return self._grids.stamps if self._grids is not None else {}
 
     def _attach_sources(self) -> None:
         if not self._are_sources_attached:

@@ -16,6 +16,7 @@ import numpy.typing as npt
 from midspread.udfs.parameters import Parameter, ParameterError
 
 __all__ = [
+    "NO_RECORD",
     "NULL",
     "Family",
     "Function",
@@ -41,6 +42,9 @@ Values = npt.NDArray[np.float64]
 _NULL_BITS: Final = 0x7FF8_0000_4E55_4C4C
 NULL: Final[float] = struct.unpack("<d", struct.pack("<Q", _NULL_BITS))[0]
 """What a kernel returns for NULL: a NaN whose payload no arithmetic produces."""
+
+NO_RECORD: Final = "no record"
+"""What a batch aggregate may return besides its fields: which groups are NULL as a whole."""
 
 Family = Literal[
     "location",

@@ -58,6 +58,7 @@ def meaning_of(
     own_names: Collection[str],
     *,
     macros_possible: bool = True,
+    grids: Mapping[str, int] | None = None,
 ) -> Meaning:
     """Follow the names in a script through the catalogue.
 
@@ -73,6 +74,8 @@ def meaning_of(
         All our own functions, folded: their bodies are known by their versions.
     macros_possible : bool
         Whether anybody can have made a macro in this session or an attached database.
+    grids : mapping, optional
+        Stamps of the grids that are tables of this session, by folded name.
 
     Returns
     -------
@@ -112,6 +115,8 @@ def meaning_of(
             for found in _follow(name, views, macros, table_functions, meaning):
                 meaning.mentions.add(found)
                 looked_up |= found.names
+    for name in sorted(looked_up & (grids or {}).keys()):
+        meaning.definitions["grid " + name] = str((grids or {})[name])
     _find_databases(connection, looked_up, meaning)
     return meaning
 

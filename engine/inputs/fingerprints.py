@@ -15,7 +15,7 @@ import hashlib
 import json
 import os
 import time
-from collections.abc import Collection, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
 
 import duckdb
@@ -154,6 +154,7 @@ def inputs_of(
     table_functions: Collection[str] | None = None,
     macros_possible: bool = True,
     seen: dict[str, tuple[FileState, ...]] | None = None,
+    grids: Mapping[str, int] | None = None,
 ) -> Inputs:
     """Find what a script rests on, without running it.
 
@@ -171,6 +172,8 @@ def inputs_of(
     seen : dict, optional
         One dict for the life of the connection, empty at first: it notices when an attached file
         is replaced by another.
+    grids : mapping, optional
+        Stamps of the grids that are tables of this session, by folded name.
 
     Returns
     -------
@@ -179,7 +182,12 @@ def inputs_of(
     own_tables = own_table_functions() if table_functions is None else frozenset(table_functions)
     names = own_names() if macros_possible else frozenset[str]()
     meaning = meaning_of(
-        script, connection, own_tables, names | own_tables, macros_possible=macros_possible
+        script,
+        connection,
+        own_tables,
+        names | own_tables,
+        macros_possible=macros_possible,
+        grids=grids,
     )
     obstacle = meaning.obstacle
     paths = meaning.mentions.paths

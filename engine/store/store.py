@@ -3,6 +3,7 @@
 import contextlib
 import os
 import secrets
+import shutil
 import time
 from collections.abc import Iterator
 from pathlib import Path
@@ -14,6 +15,7 @@ from midspread.engine.publishing import publish
 from midspread.engine.store.layout import ALIAS, FORMAT, PROGRAM, STORAGE_VERSION, creating
 from midspread.engine.store.locking import busy, lock_path, locked, not_writable, retry
 from midspread.engine.store.quoting import literal, quoted
+from midspread.engine.store.upgrading import copy_beside, upgrade
 
 # Our own commands hold the store for moments; another program may hold it for hours.
 WAIT_FOR_OURS_S = 60.0
@@ -45,6 +47,7 @@ class Store:
     def __init__(self, path: Path) -> None:
         self.path = Path(os.path.realpath(path))
         self._engine: duckdb.DuckDBPyConnection | None = None
+        self._format = FORMAT
 
     @classmethod
     def open(cls, path: Path, *, create: bool = True) -> "Store":
@@ -84,6 +87,8 @@ class Store:
         try:
             with store.reading():
                 pass
+            if store._format < FORMAT:
+                store._upgrade()
         except StoreError:
             if not had_lock:
                 lock_path(store.path).unlink(missing_ok=True)
@@ -161,6 +166,19 @@ class Store:
                 yield self._private_engine()
             finally:
                 self.close()
+
+    @contextlib.contextmanager
+    def sharing(self, wait_s: float = WAIT_FOR_OURS_S) -> Iterator[None]:
+        """Keep writers of ours out for the length of a block; nothing is attached.
+
+        Parameters
+        ----------
+        wait_s : float
+            How long to wait for other commands of ours, in seconds.
+        """
+        self._check_before_locking()
+        with locked(self.path, shared=True, wait_s=wait_s):
+            yield
 
     def _private_engine(self) -> duckdb.DuckDBPyConnection:
         if self._engine is None:
@@ -247,6 +265,22 @@ class Store:
                 f"The store {self.path} was written by a newer Midspread (format {found}, this one "
                 f"reads up to {FORMAT}); update Midspread, or name another store with --store."
             )
+        self._format = int(found)
+
+    def _upgrade(self) -> None:
+        """Bring a store of an older format up to date; a copy of it is kept beside it."""
+        with self.exclusively():
+            with self._attached("READ_WRITE") as engine:  # folds in the log beside the file
+                engine.execute(f"CHECKPOINT {quoted(ALIAS)}")
+            if self._format < FORMAT:  # nobody was faster
+                try:
+                    copy = copy_beside(self.path, self._format)
+                    shutil.copy2(self.path, copy.with_name(copy.name + ".new"))
+                    publish(copy.with_name(copy.name + ".new"), copy)
+                except OSError as error:
+                    raise self.error_of(error) from error
+                with self._attached("READ_WRITE") as engine:
+                    upgrade(engine, self._format)
 
     def _create(self) -> None:
         if not self.path.parent.is_dir():

@@ -165,3 +165,21 @@ def test_symmetry_power_from_the_letter_values(estimate: Estimate, name: str) ->
     ]
     found = estimate("symmetry_power", x)
     assert found == pytest.approx(1 - float(np.median(slopes)), rel=1e-10, abs=1e-12)
+
+
+@pytest.mark.parametrize("name", POSITIVE)
+def test_power_ladder_as_scipy(connection: duckdb.DuckDBPyConnection, name: str) -> None:
+    """scipy.stats.skew, and the r of scipy.stats.probplot, which takes Filliben's medians."""
+    x = np.array(published(name))
+    connection.execute(
+        "CREATE OR REPLACE TEMP TABLE published AS SELECT unnest(?) AS x", [x.tolist()]
+    )
+    rows = connection.execute(
+        "SELECT power, skewness, normal_plot_corr "
+        "FROM power_ladder('published', 'x', powers := [-2, -1, -0.5, 0, 0.3, 0.5, 1, 2, 3])"
+    ).fetchall()
+    for power, skewness, correlation in rows:
+        y = np.log(x) if power == 0 else np.sign(power) * x**power
+        assert skewness == pytest.approx(float(scipy.stats.skew(y)), rel=1e-8, abs=1e-9)
+        _, (_, _, r) = scipy.stats.probplot(y)
+        assert correlation == pytest.approx(float(r), rel=1e-9)

@@ -18,7 +18,7 @@ from midspread.udfs.binding.arrow_columns import (
     single_chunk,
 )
 from midspread.udfs.binding.computing import Work, groups_of
-from midspread.udfs.declaring import Function, Values, null_mask
+from midspread.udfs.declaring import NO_RECORD, Function, Values, null_mask
 from midspread.udfs.drivers import Indices
 from midspread.udfs.grouped import Groups
 from midspread.udfs.parameters import ParameterError
@@ -182,9 +182,10 @@ def compute_batch(function: Function, work: Work, *arguments: Any) -> pa.Array:
     assert function.kernel is not None
     batch = Batch(function, work, arguments)
     found = function.kernel(batch)
-    return records(
-        function.fields, function.field_types, found, batch.lengths < function.smallest_n
-    )
+    missing = batch.lengths < function.smallest_n
+    if NO_RECORD in found:
+        missing |= found[NO_RECORD]
+    return records(function.fields, function.field_types, found, missing)
 
 
 def records(

@@ -6,7 +6,7 @@ from typing import Final
 import numpy as np
 
 from midspread.udfs.arithmetic.beta import beta_masses
-from midspread.udfs.arithmetic.order_statistics import between, quantile_7
+from midspread.udfs.arithmetic.order_statistics import between
 from midspread.udfs.arithmetic.running import add
 from midspread.udfs.declaring import Parameter, Values, aggregate, compiled
 
@@ -129,10 +129,23 @@ def quantile_hf(x: Values, prob: float, kind: float) -> float:
     Hyndman, R. J. and Fan, Y. (1996). Sample quantiles in statistical packages. The American
     Statistician 50, 361-365.
     """
-    n = x.size
+    low, high, part = quantile_place(x.size, prob, kind)
+    if part == 0.0:
+        return x[low]
+    if part == 1.0:
+        return x[high]
+    return between(x[low], x[high], part)
+
+
+@compiled
+def quantile_place(n: int, prob: float, kind: float) -> tuple[int, int, float]:
+    """Which two of n sorted values a quantile lies between, from 0, and how far from the first."""
     which = int(kind)
     if which == 7:
-        return quantile_7(x, prob)
+        position = (n - 1) * prob
+        below = math.floor(position)
+        low = int(below)
+        return (low, low, 0.0) if low + 1 >= n else (low, low + 1, position - below)
     if which <= 3:
         position = n * prob - 0.5 if which == 3 else n * prob
         below = math.floor(position)
@@ -149,13 +162,7 @@ def quantile_hf(x: Values, prob: float, kind: float) -> float:
         part = position - below
         if abs(part) < _FUZZ:
             part = 0.0
-    low = x[min(max(int(below) - 1, 0), n - 1)]
-    high = x[min(max(int(below), 0), n - 1)]
-    if part == 0.0:
-        return low
-    if part == 1.0:
-        return high
-    return between(low, high, part)
+    return min(max(int(below) - 1, 0), n - 1), min(max(int(below), 0), n - 1), part
 
 
 @compiled

@@ -1,0 +1,162 @@
+"""Writing a grid's new contents to the store, the earlier ones kept as a version."""
+
+from dataclasses import replace
+from datetime import UTC, datetime
+from typing import Final
+
+import duckdb
+
+from midspread.engine.errors import MidspreadError
+from midspread.engine.grids import ledger
+from midspread.engine.grids.computing import Computed
+from midspread.engine.grids.model import RESULT, Column, ColumnKind, Grid
+from midspread.engine.grids.tables import contents_query, key_text
+from midspread.engine.store.quoting import literal, quoted
+
+VERSIONS_SETTING: Final = "versions_kept"
+DEFAULT_VERSIONS: Final = 10
+_SCRATCH: Final = "_midspread_result"
+
+
+def publish(
+    engine: duckdb.DuckDBPyConnection, command: str, grid: Grid, computed: Computed, cause: str
+) -> tuple[Grid, bool]:
+    """Put what was computed in the place of a grid's contents.
+
+    Parameters
+    ----------
+    engine : duckdb.DuckDBPyConnection
+        Of the store, within `Store.writing`.
+    command : str
+        Who does it, for messages.
+    grid : Grid
+        As it shall be, but for its derived columns, stamp, version, rows and record.
+    computed : Computed
+        Its new rows.
+    cause : str
+        Why, for the history.
+
+    Returns
+    -------
+    tuple of (Grid, bool)
+        The grid as written, and whether its contents are others than before.
+    """
+    engine.execute(f"ATTACH {literal(str(computed.path))} AS {_SCRATCH} (TYPE duckdb, READ_ONLY)")
+    base = f"{_SCRATCH}.main.{RESULT}"
+    derived = tuple(Column(name, kind, ColumnKind.DERIVED) for name, kind in computed.columns)
+    added = tuple(c for c in grid.columns if c.kind is not ColumnKind.DERIVED)
+    _check_columns(command, grid.name, derived, added)
+    grid = replace(grid, columns=(*derived, *added))
+    _check_keys(engine, command, grid, base)
+    changed = grid.version == 0 or _differs(engine, grid, base)
+    now = datetime.now(UTC)
+    written = replace(
+        grid,
+        rows=computed.rows,
+        reads=computed.reads,
+        record=computed.record,
+        failure="",
+    )
+    if changed:
+        if grid.version > 0:
+            _set_aside(engine, grid)
+        written = replace(
+            written, stamp=ledger.next_stamp(engine), version=grid.version + 1, changed=now
+        )
+        engine.execute(
+            f"CREATE OR REPLACE TABLE {ledger.contents(grid.name)} AS {contents_query(grid, base)}"
+        )
+        engine.execute(
+            "INSERT INTO store.ledger.versions VALUES ($1, $2, $3, $4, $5, $6, $7, true)",
+            [
+                grid.name,
+                written.version,
+                now,
+                cause,
+                computed.rows,
+                grid.sql,
+                computed.record.to_json(),
+            ],
+        )
+        ledger.log(engine, written.stamp, grid.name, command, note=cause)
+    ledger.write_grid(engine, written)
+    return written, changed
+
+
+def _check_columns(
+    command: str, grid: str, derived: tuple[Column, ...], added: tuple[Column, ...]
+) -> None:
+    taken = {column.name.casefold() for column in derived}
+    for column in added:
+        if column.name.casefold() in taken:
+            raise MidspreadError(
+                f"{command}: the query of {grid} now gives a column {column.name}, which is also "
+                f"one that was added to it; rename it in the query, or drop the added one with "
+                f"midspread column {grid} {column.name} --drop."
+            )
+
+
+def _check_keys(engine: duckdb.DuckDBPyConnection, command: str, grid: Grid, base: str) -> None:
+    known = {column.name.casefold() for column in grid.of_kind(ColumnKind.DERIVED)}
+    missing = [key for key in grid.keys if key.casefold() not in known]
+    if missing:
+        raise MidspreadError(
+            f"{command}: the key column {missing[0]} is not among the columns of {grid.name}; "
+            f"name others with --key, or add it to the query."
+        )
+    if not grid.keys:
+        return
+    twice = engine.execute(
+        f"SELECT {key_text(grid.keys)} AS key, count(*) AS n FROM {base}"
+        " GROUP BY key HAVING n > 1 ORDER BY key LIMIT 1"
+    ).fetchall()
+    if twice:
+        raise MidspreadError(
+            f"{command}: {twice[0][1]} rows of {grid.name} have the key {twice[0][0]} "
+            f"({', '.join(grid.keys)}), and a key must be there once; name more columns with --key."
+        )
+
+
+def _differs(engine: duckdb.DuckDBPyConnection, grid: Grid, base: str) -> bool:
+    """Whether the new rows differ from the present ones in the derived columns."""
+    described = engine.execute(f"DESCRIBE {ledger.contents(grid.name)}").fetchall()
+    present = {str(row[0]): str(row[1]) for row in described}
+    derived = grid.of_kind(ColumnKind.DERIVED)
+    added = {c.name for c in grid.columns} - {c.name for c in derived}
+    if [(c.name, c.type) for c in derived] != [
+        (name, kind) for name, kind in present.items() if name not in added
+    ]:
+        return True
+    listed = ", ".join(quoted(column.name) for column in derived)
+    new, old = f"SELECT {listed} FROM {base}", f"SELECT {listed} FROM {ledger.contents(grid.name)}"
+    rows = engine.execute(
+        f"SELECT EXISTS (({new}) EXCEPT ALL ({old})) OR EXISTS (({old}) EXCEPT ALL ({new}))"
+    ).fetchall()
+    return bool(rows[0][0])
+
+
+def _set_aside(engine: duckdb.DuckDBPyConnection, grid: Grid) -> None:
+    """Keep the present contents as an earlier version, and drop those beyond the number kept."""
+    engine.execute(
+        f"CREATE OR REPLACE TABLE {ledger.earlier(grid.name, grid.version)} AS "
+        f"FROM {ledger.contents(grid.name)}"
+    )
+    for (version,) in engine.execute(
+        "SELECT version FROM store.ledger.versions WHERE lower(grid) = lower($1) AND is_kept"
+        " AND version <= $2",
+        [grid.name, grid.version - versions_kept(engine)],
+    ).fetchall():
+        engine.execute(f"DROP TABLE IF EXISTS {ledger.earlier(grid.name, version)}")
+        engine.execute(
+            "UPDATE store.ledger.versions SET is_kept = false"
+            " WHERE lower(grid) = lower($1) AND version = $2",
+            [grid.name, version],
+        )
+
+
+def versions_kept(engine: duckdb.DuckDBPyConnection) -> int:
+    """How many earlier versions of each grid the store keeps."""
+    rows = engine.execute(
+        "SELECT value FROM store.ledger.about WHERE name = $1", [VERSIONS_SETTING]
+    ).fetchall()
+    return int(rows[0][0]) if rows else DEFAULT_VERSIONS

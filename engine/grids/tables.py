@@ -1,0 +1,82 @@
+"""The SQL that makes a grid's table: derived columns, entered ones beside them, computed ones."""
+
+from collections.abc import Sequence
+from graphlib import CycleError, TopologicalSorter
+
+from midspread.engine.errors import MidspreadError
+from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind
+from midspread.engine.inputs.scanning import mentions_of
+from midspread.engine.store.quoting import literal, quoted
+
+
+def key_text(keys: Sequence[str], source: str = "") -> str:
+    """An expression for a row's key: a JSON list of its values as text."""
+    before = f"{quoted(source)}." if source else ""
+    listed = ", ".join(f"CAST({before}{quoted(key)} AS VARCHAR)" for key in keys)
+    return f"CAST(to_json([{listed}]) AS VARCHAR)"
+
+
+def contents_query(grid: Grid, base: str) -> str:
+    """A query for all of a grid's columns over a table that holds its own.
+
+    Parameters
+    ----------
+    grid : Grid
+        Its columns and keys.
+    base : str
+        For a derived grid, a table with the columns of its query; for an entered one, a table with
+        its entered columns. As SQL.
+
+    Returns
+    -------
+    str
+        The columns in the grid's order.
+    """
+    added = grid.of_kind(ColumnKind.ENTERED) if grid.kind is GridKind.DERIVED else []
+    inner = f"SELECT _m_base.* FROM {base} AS _m_base"
+    if added:
+        joins = []
+        values = []
+        for place, column in enumerate(added):
+            entries = f"_m_entries_{place}"
+            joins.append(
+                f"LEFT JOIN (SELECT key, value FROM store.ledger.entries"
+                f" WHERE lower(grid) = {literal(grid.name.lower())}"
+                f" AND lower(name) = {literal(column.name.lower())}) AS {entries}"
+                f" ON {entries}.key = {key_text(grid.keys, '_m_base')}"
+            )
+            values.append(f"CAST({entries}.value AS {column.type}) AS {quoted(column.name)}")
+        inner = f"SELECT _m_base.*, {', '.join(values)} FROM {base} AS _m_base {' '.join(joins)}"
+    for column in computed_in_order(grid):
+        inner = f"SELECT *, ({column.expression}) AS {quoted(column.name)} FROM ({inner})"
+    listed = ", ".join(
+        quoted(column.name)
+        if column.kind is ColumnKind.DERIVED
+        else f"CAST({quoted(column.name)} AS {column.type}) AS {quoted(column.name)}"
+        for column in grid.columns
+    )
+    return f"SELECT {listed} FROM ({inner})"
+
+
+def computed_in_order(grid: Grid) -> list[Column]:
+    """The computed columns, each after those it rests on.
+
+    Raises
+    ------
+    MidspreadError
+        When they rest on one another in a circle, with its path.
+    """
+    computed = {column.name.casefold(): column for column in grid.of_kind(ColumnKind.COMPUTED)}
+    rests_on = {
+        name: sorted(mentions_of(column.expression).names & computed.keys())
+        for name, column in computed.items()
+    }
+    try:
+        order = list(TopologicalSorter(rests_on).static_order())
+    except CycleError as error:
+        path = " → ".join(computed[name].name for name in reversed(error.args[1]))
+        raise MidspreadError(
+            f"column: the columns of {grid.name} rest on one another in a circle ({path}); "
+            f"write one of them without the other."
+        ) from None
+    return [computed[name] for name in order]
