@@ -223,6 +223,14 @@ def _ranked_record(
 
 
 @compiled
+def _ranked_pairs(
+    x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int
+) -> None:
+    """For a kernel of pairs that deals with NaN itself; all groups share one list of numbers."""
+    kernel(x, w, p[0], out[rows[g], c:])
+
+
+@compiled
 def _list_x0(x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int) -> None:
     answer = out[rows[g] : rows[g + 1], :]
     if _not_a_number(x, w):
@@ -267,6 +275,11 @@ def summary_driver(name: str, function: Callable[..., None]) -> Callable[..., No
 def ranked_driver(name: str, function: Callable[..., None]) -> Callable[..., None]:
     """The compiled loop of a kernel ``(x, points, out)`` that handles NaN by itself."""
     return _compiled_loop(name, function, _ranked_record)
+
+
+def pairs_driver(name: str, function: Callable[..., None]) -> Callable[..., None]:
+    """The compiled loop of a kernel ``(y, x, numbers, out)`` that handles NaN by itself."""
+    return _compiled_loop(name, function, _ranked_pairs)
 
 
 @functools.cache

@@ -11,6 +11,7 @@ CALLS = {
     "held_out_errors": "held_out_errors({}, 'dwell_s'{})",
     "power_ladder": "power_ladder({}, 'dwell_s'{})",
     "group_differences": "group_differences({}, 'dwell_s', 'ramp_used'{})",
+    "straightening_pairs": "straightening_pairs({}, 'dwell_s', 'dwell_s'{})",
     "value_profile": "value_profile({}, columns := 'dwell_s'{})",
 }
 EVERY = pytest.mark.parametrize("function", CALLS)

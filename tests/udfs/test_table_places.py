@@ -108,7 +108,7 @@ def test_names_with_spaces_quotes_and_other_letters(
     call = CALLS[function].format(f"'{quoted_table}'", f", by := '{text}'")
     rows = answer(larkmoor, f"FROM {call.replace('dwell_s', other_key)}")
     expected = answer(larkmoor, "FROM " + CALLS[function].format("'visits'", ", by := 'route'"))
-    ignored = {"column_name", "n_duplicated_rows", "expression"}
+    ignored = {"column_name", "n_duplicated_rows", "expression", "y_expression", "x_expression"}
     assert [[v for k, v in row.items() if k not in ignored] for row in rows] == [
         [v for k, v in row.items() if k not in ignored] for row in expected
     ]
@@ -130,7 +130,7 @@ def test_a_column_named_like_a_parameter_is_the_column(
     call = CALLS[function].format(f"'{table}'", ", by := 'route'").replace("'dwell_s'", f"'{name}'")
     expected = answer(larkmoor, "FROM " + CALLS[function].format("'visits'", ", by := 'route'"))
     rows = answer(larkmoor, f"FROM {call}")
-    ignored = {"column_name", "n_duplicated_rows", "expression"}
+    ignored = {"column_name", "n_duplicated_rows", "expression", "y_expression", "x_expression"}
     for row, other in zip(rows, expected, strict=True):
         assert {k: v for k, v in row.items() if k not in ignored} == {
             k: v for k, v in other.items() if k not in ignored
