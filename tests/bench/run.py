@@ -16,6 +16,7 @@ sys.path.insert(0, str(Path(__file__).parent))
 import against_engine
 import against_pandas
 import association
+import comparison
 import growth
 import memory
 import permutation
@@ -25,6 +26,7 @@ from measuring import Figure, print_figures
 SECTIONS: dict[str, Callable[[int], list[Figure]]] = {
     "engine": against_engine.measure,
     "pandas": against_pandas.measure,
+    "comparison": comparison.measure,
     "growth": growth.measure,
     "association": association.measure,
     "memory": memory.measure,

@@ -9,7 +9,7 @@ from midspread.udfs.drivers import Indices
 Flags = npt.NDArray[np.bool_]
 
 
-def kept(n: Indices, share: float) -> Indices:
+def kept(n: Indices, share: float | Values) -> Indices:
     """h = n − 2⌊share · n⌋, the number of values that trimming leaves."""
     return n - 2 * np.floor(share * n).astype(np.int64)
 

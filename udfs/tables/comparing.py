@@ -1,14 +1,25 @@
 """What the table functions that compare the levels of a label share."""
 
-from typing import Any
+from typing import Any, Final
 
 import numpy as np
 
 from midspread.udfs.declaring import Parameter, ParameterError
 from midspread.udfs.tables.relations import quoted_text
 
-LEVEL = "_midspread_label"
+LEVEL: Final = "_midspread_label"
 """The column of levels in the queries written here."""
+
+
+CONFIDENCE: Final = Parameter(
+    "confidence",
+    "of the interval",
+    default=0.95,
+    low=0.0,
+    high=1.0,
+    low_open=True,
+    high_open=True,
+)
 
 
 def checked_number(function: str, parameter: Parameter, given: object) -> float:
@@ -37,6 +48,16 @@ def is_level(function: str, given: Any) -> str:
     )
 
 
-def shown_level(given: object) -> str:
-    """A level as messages give it."""
-    return f"'{given}'" if isinstance(given, str) else str(given)
+def known_baseline(function: str, label: object, baseline: object) -> str:
+    """A form around the first column that complains when no group has the baseline."""
+    if baseline is None:
+        return "{}"
+    shown = f"'{baseline}'" if isinstance(baseline, str) else str(baseline)
+    # The sentence rests on a column, so that the engine does not work it out while it plans.
+    said = quoted_text(
+        f"{function}: baseline must be a value of label, got {shown}; {label} holds for example "
+    )
+    return (
+        "CASE WHEN bool_or(_m_has_baseline) OVER () THEN {} "
+        f"ELSE error({said} || CAST(_m_levels[1] AS VARCHAR) || '.') END"
+    )

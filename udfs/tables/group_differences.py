@@ -3,7 +3,13 @@
 from typing import Any, Final
 
 from midspread.udfs.declaring import Parameter, ParameterError, table_function
-from midspread.udfs.tables.comparing import LEVEL, checked_number, is_level, shown_level
+from midspread.udfs.tables.comparing import (
+    CONFIDENCE,
+    LEVEL,
+    checked_number,
+    is_level,
+    known_baseline,
+)
 from midspread.udfs.tables.relations import (
     BY,
     column,
@@ -33,15 +39,6 @@ _SHARE: Final = Parameter(
     default=0.2,
     low=0.0,
     high=0.5,
-    high_open=True,
-)
-_CONFIDENCE: Final = Parameter(
-    "confidence",
-    "of the interval",
-    default=0.95,
-    low=0.0,
-    high=1.0,
-    low_open=True,
     high_open=True,
 )
 _FIELDS: Final = (
@@ -80,7 +77,7 @@ _REMARKS: Final = (
 
 @table_function(
     columns=("tbl", "value", "label"),
-    parameters=(BY, _AGAINST, _BASELINE, _SHARE, _CONFIDENCE),
+    parameters=(BY, _AGAINST, _BASELINE, _SHARE, CONFIDENCE),
     fields=_FIELDS,
     formula=(
         "difference of trimmed means ∓ t · √(d1 + d2), d = winsorized SSD / (h (h − 1)), Welch's "
@@ -190,13 +187,13 @@ def group_differences(
             f"are subtracted; write for example against := 'baseline'."
         )
     cut = checked_number(function, _SHARE, share)
-    level = checked_number(function, _CONFIDENCE, confidence)
+    level = checked_number(function, CONFIDENCE, confidence)
     measured = column(function, "value", value)
     collected = f"_numbers({measured}, {quoted_text(function)}, {quoted_text(str(value))})"
     labelled = column(function, "label", label)
     group = f"GROUP BY {', '.join(grouped)}" if grouped else ""
     order = "_m_baseline DESC, " + LEVEL
-    known = _known_baseline(function, label, baseline)
+    known = known_baseline(function, label, baseline)
     return f"""
 WITH _midspread_source AS (SELECT * FROM {relation(function, tbl)}),
 _midspread_levels AS (
@@ -244,21 +241,6 @@ def _baseline_mark(function: str, mode: str, baseline: Any) -> str:
     if baseline is not None:
         return is_level(function, baseline)
     return f"{LEVEL} = min({LEVEL}) OVER ()" if mode == "baseline" else "false"
-
-
-def _known_baseline(function: str, label: object, baseline: object) -> str:
-    """A form around the first column that complains when no group has the baseline."""
-    if baseline is None:
-        return "{}"
-    # The sentence rests on a column, so that the engine does not work it out while it plans.
-    said = quoted_text(
-        f"{function}: baseline must be a value of label, got {shown_level(baseline)}; "
-        f"{label} holds for example "
-    )
-    return (
-        "CASE WHEN bool_or(_m_has_baseline) OVER () THEN {} "
-        f"ELSE error({said} || CAST(_m_levels[1] AS VARCHAR) || '.') END"
-    )
 
 
 def _remarks() -> str:
