@@ -8,6 +8,7 @@ import duckdb
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
 from midspread.engine.grids.model import Grid
+from midspread.engine.grids.tables import key_text
 from midspread.engine.store.quoting import literal, quoted
 
 _LEDGER_TABLES: Final = ("grids", "columns", "entries", "versions")
@@ -34,6 +35,40 @@ def note_undo(engine: duckdb.DuckDBPyConnection, name: str, before: Grid | None)
         steps.append(f"CREATE TABLE {ledger.contents(name)} AS FROM {aside}")
         steps.append(f"DROP TABLE {aside}")
     write_steps(engine, stamp, name, steps)
+
+
+def note_rows(engine: duckdb.DuckDBPyConnection, grid: Grid, given: str, key: str) -> int:
+    """Note the present rows of some keys before they are changed, and take the change's stamp.
+
+    Parameters
+    ----------
+    grid : Grid
+        As it is.
+    given : str
+        A table with the keys concerned, as SQL.
+    key : str
+        Its column that holds them.
+    """
+    stamp = ledger.next_stamp(engine)
+    rows = f"store.aside.{quoted(f'{stamp} {grid.name}')}"
+    keys = f"store.aside.{quoted(f'{stamp} {grid.name} keys')}"
+    entries = f"store.aside.{quoted(f'{stamp} {grid.name} entries')}"
+    table, text = ledger.contents(grid.name), key_text(grid.keys)
+    own = f"lower(grid) = {literal(grid.name.lower())} AND key IN (FROM {keys})"
+    engine.execute(f"CREATE TABLE {keys} AS SELECT {key} AS key FROM {given}")
+    engine.execute(f"CREATE TABLE {rows} AS FROM {table} WHERE {text} IN (FROM {keys})")
+    engine.execute(f"CREATE TABLE {entries} AS FROM store.ledger.entries WHERE {own}")
+    steps = [
+        f"DELETE FROM {table} WHERE {text} IN (FROM {keys})",
+        f"INSERT INTO {table} FROM {rows}",
+        f"DELETE FROM store.ledger.entries WHERE {own}",
+        f"INSERT INTO store.ledger.entries FROM {entries}",
+        f"UPDATE store.ledger.grids SET row_count = (SELECT count(*) FROM {table})"
+        f" WHERE lower(grid) = {literal(grid.name.lower())}",
+        *(f"DROP TABLE {one}" for one in (rows, keys, entries)),
+    ]
+    write_steps(engine, stamp, grid.name, steps)
+    return stamp
 
 
 def write_steps(engine: duckdb.DuckDBPyConnection, stamp: int, name: str, steps: list[str]) -> None:
@@ -66,13 +101,19 @@ def _inserts(engine: duckdb.DuckDBPyConnection, table: str, name: str) -> list[s
 
 
 def _forget_old(engine: duckdb.DuckDBPyConnection, stamp: int) -> None:
-    """Drop the notes of changes so far back that nobody will take them back."""
+    """Drop the notes of changes so far back that nobody will take them back, but of discards."""
     old = stamp - CHANGES_KEPT
-    for number, name in engine.execute(
-        "SELECT DISTINCT stamp, grid FROM store.ledger.undo WHERE stamp <= $1", [old]
+    discarded = "SELECT stamp FROM store.ledger.changes WHERE action = 'discard'"
+    for (table,) in engine.execute(
+        "SELECT table_name FROM duckdb_tables() WHERE database_name = 'store'"
+        " AND schema_name = 'aside' AND TRY_CAST(split_part(table_name, ' ', 1) AS BIGINT) <= $1"
+        f" AND TRY_CAST(split_part(table_name, ' ', 1) AS BIGINT) NOT IN ({discarded})",
+        [old],
     ).fetchall():
-        engine.execute(f"DROP TABLE IF EXISTS store.aside.{quoted(f'{number} {name}')}")
-    engine.execute("DELETE FROM store.ledger.undo WHERE stamp <= $1", [old])
+        engine.execute(f"DROP TABLE IF EXISTS store.aside.{quoted(table)}")
+    engine.execute(
+        f"DELETE FROM store.ledger.undo WHERE stamp <= $1 AND stamp NOT IN ({discarded})", [old]
+    )
 
 
 def undo(engine: duckdb.DuckDBPyConnection, name: str | None = None) -> tuple[str, str]:
@@ -88,7 +129,7 @@ def undo(engine: duckdb.DuckDBPyConnection, name: str | None = None) -> tuple[st
     Returns
     -------
     tuple of (str, str)
-        The grid, and what was taken back.
+        The grids concerned, and what was taken back.
     """
     condition = "true" if name is None else f"lower(grid) = {literal(name.lower())}"
     rows = engine.execute(
@@ -107,15 +148,17 @@ def undo(engine: duckdb.DuckDBPyConnection, name: str | None = None) -> tuple[st
     for _, step in steps:
         engine.execute(step)
     engine.execute("DELETE FROM store.ledger.undo WHERE stamp = $1", [stamp])
-    grid = steps[0][0]
     what = engine.execute(
         "SELECT action, name, key FROM store.ledger.changes WHERE stamp = $1 LIMIT 1", [stamp]
     ).fetchall()
     action = " ".join(part for part in what[0] if part) if what else "change"
     now = ledger.next_stamp(engine)
-    engine.execute(
-        "UPDATE store.ledger.grids SET stamp = $1 WHERE lower(grid) = lower($2) AND version > 0",
-        [now, grid],
-    )
-    ledger.log(engine, now, grid, "undo", note=f"took back: {action}")
-    return grid, action
+    names = sorted({name for name, _ in steps})
+    for grid in names:
+        engine.execute(
+            "UPDATE store.ledger.grids SET stamp = $1, changed = now()"
+            " WHERE lower(grid) = lower($2) AND version > 0",
+            [now, grid],
+        )
+        ledger.log(engine, now, grid, "undo", note=f"took back: {action}")
+    return ", ".join(names), action

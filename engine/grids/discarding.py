@@ -1,0 +1,73 @@
+"""`discard`: a grid removed, until `store pack` to be brought back by `undo`."""
+
+from pathlib import Path
+
+from midspread.engine.errors import MidspreadError
+from midspread.engine.grids import ledger
+from midspread.engine.grids.restoring import note_undo
+from midspread.engine.nearest import nearest
+from midspread.engine.store.store import Store
+
+
+def discard(store_path: Path, name: str, *, with_dependents: bool = False) -> list[str]:
+    """Remove a grid.
+
+    Parameters
+    ----------
+    store_path : Path
+        The store.
+    name : str
+        Of the grid.
+    with_dependents : bool
+        Whether the grids that rest on it go too; otherwise they are a reason to refuse.
+
+    Returns
+    -------
+    list of str
+        The grids that were removed.
+
+    Raises
+    ------
+    MidspreadError
+        With one sentence; nothing is changed then.
+    """
+    store = Store.open(store_path, create=False)
+    try:
+        with store.writing() as engine:
+            grids = ledger.grids(engine)
+            if name.casefold() not in grids:
+                meant = nearest(name, [one.name for one in grids.values()])
+                hint = (
+                    f"did you mean {meant}?" if meant else "midspread show lists those there are."
+                )
+                raise MidspreadError(f"discard: there is no grid {name}; {hint}")
+            going = [name.casefold()]
+            for folded in going:  # grows while it is walked
+                going += [
+                    other.folded
+                    for other in grids.values()
+                    if folded in (one.casefold() for one in other.reads)
+                    and other.folded not in going
+                ]
+            if len(going) > 1 and not with_dependents:
+                users = ", ".join(grids[folded].name for folded in going[1:])
+                raise MidspreadError(
+                    f"discard: {users} rest on {grids[going[0]].name}; discard them first, or all "
+                    f"with --with-dependents."
+                )
+            for folded in going:
+                note_undo(engine, grids[folded].name, grids[folded])
+            stamp = ledger.next_stamp(engine)
+            for folded in going:
+                grid = grids[folded]
+                ledger.log(engine, stamp, grid.name, "discard")
+                engine.execute(f"DROP TABLE IF EXISTS {ledger.contents(grid.name)}")
+                for table in ("entries", "versions"):
+                    engine.execute(
+                        f"DELETE FROM store.ledger.{table} WHERE lower(grid) = lower($1)",
+                        [grid.name],
+                    )
+                ledger.forget_grid(engine, grid.name)
+    finally:
+        store.close()
+    return [grids[folded].name for folded in going]
