@@ -13,7 +13,22 @@ from midspread.cli.help import WIDEST, write_command_list, write_options, write_
 
 # In the order in which one meets them. Each is the object of the same name in the module of the
 # same name, imported only when it is wanted: a kept answer is to come at once.
-COMMANDS = ("tour", "query", "functions", "show", "keep", "enter", "column", "refresh", "store")
+COMMANDS = (
+    "tour",
+    "query",
+    "functions",
+    "show",
+    "keep",
+    "enter",
+    "column",
+    "refresh",
+    "history",
+    "changes",
+    "undo",
+    "verify",
+    "discard",
+    "store",
+)
 
 
 class Application(click.Group):

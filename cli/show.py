@@ -11,8 +11,9 @@ import click
 from midspread.cli.cells import visible
 from midspread.cli.help import HelpfulCommand
 from midspread.cli.numbers import count_text, size_text
-from midspread.cli.options import Settings, attach_option, engine_options
+from midspread.cli.options import Count, Settings, attach_option, engine_options
 from midspread.cli.screen import Screen, result_console
+from midspread.cli.show_grid import is_grid, show_grid
 from midspread.engine.errors import MidspreadError, UsageError
 
 if TYPE_CHECKING:
@@ -38,18 +39,52 @@ _DUCKDB_MARK_AT = 8
         "midspread show --attach warehouse=warehouse.duckdb warehouse.routes",
     ),
 )
-@click.argument("name", metavar="[FILE or TABLE]", required=False)
+@click.argument("name", metavar="[GRID, FILE or TABLE]", required=False)
+@click.option("--version", type=Count(1), metavar="N", help="Of a grid: rows of this version.")
+@click.option("--record", is_flag=True, help="Of a grid: all that is needed to compute it again.")
+@click.option("--rests-on", is_flag=True, help="Of a grid: what it rests on, what rests on it.")
+@click.option(
+    "--format",
+    "form",
+    type=click.Choice(("text", "json")),
+    metavar="FORMAT",
+    default="text",
+    help="With --record: text or json.  [text]",
+)
 @attach_option
 @engine_options
-def show(name: str | None, sources: Mapping[str, Path], settings: Settings) -> None:
-    """What there is, or what a file or table holds.
+def show(
+    name: str | None,
+    version: int | None,
+    record: bool,
+    rests_on: bool,
+    form: str,
+    sources: Mapping[str, Path],
+    settings: Settings,
+) -> None:
+    """What there is, or what a grid, file or table holds.
 
-    Without a name: the store of kept answers and the sources given with --attach. With the name of
-    a file, a pattern in quotes, or a table: its columns with their types, and its first rows.
-    Files are only read.
+    Without a name: the store, its grids with their state and why, and the sources. With the name of
+    a grid, a file, a pattern in quotes, or a table: its columns with their types, and its first
+    rows. Files are only read.
     """
     console = result_console()
-    if name is None:
+    if name is not None and is_grid(settings, name):
+        show_grid(
+            console,
+            name,
+            settings,
+            version=version,
+            record=record,
+            rests_on=rests_on,
+            as_json=form == "json",
+        )
+    elif version is not None or record or rests_on:
+        raise MidspreadError(
+            f"show: there is no grid {name or ''}, and --version, --record and --rests-on are "
+            f"for grids; midspread show lists those there are."
+        )
+    elif name is None:
         _show_what_there_is(console, settings, sources)
     elif not name.strip():
         raise UsageError("show: the name is empty; give a file, a pattern in quotes, or a table.")

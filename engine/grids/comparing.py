@@ -141,7 +141,7 @@ def _changes_query(engine: duckdb.DuckDBPyConnection, grid: Grid, old: str, new:
         f" (SELECT *, true AS _m_there FROM {new}) AS n ON {on}"
     )
     nothing = (
-        "CAST(NULL AS VARCHAR) AS column, CAST(NULL AS VARCHAR) AS before,"
+        'CAST(NULL AS VARCHAR) AS "column", CAST(NULL AS VARCHAR) AS before,'
         " CAST(NULL AS VARCHAR) AS after, CAST(NULL AS DOUBLE) AS change,"
         " CAST(NULL AS DOUBLE) AS in_se"
     )
@@ -156,16 +156,17 @@ def _changes_query(engine: duckdb.DuckDBPyConnection, grid: Grid, old: str, new:
             change = f"CAST(n.{column} AS DOUBLE) - CAST(o.{column} AS DOUBLE)"
             se = _standard_error(name, shared)
             if se:
-                spread = f"sqrt(CAST(o.{quoted(se)} AS DOUBLE) ** 2 + CAST(n.{quoted(se)} AS DOUBLE) ** 2)"
+                squares = " + ".join(f"CAST({v}.{quoted(se)} AS DOUBLE) ** 2" for v in "on")
+                spread = f"sqrt({squares})"
                 in_se = f"({change}) / nullif({spread}, 0)"
         parts.append(
-            f"SELECT {keys}, 'changed' AS what, {literal(name)} AS column,"
+            f"SELECT {keys}, 'changed' AS what, {literal(name)} AS \"column\","
             f" CAST(o.{column} AS VARCHAR) AS before, CAST(n.{column} AS VARCHAR) AS after,"
             f" {change} AS change, {in_se} AS in_se FROM {joined}"
             f" WHERE {there[0]} AND {there[1]} AND o.{column} IS DISTINCT FROM n.{column}"
         )
     order = ", ".join(quoted(key) for key in grid.keys)
-    return f"FROM ({' UNION ALL '.join(parts)}) ORDER BY {order}, what, column"
+    return f'FROM ({" UNION ALL ".join(parts)}) ORDER BY {order}, what, "column"'
 
 
 def _standard_error(name: str, columns: list[str]) -> str:

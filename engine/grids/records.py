@@ -12,6 +12,7 @@ import duckdb
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
+from midspread.engine.grids.columns import add_column
 from midspread.engine.grids.comparing import found_grid
 from midspread.engine.grids.entering import create, enter
 from midspread.engine.grids.freshness import in_order
@@ -70,6 +71,19 @@ def _step(engine: duckdb.DuckDBPyConnection, grid: Grid) -> dict[str, Any]:
         step["digest"] = digest(engine, ledger.contents(grid.name), _own_columns(grid))
     if grid.kind is GridKind.DERIVED:
         step |= {"sql": grid.sql, "folder": grid.folder, **grid.record.__dict__}
+        step["added"] = [
+            [column.name, column.type, column.expression]
+            for column in grid.columns
+            if column.kind is not ColumnKind.DERIVED
+        ]
+        step["entries"] = [
+            [json.loads(key), column, value]
+            for key, column, value in engine.execute(
+                "SELECT key, name, value FROM store.ledger.entries"
+                " WHERE lower(grid) = lower($1) ORDER BY ALL",
+                [grid.name],
+            ).fetchall()
+        ]
         return step
     columns = grid.of_kind(ColumnKind.ENTERED)
     listed = ", ".join(f"CAST({quoted(c.name)} AS VARCHAR)" for c in columns)
@@ -116,8 +130,8 @@ def read_record(path: Path) -> dict[str, Any]:
         document = None
     if not isinstance(document, dict) or document.get("record") != "midspread grid":
         raise MidspreadError(
-            f"verify: {path} holds no record of a grid; write one with midspread show GRID --record "
-            f"--format json."
+            f"verify: {path} holds no record of a grid; write one with midspread show GRID "
+            f"--record --format json."
         )
     if document.get("format") != _FORMAT:
         raise MidspreadError(
@@ -153,6 +167,17 @@ def verify(open_session: Callable[[Path], "Session"], document: dict[str, Any]) 
     return verdicts
 
 
+def _add(place: Path, step: dict[str, Any]) -> None:
+    """Add a derived grid's own columns, and the values typed into them."""
+    name = step["grid"]
+    for column, kind, expression in step["added"]:
+        text = f"AS ({expression})" if expression else kind
+        add_column(place, name, f"{quoted(column)} {text}")
+    for key, column, value in step["entries"]:
+        with contextlib.suppress(MidspreadError):  # its row may be gone, which the digest tells
+            enter(place, name, [*step["keys"], column], [[*key, value]])
+
+
 def _verified(
     open_session: Callable[[Path], "Session"], place: Path, step: dict[str, Any]
 ) -> Verdict:
@@ -164,6 +189,7 @@ def _verified(
     else:
         with open_session(place) as session:
             keep(session, place, name, step["sql"], key=step["keys"])
+        _add(place, step)
     store = Store.open(place, create=False)
     with contextlib.closing(store), store.reading() as engine:
         grid = ledger.grids(engine)[name.casefold()]
