@@ -9,7 +9,7 @@ from midspread.cli.options import Settings, engine_options
 @click.command(
     cls=HelpfulCommand,
     examples=(
-        'midspread column route_dwell "remark TEXT"',
+        'midspread column limits "agreed DATE"',
         'midspread column route_dwell "upper_s AS (dwell_s + 2 * se)"',
         "midspread column route_dwell upper_s --drop",
     ),

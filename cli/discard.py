@@ -8,7 +8,7 @@ from midspread.cli.help import HelpfulCommand
 from midspread.cli.options import Settings, store_option
 
 
-@click.command(cls=HelpfulCommand, examples=("midspread discard slow_routes",))
+@click.command(cls=HelpfulCommand, examples=("midspread discard limits",))
 @click.argument("name", metavar="GRID")
 @click.option("--with-dependents", is_flag=True, help="Remove those that rest on it too.")
 @store_option

@@ -12,8 +12,9 @@ from midspread.cli.options import Settings, names_in, store_option
 @click.command(
     cls=HelpfulCommand,
     examples=(
-        'midspread enter limits --columns "route TEXT, share DOUBLE, limit_s DOUBLE" --key route',
+        'midspread enter ramps --columns "stop TEXT, ramp_s DOUBLE" --key stop',
         'midspread enter limits route=L3 share=0.25 limit_s=45 --note "driver survey"',
+        'midspread enter route_dwell route=L7 "remark=school holidays in August"',
         "midspread enter limits route=L3 --delete",
     ),
 )

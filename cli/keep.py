@@ -15,9 +15,9 @@ from midspread.cli.scripts import read_script
 @click.command(
     cls=HelpfulCommand,
     examples=(
-        'midspread keep route_dwell "SELECT route, trimmed_mean(dwell_s, 0.1) AS dwell_s, '
-        "trimmed_mean_se(dwell_s, 0.1) AS se FROM 'dwell/*.parquet' GROUP BY route\"",
-        'midspread keep slow_routes --replace "SELECT route FROM route_dwell WHERE dwell_s > 20"',
+        'midspread keep stop_dwell "SELECT stop, trimmed_mean(dwell_s, 0.1) AS dwell_s, '
+        "trimmed_mean_se(dwell_s, 0.1) AS se FROM 'dwell/*.parquet' GROUP BY stop\"",
+        'midspread keep slow_stops "SELECT stop FROM stop_dwell WHERE dwell_s > 20" --key stop',
     ),
 )
 @click.argument("name", metavar="GRID")

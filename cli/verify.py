@@ -14,18 +14,15 @@ from midspread.engine.errors import MidspreadError
 
 @click.command(
     cls=HelpfulCommand,
-    examples=(
-        "midspread show route_dwell --record --format json > record.json",
-        "midspread verify record.json",
-    ),
+    examples=("midspread verify route_dwell.json",),
 )
 @click.argument("file", metavar="FILE", type=click.Path(path_type=Path))
 @engine_options
 def verify(file: Path, settings: Settings) -> None:
     """Compute a recorded grid again and say whether every digit agrees.
 
-    Paths in its queries are those of the current folder. Everything is computed in a store of its
-    own, which is removed; yours is left alone.
+    The record is what midspread show GRID --record --format json prints. Paths in its queries are
+    those of the current folder. Everything is computed in a store of its own, which is removed.
     """
     from midspread.engine.grids.records import read_record
     from midspread.engine.grids.records import verify as verify_record

@@ -3,6 +3,7 @@
 import shlex
 from collections.abc import Callable
 from importlib.metadata import version
+from pathlib import Path
 
 import click
 import pytest
@@ -14,6 +15,18 @@ from midspread.cli.tour_steps import NEXT
 Run = Callable[..., Result]
 
 
+# What the tour leaves in its store.
+PREPARED = (
+    'midspread keep route_dwell "SELECT route, trimmed_mean(dwell_s, 0.1) AS dwell_s, '
+    "trimmed_mean_se(dwell_s, 0.1) AS se FROM 'dwell/*.parquet' GROUP BY route\"",
+    'midspread enter limits --columns "route TEXT, share DOUBLE, limit_s DOUBLE" --key route',
+    "midspread enter limits route=L3 share=0.25 limit_s=45",
+    'midspread column route_dwell "remark TEXT"',
+    'midspread keep route_dwell --replace "SELECT route, trimmed_mean(dwell_s, 0.2) AS dwell_s, '
+    "trimmed_mean_se(dwell_s, 0.2) AS se FROM 'dwell/*.parquet' GROUP BY route\"",
+)
+
+
 def examples(help_text: str) -> list[str]:
     """The command lines below the heading, as a reader would copy them."""
     _, heading, below = help_text.partition("\nExample")
@@ -22,7 +35,8 @@ def examples(help_text: str) -> list[str]:
 
 
 def test_the_commands_are_those_of_today() -> None:
-    assert set(COMMANDS) == {"functions", "query", "show", "store", "tour"}
+    listed = "tour query functions show keep enter column refresh history changes undo verify"
+    assert set(COMMANDS) == {*listed.split(), "discard", "store"}
 
 
 def test_the_program_lists_its_commands(run: Run) -> None:
@@ -60,10 +74,13 @@ def test_no_line_of_a_help_is_too_wide_but_examples(run: Run, command: str) -> N
     assert max(map(len, explained.splitlines())) <= 100
 
 
-@pytest.mark.usefixtures("here")
 @pytest.mark.parametrize("command", COMMANDS)
-def test_the_examples_run(run: Run, command: str) -> None:
+def test_the_examples_run(run: Run, here: Path, command: str) -> None:
     assert run("query", "--format", "table", "SELECT 1").exit_code == 0  # the tour made a store
+    for line in PREPARED:
+        assert run(*shlex.split(line)[1:]).exit_code == 0, line
+    record = run("show", "route_dwell", "--record", "--format", "json").stdout
+    (here / "route_dwell.json").write_text(record, encoding="utf-8")
     shown = examples(run(command, "--help").stdout)
     assert shown
     for line in shown:

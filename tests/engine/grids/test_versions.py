@@ -1,0 +1,114 @@
+"""Versions compared, records verified, grids discarded."""
+
+import json
+from pathlib import Path
+
+import pytest
+
+from midspread.engine.errors import MidspreadError
+from midspread.engine.grids.columns import add_column
+from midspread.engine.grids.comparing import changes, history
+from midspread.engine.grids.discarding import discard
+from midspread.engine.grids.entering import create, enter
+from midspread.engine.grids.publishing import VERSIONS_SETTING
+from midspread.engine.grids.records import read_record, record_of, verify
+from midspread.engine.grids.refreshing import look, refresh
+from midspread.engine.grids.resting import tree_above, tree_below
+from midspread.engine.grids.restoring import undo
+from midspread.engine.session import Session
+from midspread.engine.store.store import Store
+from tests.engine.grids.conftest import Keep, write_month
+from tests.engine.grids.test_keeping import BY_ROUTE, rows, states
+
+WITH_ERROR = (
+    "SELECT route, avg(dwell_s) AS dwell, count(*) AS n, 0.3 AS dwell_se FROM '2031-*.parquet'"
+    " WHERE NOT (route = 'R2' AND (SELECT count(*) FROM '2031-*.parquet') > 120) GROUP BY route"
+)
+
+
+def test_what_changed_by_key_and_in_standard_errors(kept: Keep, store: Path, folder: Path) -> None:
+    kept("by_route", WITH_ERROR)
+    old = dict(rows("SELECT route, dwell FROM by_route"))
+    write_month(folder, "2031-03", 30, 100.0)
+    list(refresh(lambda: Session(threads=1), store))
+    new = dict(rows("SELECT route, dwell FROM by_route"))
+    table, first, last = changes(store, "by_route")
+    assert (first, last) == (1, 2)
+    lines = table.to_pylist()
+    assert [line["route"] for line in lines if line["what"] == "gone"] == ["R2"]
+    dwell = {line["route"]: line for line in lines if line["column"] == "dwell"}
+    for route in ("R0", "R1"):
+        change = new[route] - old[route]
+        assert dwell[route]["change"] == pytest.approx(change)
+        assert dwell[route]["in_se"] == pytest.approx(change / (0.3 * 2**0.5))
+    assert changes(store, "by_route", 2, 1)[0].num_rows == table.num_rows
+
+
+def test_only_so_many_versions_are_kept(kept: Keep, store: Path, folder: Path) -> None:
+    kept("by_route", BY_ROUTE)
+    opened = Store.open(store)
+    with opened.writing() as engine:
+        engine.execute("INSERT INTO store.ledger.about VALUES ($1, '2')", [VERSIONS_SETTING])
+    opened.close()
+    for month in range(3, 7):
+        write_month(folder, f"2031-0{month}", 30)
+        list(refresh(lambda: Session(threads=1), store))
+    assert changes(store, "by_route", 4, 5)[0].num_rows
+    with pytest.raises(MidspreadError, match="not kept; those kept are 3, 4, 5"):
+        changes(store, "by_route", 1, 5)
+    log = history(store, "by_route").to_pylist()
+    assert [line["version"] for line in log] == [5, 4, 3, 2, 1]
+    assert log[0]["note"] == "2031-06.parquet is new"
+
+
+def test_a_record_is_computed_again_to_the_last_digit(
+    kept: Keep, store: Path, folder: Path
+) -> None:
+    create(store, "limits", "route TEXT, limit_s DOUBLE", ["route"])
+    enter(store, "limits", ["route", "limit_s"], [["R1", "0.1"], ["R2", None]])
+    kept("by_route", BY_ROUTE)
+    add_column(store, "by_route", "remark TEXT")
+    enter(store, "by_route", ["route", "remark"], [["R1", "seen"]])
+    kept(
+        "both",
+        "SELECT route, total - limit_s AS left_s, remark FROM by_route JOIN limits USING (route)",
+        key=["route"],
+    )
+    path = folder / "record.json"
+    path.write_text(json.dumps(record_of(store, "both")), encoding="utf-8")
+
+    def again() -> list[tuple[str, bool]]:
+        found = verify(lambda place: Session(threads=1, store=place), read_record(path))
+        return [(one.grid, one.agrees) for one in found]
+
+    assert sorted(again()) == [("both", True), ("by_route", True), ("limits", True)]
+    write_month(folder, "2031-01", 61)
+    assert ("by_route", False) in again()
+
+
+def test_what_rests_on_what(kept: Keep, store: Path) -> None:
+    kept("by_route", BY_ROUTE)
+    kept("most", "SELECT max(total) AS most FROM by_route")
+    with Session(use_store=False) as session:
+        grids, _ = look(session, store)
+    assert list(tree_below(grids, "most")) == [
+        (0, "by_route (derived)"),
+        (1, "2031-*.parquet (2 files)"),
+    ]
+    assert list(tree_above(grids, "by_route")) == [(0, "most (derived)")]
+
+
+def test_discard_is_refused_while_others_rest_on_it(kept: Keep, store: Path) -> None:
+    kept("by_route", BY_ROUTE)
+    kept("most", "SELECT max(total) AS most FROM by_route")
+    before = rows("SELECT * FROM by_route ORDER BY ALL")
+    with pytest.raises(MidspreadError, match="most rest on by_route"):
+        discard(store, "by_route")
+    assert discard(store, "by_route", with_dependents=True) == ["by_route", "most"]
+    assert states(store) == {}
+    opened = Store.open(store)
+    with opened.writing() as engine:
+        assert undo(engine) == ("by_route, most", "discard")
+    opened.close()
+    assert rows("SELECT * FROM by_route ORDER BY ALL") == before
+    assert sorted(states(store)) == ["by_route", "most"]
