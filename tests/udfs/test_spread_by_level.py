@@ -56,7 +56,7 @@ def test_figures_by_their_definitions(
     rows = labelled(connection, groups)
     assert len(rows) == 7
     for row in rows:
-        x = np.sort(groups[row["route"]])
+        x = np.sort(groups[row["label"]])
         half = (x.size + 1) // 2
         spread = np.median(x[-half:]) - np.median(x[:half])
         assert row["n"] == x.size
@@ -82,13 +82,13 @@ def test_labels_that_have_no_logarithms_are_counted(
         "endless": [math.inf] * 3,
     }
     rows = labelled(connection, {**fine, **odd, "empty": [None], None: [1.0, 7.0]})
-    by_label = {row["route"]: row for row in rows}
+    by_label = {row["label"]: row for row in rows}
     assert set(by_label) == {*fine, *odd, "empty"}
     for row in rows:
         assert (row["n_labels"], row["n_left_out"]) == (6, 4)
         assert row["slope"] == pytest.approx(1.0, rel=1e-14)
         assert row["suggested_rung"] == 0.0
-        assert (row["ln_level"] is None) == (row["ln_spread"] is None) == (row["route"] not in fine)
+        assert (row["ln_level"] is None) == (row["ln_spread"] is None) == (row["label"] not in fine)
     assert by_label["empty"]["level"] is None and by_label["empty"]["n"] == 0
     assert math.isnan(by_label["spoilt"]["level"])
     (alone,) = labelled(connection, {"a": [1.0, 2.0, 3.0]})
@@ -115,7 +115,7 @@ def suggested(connection: duckdb.DuckDBPyConnection, power: float) -> float:
 
 def test_each_group_has_a_line_of_its_own(larkmoor: duckdb.DuckDBPyConnection) -> None:
     rows = answer(larkmoor, "FROM spread_by_level('visits', 'dwell_s', 'stop', by := ['route'])")
-    assert list(rows[0])[:2] == ["route", "stop"]
+    assert list(rows[0])[:2] == ["route", "label"]
     for route in ("R0", "R1", "R2"):
         alone = answer(
             larkmoor,
@@ -127,7 +127,9 @@ def test_each_group_has_a_line_of_its_own(larkmoor: duckdb.DuckDBPyConnection) -
 
 def test_bad_names(larkmoor: duckdb.DuckDBPyConnection) -> None:
     call = "FROM spread_by_level('visits', 'dwell_s', {})"
-    said = complaint(larkmoor, call.format("'route', by := 'route'"))
+    said = complaint(larkmoor, call.format("'route', by := ['route', 'route']"))
     assert said.startswith("spread_by_level: by names route twice")
+    rows = answer(larkmoor, call.format("'route', by := 'route'"))
+    assert [(row["route"], row["label"]) for row in rows] == [(r, r) for r in ("R0", "R1", "R2")]
     said = complaint(larkmoor, call.format("NULL"))
     assert said.startswith("spread_by_level: label must be the name of a column")

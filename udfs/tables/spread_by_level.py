@@ -23,7 +23,7 @@ from midspread.udfs.tables.relations import (
 )
 
 _FIELDS: Final = (
-    *("n", "level", "spread", "ln_level", "ln_spread"),
+    *("label", "n", "level", "spread", "ln_level", "ln_spread"),
     *("slope", "power", "suggested_rung", "n_labels", "n_left_out"),
 )
 
@@ -102,9 +102,7 @@ def spread_by_level(*, tbl: object, value: object, label: object, by: object) ->
     """
     function = "spread_by_level"
     compared = column(function, "label", label)
-    names = keys(function, by, _FIELDS)
-    keys(function, [*names, str(label)], _FIELDS)
-    grouped = [quoted_name(name) for name in names]
+    grouped = [quoted_name(name) for name in keys(function, by, _FIELDS)]
     measured = column(function, "value", value)
     collected = f"_numbers({measured}, {quoted_text(function)}, {quoted_text(str(value))})"
     group = f"GROUP BY {', '.join(grouped)}" if grouped else ""
@@ -113,9 +111,9 @@ def spread_by_level(*, tbl: object, value: object, label: object, by: object) ->
     return f"""
 WITH _midspread_source AS (SELECT * FROM {relation(function, tbl)}),
 _midspread_labels AS (
-    SELECT {joined(grouped)}{compared}, count({measured}) AS _m_n,
+    SELECT {joined(grouped)}{compared} AS _m_label, count({measured}) AS _m_n,
         _level_and_spread({collected}) AS _m_s
-    FROM _midspread_source WHERE {compared} IS NOT NULL GROUP BY {joined(grouped)}{compared}
+    FROM _midspread_source WHERE {compared} IS NOT NULL GROUP BY {joined(grouped)}_m_label
 ),
 _midspread_logs AS (
     SELECT *, _m_n > 0 AND isfinite(_m_s.level) AND isfinite(_m_s.spread) AND _m_s.level > 0
@@ -130,7 +128,7 @@ _midspread_lines AS (
         count(*) FILTER (_m_n > 0 AND NOT coalesce(_m_used, false)) AS _m_left_out
     FROM _midspread_logs {group}
 )
-SELECT {shown}a.{compared}, a._m_n AS n, a._m_s.level AS level, a._m_s.spread AS spread,
+SELECT {shown}a._m_label AS label, a._m_n AS n, a._m_s.level AS level, a._m_s.spread AS spread,
     a._m_level AS ln_level, a._m_spread AS ln_spread, b._m_line.slope AS slope,
     1 - b._m_line.slope AS power,
     CASE WHEN isnan(power) THEN NULL WHEN power < -2.5 THEN -3 WHEN power < -1.5 THEN -2
@@ -139,4 +137,4 @@ SELECT {shown}a.{compared}, a._m_n AS n, a._m_s.level AS level, a._m_s.spread AS
         WHEN power > 2.5 THEN 3 END::DOUBLE AS suggested_rung,
     b._m_labels AS n_labels, b._m_left_out AS n_left_out
 FROM _midspread_logs a JOIN _midspread_lines b ON {same}
-ORDER BY {shown}level, a.{compared}"""
+ORDER BY {shown}a._m_s.level, a._m_label"""
