@@ -6,6 +6,7 @@ import duckdb
 import pytest
 
 CALLS = {
+    "unit_intervals": "unit_intervals({}, 'dwell_s', 'dwell_s', resamples := 99{})",
     "robust_summary": "robust_summary({}, 'dwell_s'{})",
     "trim_path": "trim_path({}, 'dwell_s'{})",
     "held_out_errors": "held_out_errors({}, 'dwell_s'{})",

@@ -82,13 +82,14 @@ def unit_intervals(
     given = ", ".join(_setting(function, p, settings[p.name]) for p in UNIT_PARAMETERS)
     read_statistic(function, str(settings["statistic"]))
     present = f"CASE WHEN {owner} IS NOT NULL THEN {measured} END"
-    collected = f"_numbers({present}, {quoted_text(function)}, {quoted_text(str(value))})"
+    collected = f"_numbers(_midspread_x, {quoted_text(function)}, {quoted_text(str(value))})"
     both = f"{measured} IS NOT NULL AND {owner} IS NOT NULL"
     group = f"GROUP BY {', '.join(grouped)}" if grouped else ""
     figures = ", ".join(f"_midspread_r.{name}" for name in _FIGURES)
     order = f"ORDER BY {', '.join(grouped)}" if grouped else ""
     return f"""
-WITH _midspread_source AS (SELECT * FROM {relation(function, tbl)}),
+WITH _midspread_rows AS (SELECT * FROM {relation(function, tbl)}),
+_midspread_source AS (SELECT *, {present} AS _midspread_x FROM _midspread_rows),
 _midspread_groups AS (
     SELECT {joined(grouped)}
         _bootstrap_units({collected}, list({owner}) FILTER ({both}), {given}) AS _midspread_r,
