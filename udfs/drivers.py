@@ -171,6 +171,16 @@ def _record_xw1(
 
 
 @compiled
+def _watching_record_x0(
+    x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int, control: Indices
+) -> None:
+    if _not_a_number(x, w):
+        out[rows[g], c:] = math.nan
+    else:
+        kernel(x, out[rows[g], c:], control)
+
+
+@compiled
 def _watching_record_xw0(
     x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int, control: Indices
 ) -> None:
@@ -252,6 +262,7 @@ _ADAPTERS: Final[dict[tuple[str, int, int], Callable[..., None]]] = {
     ("list", 1, 0): _list_x0,
 }
 _WATCHING_ADAPTERS: Final[dict[tuple[str, int, int], Callable[..., None]]] = {
+    ("record", 1, 0): _watching_record_x0,
     ("record", 2, 0): _watching_record_xw0,
     ("record", 2, 1): _watching_record_xw1,
 }

@@ -21,6 +21,7 @@ import growth
 import memory
 import permutation
 import processes
+import reexpression
 from measuring import Figure, print_figures
 
 SECTIONS: dict[str, Callable[[int], list[Figure]]] = {
@@ -32,6 +33,7 @@ SECTIONS: dict[str, Callable[[int], list[Figure]]] = {
     "memory": memory.measure,
     "permutation": permutation.measure,
     "processes": processes.measure,
+    "reexpression": reexpression.measure,
 }
 
 

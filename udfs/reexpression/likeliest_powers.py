@@ -8,7 +8,7 @@ import numpy as np
 from midspread.udfs.arithmetic.order_statistics import median_sorted
 from midspread.udfs.arithmetic.sums import compensated_mean
 from midspread.udfs.declaring import Values, aggregate, compiled
-from midspread.udfs.reexpression.profile_likelihood import fit_power
+from midspread.udfs.reexpression.profile_likelihood import Indices, fit_power
 
 _FIELDS: Final = ("power", "lower", "upper", "log_likelihood")
 _BREAKDOWN: Final = "0: one wild value can move it by a whole rung"
@@ -28,8 +28,9 @@ _COST: Final = "O(n log n) time, then some thirty passes; O(n) memory"
     smallest_n=2,
     example="box_cox_power(dwell_s + 0.5)",
     linear=False,
+    watches=True,
 )
-def box_cox_power(x: Values, out: Values) -> None:
+def box_cox_power(x: Values, out: Values, control: Indices) -> None:
     """The power of Box & Cox under which the values look most normal, with 95 % limits.
 
     Parameters
@@ -63,7 +64,7 @@ def box_cox_power(x: Values, out: Values) -> None:
     if math.isinf(x[n - 1]):
         out[:4] = math.nan
         return
-    _fit_one_sided(x, 0.0, out)
+    _fit_one_sided(x, 0.0, out, control)
 
 
 @aggregate(
@@ -79,8 +80,9 @@ def box_cox_power(x: Values, out: Values) -> None:
     smallest_n=2,
     example="yeo_johnson_power(dwell_s - 20)",
     linear=False,
+    watches=True,
 )
-def yeo_johnson_power(x: Values, out: Values) -> None:
+def yeo_johnson_power(x: Values, out: Values, control: Indices) -> None:
     """The power of Yeo & Johnson under which the values look most normal, with 95 % limits.
 
     Parameters
@@ -112,10 +114,10 @@ def yeo_johnson_power(x: Values, out: Values) -> None:
         out[:4] = math.nan
         return
     if x[0] >= 0.0:
-        _fit_one_sided(x, 1.0, out)
+        _fit_one_sided(x, 1.0, out, control)
     elif x[n - 1] <= 0.0:
         # Below 0 it is Box and Cox's family of 1 − x under the power 2 − λ.
-        _fit_one_sided(-x[::-1], 1.0, out)
+        _fit_one_sided(-x[::-1], 1.0, out, control)
         upper = 2.0 - out[1]
         out[0] = 2.0 - out[0]
         out[1] = 2.0 - out[2]
@@ -124,12 +126,12 @@ def yeo_johnson_power(x: Values, out: Values) -> None:
         logs = np.empty(n)
         for i in range(n):
             logs[i] = math.log1p(x[i]) if x[i] >= 0.0 else -math.log1p(-x[i])
-        fit_power(logs, True, out)
+        fit_power(logs, True, out, control)
         out[3] -= compensated_mean(logs, 0, n) * n
 
 
 @compiled
-def _fit_one_sided(x: Values, start: float, out: Values) -> None:
+def _fit_one_sided(x: Values, start: float, out: Values, control: Indices) -> None:
     """Fit the power of x + start, all above 0; start is 0 or 1."""
     n = x.size
     middle = median_sorted(x)
@@ -144,7 +146,7 @@ def _fit_one_sided(x: Values, start: float, out: Values) -> None:
     mean = compensated_mean(logs, 0, n)
     for i in range(n):
         logs[i] -= mean
-    fit_power(logs, False, out)
+    fit_power(logs, False, out, control)
     out[3] -= n * (mean + _log_of_sum(middle, start))
 
 

@@ -10,10 +10,16 @@ import math
 from typing import Final
 
 import numpy as np
+import numpy.typing as npt
 
 from midspread.udfs.arithmetic.running import add
 from midspread.udfs.arithmetic.sums import compensated_mean, squares_from
 from midspread.udfs.declaring import Values, compiled
+
+Indices = npt.NDArray[np.int64]
+
+STOP: Final = 0
+"""Cell of the control array that asks the loops to stop, as in `drivers`."""
 
 DROP: Final = 1.920729410347062
 """Half of 3.841459, the 95 % point of chi-square with one degree of freedom."""
@@ -23,6 +29,7 @@ _FEW_DIGITS: Final = 0.1
 _SCORE: Final = 0
 _HEIGHT: Final = 1
 _BLOCK: Final = 64
+_OFTEN: Final = 1 << 20
 _ROUNDS: Final = 200
 _CLOSE: Final = 1e-12
 _NARROWEST: Final = 1e-200
@@ -30,7 +37,7 @@ _NARROWEST: Final = 1e-200
 
 
 @compiled
-def fit_power(logs: Values, mirrored: bool, out: Values) -> None:
+def fit_power(logs: Values, mirrored: bool, out: Values, control: Indices) -> None:
     """Write the power, its limits and the log-likelihood, but for a constant the caller adds.
 
     Parameters
@@ -42,6 +49,8 @@ def fit_power(logs: Values, mirrored: bool, out: Values) -> None:
         Whether values below 0 take the power 2 − power.
     out : array
         Takes power, lower, upper, log-likelihood.
+    control : array of int64
+        Watched for a request to stop; what is written then means nothing.
     """
     n = logs.size
     values, slopes = np.empty(n), np.empty(n)
@@ -50,19 +59,25 @@ def fit_power(logs: Values, mirrored: bool, out: Values) -> None:
     if squares < _NARROWEST:
         return
     step = 1.0 / math.sqrt(squares / n)
-    power = _root(logs, mirrored, total, values, slopes, _SCORE, 0.0, 0.0, step)
-    height = _profile(logs, mirrored, total, values, slopes, power)[0]
+    power = _root(logs, mirrored, total, values, slopes, control, _SCORE, 0.0, 0.0, step)
+    height = _profile(logs, mirrored, total, values, slopes, control, power)[0]
     out[0] = power
     step *= 2.0 / math.sqrt(n)
     floor = height - DROP
-    out[1] = _root(logs, mirrored, total, values, slopes, _HEIGHT, floor, power, -step)
-    out[2] = _root(logs, mirrored, total, values, slopes, _HEIGHT, floor, power, step)
+    out[1] = _root(logs, mirrored, total, values, slopes, control, _HEIGHT, floor, power, -step)
+    out[2] = _root(logs, mirrored, total, values, slopes, control, _HEIGHT, floor, power, step)
     out[3] = height
 
 
 @compiled
 def _profile(
-    logs: Values, mirrored: bool, total: float, values: Values, slopes: Values, power: float
+    logs: Values,
+    mirrored: bool,
+    total: float,
+    values: Values,
+    slopes: Values,
+    control: Indices,
+    power: float,
 ) -> tuple[float, float]:
     """The log-likelihood at a power and its derivative; scratch is overwritten."""
     n = logs.size
@@ -73,6 +88,8 @@ def _profile(
     )
     shrink = ends if ends > _LARGEST_EXPONENT else 0.0
     for i in range(n):
+        if i % _OFTEN == 0 and control[STOP] != 0:
+            return 0.0, 0.0
         log = logs[i]
         if log >= 0.0:
             values[i], slopes[i] = _stretched(log, power, shrink)
@@ -118,12 +135,13 @@ def _height(
     total: float,
     values: Values,
     slopes: Values,
+    control: Indices,
     kind: int,
     floor: float,
     power: float,
 ) -> float:
     """What must be 0: the derivative, or the log-likelihood above a floor."""
-    likelihood, score = _profile(logs, mirrored, total, values, slopes, power)
+    likelihood, score = _profile(logs, mirrored, total, values, slopes, control, power)
     return score if kind == _SCORE else likelihood - floor
 
 
@@ -134,6 +152,7 @@ def _root(
     total: float,
     values: Values,
     slopes: Values,
+    control: Indices,
     kind: int,
     floor: float,
     start: float,
@@ -146,21 +165,23 @@ def _root(
     Chandrupatla, T. R. (1997). Advances in Engineering Software 28, 145–149.
     """
     unit = abs(step)
-    a, fa = start, _height(logs, mirrored, total, values, slopes, kind, floor, start)
+    a, fa = start, _height(logs, mirrored, total, values, slopes, control, kind, floor, start)
     if kind == _SCORE and fa < 0.0:
         step = -step
     b, fb = a, fa
-    while fb != 0.0 and (fb > 0.0) == (fa > 0.0):
+    while fb != 0.0 and (fb > 0.0) == (fa > 0.0) and control[STOP] == 0:
         a, fa = b, fb
         b = b + step
         step *= 2.0
-        fb = _height(logs, mirrored, total, values, slopes, kind, floor, b)
-    if fb == 0.0:
+        fb = _height(logs, mirrored, total, values, slopes, control, kind, floor, b)
+    if fb == 0.0 or control[STOP] != 0:
         return b
     t = 0.5
     for _ in range(_ROUNDS):
+        if control[STOP] != 0:
+            break
         x = a + t * (b - a)
-        fx = _height(logs, mirrored, total, values, slopes, kind, floor, x)
+        fx = _height(logs, mirrored, total, values, slopes, control, kind, floor, x)
         if (fx > 0.0) == (fa > 0.0):
             c, fc = a, fa
         else:
