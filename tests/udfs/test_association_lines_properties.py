@@ -88,6 +88,28 @@ def test_repeated_median_as_over_all_pairs(pairs: Pairs) -> None:
     assert slope == pytest.approx(expected, rel=1e-14, abs=1e-15 * scale)
 
 
+class StopAfter(np.ndarray):
+    """Cells of a control that ask to stop once they have been looked at so many times."""
+
+    looks = 0
+
+    def __getitem__(self, place: object) -> object:
+        self.looks -= 1
+        return 0 if self.looks > 0 else 1
+
+
+@pytest.mark.usefixtures("_searching")
+@pytest.mark.parametrize("looks", [1, 2, 3, 5, 8, 13, 21, 34, 55, 89])
+def test_a_stop_ends_the_search_wherever_it_is(looks: int) -> None:
+    y, x = drawn("continuous", 300)
+    order = np.lexsort((x, y))
+    for kernel, settings_given in ((theil_sen, (0.95,)), (repeated_median, ())):
+        control = np.zeros(2, np.int64).view(StopAfter)
+        control.looks = looks
+        kernel(y[order], x[order], *settings_given, np.full(4, math.nan), control)
+        assert control.looks <= 0 or kernel is repeated_median
+
+
 def drawn(kind: str, n: int) -> tuple[np.ndarray, np.ndarray]:
     generator = np.random.default_rng(n)
     if kind == "continuous":

@@ -155,8 +155,10 @@ def _search(
     medians = np.empty(left.size)
     for i in range(left.size):
         if control[_STOP] != 0:
-            return 0.0, 0.0, True
+            break
         medians[i] = median_slope(y, x, left[i], room)
+    if control[_STOP] != 0:
+        return 0.0, 0.0, True
     medians.sort()
     return medians[rank - before - 1], medians[last - before - 1], True
 

@@ -71,6 +71,8 @@ def ordered_slopes(y: Values, x: Values, ranks: Counts, found: Values, control: 
             y, x, ranks[i], low, high, up_to_low, up_to_high,
             low_order.copy(), high_order.copy(), control,
         )  # fmt: skip
+        if control[_STOP] != 0:
+            return
         found[i] = put_in_place(known, min(ranks[i] - known_from, known.size - 1))
 
 
@@ -102,6 +104,8 @@ def _narrow(
     left = max(up_to_high - up_to_low, 1)
     sample = np.empty(min(n, left))
     slopes_between(y, x, low_order, high_order, left, sample, shift, control)
+    if control[_STOP] != 0:
+        return low, high, up_to_low, up_to_high
     margin = _BRACKET * math.sqrt(sample.size)
     first = int((rank - up_to_low) / left * sample.size - margin)
     second = int((last - up_to_low) / left * sample.size + margin)
@@ -163,9 +167,11 @@ def _around(
             y, x, rank, rank, low, high, up_to_low, up_to_high, low_order, high_order, shift,
             control,
         )  # fmt: skip
-        if low == before and high == after:
+        if low == before and high == after and control[_STOP] == 0:
             return _tie(y, x, rank, low_order, high_order, control)
-    slopes = np.empty(max(up_to_high - up_to_low, 1))
+    if control[_STOP] != 0:
+        return np.zeros(1), rank, rank
+    slopes = np.empty(up_to_high - up_to_low)
     slopes_between(y, x, low_order, high_order, slopes.size, slopes, 0.0, control)
     return slopes, up_to_low + 1, up_to_high
 
