@@ -16,6 +16,7 @@ _FAMILIES = (
     "reexpression",
     "comparison",
     "resampling",
+    "sensitivity",
     "tables",
 )
 

@@ -1,0 +1,1 @@
+"""Whether a finding survives: rows taken away, other reasonable choices."""
