@@ -150,8 +150,8 @@ FROM (
     GROUP BY route
 )
 ORDER BY ratio""",
-        "Most intervals lie below 1, with enough visits all but one. That of L9 holds 1, and chance "
-        "alone would do as much.",
+        "Most intervals lie below 1, with enough visits all but one. That of L9 holds 1, and "
+        "chance alone would do as much.",
     ),
     Step(
         "Each route with a limit of its own",

@@ -111,9 +111,9 @@ def test_the_readers_effect_is_sure_but_for_one_route(ask: Ask) -> None:
     flat = rows.pop("L9")
     assert number(flat, "lower") < 1.0 < number(flat, "upper")
     assert number(flat, "p_value") > 0.05
-    below = [row for row in rows.values() if number(row, "upper") < 1.0]
-    assert len(below) > len(rows) / 2
-    assert all(number(row, "p_value") < 0.05 for row in below)
+    most = len(rows) / 2
+    assert sum(number(row, "upper") < 1.0 for row in rows.values()) > most
+    assert sum(number(row, "p_value") < 0.05 for row in rows.values()) > most
 
 
 def test_a_tenth_settles_the_trimmed_mean(ask: Ask) -> None:
