@@ -26,6 +26,7 @@ COMMANDS = (
     "changes",
     "undo",
     "verify",
+    "attach",
     "discard",
     "store",
 )

@@ -10,10 +10,11 @@ import click
 
 from midspread.cli.cells import visible
 from midspread.cli.help import HelpfulCommand
-from midspread.cli.numbers import count_text, size_text
+from midspread.cli.numbers import count_text
 from midspread.cli.options import Count, Settings, attach_option, engine_options
 from midspread.cli.screen import Screen, result_console
 from midspread.cli.show_grid import is_grid, show_grid
+from midspread.cli.source_lines import source_lines, sources_named
 from midspread.engine.errors import MidspreadError, UsageError
 
 if TYPE_CHECKING:
@@ -91,7 +92,7 @@ def show(
     elif _is_database(Path(name)):
         _show_database(console, Path(name), settings)
     else:
-        _show_rows(console, name, sources, settings)
+        _show_rows(console, name, sources_named(settings, name, sources), settings)
 
 
 def _is_database(path: Path) -> bool:
@@ -175,12 +176,7 @@ def _show_what_there_is(
 
     lines = [Text("The store", style=HEAD), *store_lines(settings.store), Text()]
     lines += [Text("Grids", style=HEAD), *grid_lines(settings), Text()]
-    lines.append(Text("Sources", style=HEAD))
-    if not sources:
-        lines.append(Text("none; name a database file with --attach NAME=PATH"))
-    for name, path in sources.items():
-        state = size_text(path.stat().st_size) if path.is_file() else "missing"
-        lines.append(Text(f"{visible(name)}  {visible(str(path))}, {state}"))
+    lines += [Text("Sources", style=HEAD), *source_lines(settings, sources)]
     print_lines(console, lines)
 
 

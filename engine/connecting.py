@@ -83,8 +83,49 @@ def checked_sources(sources: Mapping[str, Path]) -> dict[str, Path]:
     return checked
 
 
-def attach(connection: duckdb.DuckDBPyConnection, name: str, path: Path) -> None:
-    """Attach a source for reading only.
+class Attachments:
+    """The databases that a connection has attached, for reading only.
+
+    Parameters
+    ----------
+    connection : duckdb.DuckDBPyConnection
+        A session's.
+    given : mapping of str to Path
+        Those named for this session, attached when the first is needed.
+    """
+
+    def __init__(self, connection: duckdb.DuckDBPyConnection, given: Mapping[str, Path]) -> None:
+        self._connection = connection
+        self._given = given
+        self._are_given_attached = False
+        self._added: dict[str, Path] = {}
+
+    def attach_given(self) -> None:
+        """Attach those named for this session, once."""
+        if not self._are_given_attached:
+            for name, path in self._given.items():
+                attach(self._connection, name, path)
+            self._are_given_attached = True
+
+    def is_given(self, folded: str) -> bool:
+        """Whether this session was given a database of a name."""
+        return folded in (name.casefold() for name in self._given)
+
+    def add(self, name: str, path: Path) -> None:
+        """Attach another, in place of what had its name before."""
+        if self._added.get(name.casefold()) != path:
+            self.drop(name)
+            attach(self._connection, name, path, command=f"query: the source {name}")
+            self._added[name.casefold()] = path
+
+    def drop(self, name: str) -> None:
+        """Let one that was added go."""
+        if self._added.pop(name.casefold(), None) is not None:
+            self._connection.execute(f"DETACH {quoted(name)}")
+
+
+def attach(connection: duckdb.DuckDBPyConnection, name: str, path: Path, command: str = "") -> None:
+    """Attach a source for reading only; `command` is who asks, for messages.
 
     Raises
     ------
@@ -94,7 +135,8 @@ def attach(connection: duckdb.DuckDBPyConnection, name: str, path: Path) -> None
     try:
         connection.execute(f"ATTACH {literal(str(path))} AS {quoted(name)} (READ_ONLY)")
     except duckdb.Error as error:
-        raise MidspreadError(f"--attach {name}: {_why_not_attached(path, str(error))}") from None
+        asking = command or f"--attach {name}"
+        raise MidspreadError(f"{asking}: {_why_not_attached(path, str(error))}") from None
 
 
 def _why_not_attached(path: Path, reason: str) -> str:

@@ -2,7 +2,7 @@
 
 import os
 import time
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Collection, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from functools import partial
 from pathlib import Path
@@ -14,8 +14,10 @@ import duckdb
 
 from midspread.engine.answer import Answer, Progress
 from midspread.engine.caching import AnswerCache, Question, when
-from midspread.engine.connecting import attach, checked_sources, connect
+from midspread.engine.connecting import Attachments, checked_sources, connect
 from midspread.engine.errors import MidspreadError, StoreError, UsageError
+from midspread.engine.grids.reading import qualifiers
+from midspread.engine.grids.sources import Source, trouble
 from midspread.engine.grids.using import GridsInUse
 from midspread.engine.guard import Guard
 from midspread.engine.inputs.canonical import canonical_sql
@@ -85,8 +87,9 @@ class Session:
         self._on_notice = on_notice
         self._on_progress = on_progress
         self._functions = functions()
-        self._sources = checked_sources(sources or {})
+        checked = checked_sources(sources or {})
         self._connection = connect(memory=memory, threads=threads, owner=self)
+        self._attachments = Attachments(self._connection, checked)
         self._runner = Runner(self._connection, self._functions)
         self._table_functions = [
             name for name, function in self._functions.items() if function.kind == "table"
@@ -99,11 +102,10 @@ class Session:
             is_named = store is not None or bool(os.environ.get(STORE_VARIABLE))
             self._cache = AnswerCache(path, is_named, self._functions, self._notice)
             self._grids = GridsInUse(path, self._connection)
-        self._are_sources_attached = False
         self._definitions: list[str] = []
         self._settings: set[str] = set()
         self._pending: list[tuple[str, Statement]] = []
-        self._has_macros = bool(self._sources)
+        self._has_macros = bool(checked)
 
     def query(self, sql: str, *, recompute: bool = False) -> Answer:
         """The answer to the last SELECT of a script.
@@ -145,6 +147,7 @@ class Session:
     def expand(self, sql: str) -> str:
         """The SQL that would be run in place of a script; no query of it is run."""
         statements = self._read(sql)
+        self._bring_grids([*self._definitions, *(statement.text for statement in statements)])
         texts = []
         for statement in statements:
             if not statement.answers:
@@ -182,7 +185,7 @@ class Session:
         for statement in statements[:-1]:
             self._define(sql, statement)
         script = [*self._definitions, last.text]
-        self._attach_sources()
+        self._attachments.attach_given()
         read = tables_read(self._connection, statements, self._table_functions)
         reads = [name for name in self._bring_grids(script) if name.casefold() in read]
         self._settle()
@@ -278,7 +281,7 @@ class Session:
 
     def _answer(self, sql: str, statement: Statement, recompute: bool) -> Answer:
         self._notices = []
-        self._attach_sources()
+        self._attachments.attach_given()
         question = None
         script = [*self._definitions, statement.text]
         self._warn_of_stale(self._bring_grids(script))
@@ -305,16 +308,18 @@ class Session:
         return table
 
     def _bring_grids(self, script: Sequence[str]) -> list[str]:
-        """Make the grids that a script names readable; which they are."""
+        """Make the grids and sources that a script names readable; which the grids are."""
         if self._grids is None:
             return []
         names: set[str] = set()
         for statement in script:
             names |= mentions_of(statement, self._table_functions).names
         try:
-            return self._grids.bring(names)
+            grids = self._grids.bring(names)
         except StoreError:
             return []  # a store that cannot be read turns off the cache with a word of its own
+        self._attach_remembered(script, names)
+        return grids
 
     def _warn_of_stale(self, read: Sequence[str]) -> None:
         if self._grids is not None and read:
@@ -325,15 +330,32 @@ class Session:
     def _stamps(self) -> dict[str, int]:
         return self._grids.stamps if self._grids is not None else {}
 
-    def _attach_sources(self) -> None:
-        if not self._are_sources_attached:
-            for name, path in self._sources.items():
-                attach(self._connection, name, path)
-            self._are_sources_attached = True
+    def _attach_remembered(self, script: Sequence[str], names: Collection[str]) -> None:
+        """Attach the store's sources that a script names, unless --attach gave others."""
+        if self._grids is None or self._grids.sources.keys().isdisjoint(names):
+            return
+        with self.cursor() as connection:
+            heads = qualifiers(connection, script, self._table_functions)
+        for folded, source in self._grids.sources.items():
+            if folded in names and not self._attachments.is_given(folded):
+                self._attach_source(source, self._grids.path.parent, is_read=folded in heads)
+
+    def _attach_source(self, source: Source, folder: Path, *, is_read: bool) -> None:
+        """Attach one; a word that is only spelt like its name is no reason to complain."""
+        why = trouble(source, folder)
+        try:
+            if why:
+                self._attachments.drop(source.name)
+                raise MidspreadError(f"query: the source {source.name} {why}.")
+            self._attachments.add(source.name, source.file(folder))
+            self._has_macros = True
+        except MidspreadError:
+            if is_read:
+                raise
 
     def _settle(self) -> None:
         """Make what has been defined but not yet been needed."""
-        self._attach_sources()
+        self._attachments.attach_given()
         while self._pending:
             sql, statement = self._pending.pop(0)
             try:

@@ -8,7 +8,7 @@ import duckdb
 from midspread.engine.inputs.scanning import mentions_of
 from midspread.engine.parsing import Node, NotParsed, function_name
 from midspread.engine.pivoting import parse_with_pivots
-from midspread.engine.statements import Statement
+from midspread.engine.statements import Kind, Statement, split
 
 _OWN_SCHEMAS: Final = ("main", "temp", "memory")
 _TEXT_TAKERS: Final = ("query", "query_table")
@@ -46,6 +46,35 @@ def tables_read(
     return reader.found
 
 
+def qualifiers(
+    connection: duckdb.DuckDBPyConnection, script: Sequence[str], table_functions: Collection[str]
+) -> set[str]:
+    """The folded first parts of the names of more than one part by which tables are read.
+
+    Parameters
+    ----------
+    connection, table_functions
+        As for `tables_read`.
+    script : sequence of str
+        Definitions and queries, a statement each.
+
+    Examples
+    --------
+    >>> qualifiers(duckdb.connect(), ["SELECT v.stop FROM wh.main.visits AS v"], ())
+    {'wh'}
+    """
+    found: set[str] = set()
+    reader = _Reader(connection, frozenset(table_functions))
+    for text in script:
+        for statement in split(connection, text):
+            if statement.kind is Kind.SETTING:
+                found |= mentions_of(text).names  # USE makes it the one that bare names mean
+            elif statement.body_text:
+                before = "SELECT (" if statement.is_expression else ""
+                reader.read(f"{before}{statement.body_text}{')' if before else ''}", frozenset())
+    return found | reader.qualifiers
+
+
 class _Reader:
     def __init__(
         self, connection: duckdb.DuckDBPyConnection, table_functions: frozenset[str]
@@ -53,13 +82,16 @@ class _Reader:
         self._connection = connection
         self._table_functions = table_functions
         self.found: set[str] = set()
+        self.qualifiers: set[str] = set()
 
     def read(self, text: str, hidden: frozenset[str]) -> None:
         """Note the tables of a query; `hidden` are the names it cannot mean a table by."""
         try:
             tree = parse_with_pivots(self._connection, text)
         except NotParsed:  # rather too many than too few
-            self.found |= mentions_of(text, self._table_functions).names - hidden
+            names = mentions_of(text, self._table_functions).names - hidden
+            self.found |= names
+            self.qualifiers |= names
             return
         self._walk(tree.root, hidden)
 
@@ -86,6 +118,8 @@ class _Reader:
 
     def _note_table(self, node: Node, hidden: frozenset[str]) -> None:
         path = [str(part).casefold() for part in node["qualified_name"]["path"]]
+        if len(path) > 1:
+            self.qualifiers.add(path[0])
         if len(path) == 1 and path[0] not in hidden:
             self.found.add(path[0])
         elif len(path) > 1 and all(part in _OWN_SCHEMAS for part in path[:-1]):
@@ -104,4 +138,5 @@ class _Reader:
                 self.read(text if name == "query" else f"FROM {text}", hidden)
             elif text.casefold() not in hidden:
                 self.found.add(text.strip('"').casefold())
+                self.qualifiers.add(text.partition(".")[0].strip('"').casefold())
             return

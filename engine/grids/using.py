@@ -7,6 +7,7 @@ import duckdb
 
 from midspread.engine.grids import ledger
 from midspread.engine.grids.freshness import State, freshness_of_all
+from midspread.engine.grids.sources import Source, sources
 from midspread.engine.store.quoting import literal, quoted
 from midspread.engine.store.store import Store
 from midspread.udfs import Function
@@ -26,12 +27,18 @@ class GridsInUse:
         Of the store, which may not exist.
     connection : duckdb.DuckDBPyConnection
         The session's.
+
+    Attributes
+    ----------
+    sources : dict
+        The sources that the store remembered when it was last read, by folded name.
     """
 
     def __init__(self, path: Path, connection: duckdb.DuckDBPyConnection) -> None:
         self.path = path
         self._connection = connection
         self._brought: dict[str, int] = {}
+        self.sources: dict[str, Source] = {}
 
     @property
     def stamps(self) -> dict[str, int]:
@@ -56,6 +63,7 @@ class GridsInUse:
         store = Store.open(self.path, create=False)
         with store.reading() as engine:
             known = ledger.stamps(engine)
+            self.sources = sources(engine)
         store.close()
         for folded in [name for name in self._brought if name not in known]:
             self._connection.execute(f"DROP TABLE IF EXISTS temp.main.{quoted(folded)}")

@@ -36,7 +36,7 @@ def examples(help_text: str) -> list[str]:
 
 def test_the_commands_are_those_of_today() -> None:
     listed = "tour query functions show keep enter column refresh history changes undo verify"
-    assert set(COMMANDS) == {*listed.split(), "discard", "store"}
+    assert set(COMMANDS) == {*listed.split(), "attach", "discard", "store"}
 
 
 def test_the_program_lists_its_commands(run: Run) -> None:
