@@ -3,6 +3,7 @@
 from typing import Final
 
 ABOUT: Final = "visits, 40 dwell times of routes L3 and L6 with a layover and two stuck clocks"
+VEHICLES: Final = 8
 
 # route, day_part, boardings, payment, dwell_s
 _ROWS: Final = (
@@ -50,13 +51,17 @@ _ROWS: Final = (
 
 
 def with_sample(query: str) -> str:
-    """A script that answers a query over the sample, a view called visits."""
+    """A script that answers a query over the sample, a view called visits.
+
+    Visits are numbered in order; eight vehicles take them in turn.
+    """
     rows = ", ".join(
-        f"('{route}', '{day_part}', {boardings}, '{payment}', {dwell_s!r}::DOUBLE)"
-        for route, day_part, boardings, payment, dwell_s in _ROWS
+        f"({visit}, 'V{101 + visit % VEHICLES}', '{route}', '{day_part}', {boardings}, "
+        f"'{payment}', {dwell_s!r}::DOUBLE)"
+        for visit, (route, day_part, boardings, payment, dwell_s) in enumerate(_ROWS, start=1)
     )
     return (
         "CREATE TEMP VIEW visits AS "
         f"SELECT * FROM (VALUES {rows}) "
-        f"AS t(route, day_part, boardings, payment, dwell_s);\n{query}"
+        f"AS t(visit, vehicle, route, day_part, boardings, payment, dwell_s);\n{query}"
     )
