@@ -8,6 +8,7 @@ import pytest
 CALLS = {
     "unit_intervals": "unit_intervals({}, 'dwell_s', 'dwell_s', resamples := 99{})",
     "robust_summary": "robust_summary({}, 'dwell_s'{})",
+    "heaping": "heaping({}, 'dwell_s'{})",
     "trim_path": "trim_path({}, 'dwell_s'{})",
     "held_out_errors": "held_out_errors({}, 'dwell_s'{})",
     "power_ladder": "power_ladder({}, 'dwell_s'{})",
@@ -18,6 +19,13 @@ CALLS = {
     "value_profile": "value_profile({}, columns := 'dwell_s'{})",
 }
 EVERY = pytest.mark.parametrize("function", CALLS)
+# Whole rows come back, in no set order.
+ROW_CALLS = {
+    "row_flags": "(SELECT * FROM row_flags({}, 'dwell_s'{}) ORDER BY visit)",
+    "rolling_flags": "(SELECT * FROM rolling_flags({}, 'dwell_s', 'visit'{}) ORDER BY visit)",
+}
+ALL_CALLS = {**CALLS, **ROW_CALLS}
+EVERY_TABLE = pytest.mark.parametrize("function", ALL_CALLS)
 
 
 def answer(connection: duckdb.DuckDBPyConnection, sql: str) -> list[dict[str, Any]]:

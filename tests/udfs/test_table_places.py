@@ -6,10 +6,10 @@ import duckdb
 import pytest
 
 from midspread.udfs import functions
-from tests.udfs.table_calls import CALLS, EVERY, answer, complaint
+from tests.udfs.table_calls import ALL_CALLS, CALLS, EVERY, EVERY_TABLE, answer, complaint
 
 
-@EVERY
+@EVERY_TABLE
 @pytest.mark.parametrize(
     "table",
     [
@@ -41,29 +41,29 @@ from tests.udfs.table_calls import CALLS, EVERY, answer, complaint
 def test_every_kind_of_table_gives_the_same(
     larkmoor: duckdb.DuckDBPyConnection, function: str, table: str
 ) -> None:
-    expected = answer(larkmoor, "FROM " + CALLS[function].format("'visits'", ", by := 'route'"))
+    expected = answer(larkmoor, "FROM " + ALL_CALLS[function].format("'visits'", ", by := 'route'"))
     quoted = "'" + table.replace("'", "''") + "'"
-    given = answer(larkmoor, "FROM " + CALLS[function].format(quoted, ", by := 'route'"))
+    given = answer(larkmoor, "FROM " + ALL_CALLS[function].format(quoted, ", by := 'route'"))
     assert given == expected
     assert len(expected) >= 3
 
 
-@EVERY
+@EVERY_TABLE
 def test_full_paths_and_globs(larkmoor: duckdb.DuckDBPyConnection, function: str) -> None:
     ((folder,),) = larkmoor.execute("SELECT path FROM folder").fetchall()
-    expected = answer(larkmoor, "FROM " + CALLS[function].format("'visits'", ""))
+    expected = answer(larkmoor, "FROM " + ALL_CALLS[function].format("'visits'", ""))
     for path in (Path(folder) / "all.parquet", Path(folder) / "part-?.parquet"):
-        assert answer(larkmoor, "FROM " + CALLS[function].format(f"'{path}'", "")) == expected
+        assert answer(larkmoor, "FROM " + ALL_CALLS[function].format(f"'{path}'", "")) == expected
 
 
-@EVERY
+@EVERY_TABLE
 def test_a_cte_is_seen_and_goes_before_a_table(
     larkmoor: duckdb.DuckDBPyConnection, function: str
 ) -> None:
     for name in ("few", "visits"):
-        call = CALLS[function].format(f"'{name}'", "")
+        call = ALL_CALLS[function].format(f"'{name}'", "")
         rows = answer(larkmoor, f"WITH {name} AS (FROM viewed LIMIT 6) SELECT * FROM {call}")
-        expected = CALLS[function].format("'(FROM viewed LIMIT 6)'", "")
+        expected = ALL_CALLS[function].format("'(FROM viewed LIMIT 6)'", "")
         assert rows == answer(larkmoor, f"FROM {expected}")
 
 

@@ -3,10 +3,10 @@
 import duckdb
 import pytest
 
-from tests.udfs.table_calls import CALLS, EVERY, complaint
+from tests.udfs.table_calls import ALL_CALLS, EVERY_TABLE, ROW_CALLS, complaint
 
 
-@EVERY
+@EVERY_TABLE
 @pytest.mark.parametrize(
     ("arguments", "sentence"),
     [
@@ -23,7 +23,7 @@ def test_wrong_arguments(
     larkmoor: duckdb.DuckDBPyConnection, function: str, arguments: str, sentence: str
 ) -> None:
     table, _, more = arguments.partition(", ")
-    call = CALLS[function].format(table, f", {more}" if more else "")
+    call = ALL_CALLS[function].format(table, f", {more}" if more else "")
     said = complaint(larkmoor, f"FROM {call}")
     assert said.startswith(f"{function}: {sentence}")
     assert said.endswith(".")
@@ -68,7 +68,7 @@ def test_wrong_arguments_of_one_function(
     assert said.endswith(".")
 
 
-@pytest.mark.parametrize("function", ["robust_summary", "trim_path"])
+@pytest.mark.parametrize("function", ["robust_summary", "trim_path", "heaping", *ROW_CALLS])
 @pytest.mark.parametrize(
     ("value", "kind"),
     [
@@ -87,13 +87,14 @@ def test_wrong_arguments_of_one_function(
 def test_columns_that_are_no_numbers(
     larkmoor: duckdb.DuckDBPyConnection, function: str, value: str, kind: str
 ) -> None:
-    larkmoor.execute(f"CREATE OR REPLACE TEMP TABLE odd AS SELECT {value} AS payment")
-    said = complaint(larkmoor, f"FROM {function}('odd', 'payment')")
+    larkmoor.execute(f"CREATE OR REPLACE TEMP TABLE odd AS SELECT {value} AS payment, 1 AS visit")
+    more = ", 'visit'" if function == "rolling_flags" else ""
+    said = complaint(larkmoor, f"FROM {function}('odd', 'payment'{more})")
     assert said.startswith(f"{function}: payment must be a number")
     assert f", not {kind};" in said
 
 
-@EVERY
+@EVERY_TABLE
 @pytest.mark.parametrize(
     ("arguments", "named"),
     [
@@ -101,18 +102,18 @@ def test_columns_that_are_no_numbers(
         ("'nowhere.parquet'", "nowhere.parquet"),
         ("'nowhere-*.parquet'", "nowhere-*.parquet"),
         ("'visits', by := 'depot'", '"depot"'),
-        ("'(SELECT true AS ramp_used)'", '"dwell_s"'),
+        ("'(SELECT true AS ramp_used, 1 AS visit)'", '"dwell_s"'),
     ],
 )
 def test_what_is_missing_is_named(
     larkmoor: duckdb.DuckDBPyConnection, function: str, arguments: str, named: str
 ) -> None:
     table, _, more = arguments.partition(", ")
-    call = CALLS[function].format(table, f", {more}" if more else "")
+    call = ALL_CALLS[function].format(table, f", {more}" if more else "")
     assert named in complaint(larkmoor, f"FROM {call}")
 
 
-@EVERY
+@EVERY_TABLE
 @pytest.mark.parametrize(
     "table",
     [
@@ -126,5 +127,5 @@ def test_what_is_missing_is_named(
 def test_a_table_cannot_smuggle_in_a_statement(
     larkmoor: duckdb.DuckDBPyConnection, function: str, table: str
 ) -> None:
-    complaint(larkmoor, "FROM " + CALLS[function].format(f"'{table}'", ""))
+    complaint(larkmoor, "FROM " + ALL_CALLS[function].format(f"'{table}'", ""))
     assert larkmoor.execute("SELECT count(*) FROM visits").fetchall() == [(200,)]

@@ -23,17 +23,6 @@ _SQL_TYPES: Final = {"number": " DOUBLE", "text": " VARCHAR", "flag": " BOOLEAN"
 
 def shared_macros() -> list[str]:
     """What all functions rest on: the macros that collect values and give parameters a type."""
-    number_macros = [
-        f"({'x ' + kind}, function_name, column_name) AS error(function_name || ': ' || "
-        f"column_name || ' must be {NUMBER_TYPES}, not {kind}; turn it into a number first, "
-        f"for example with CAST(' || column_name || ' AS DOUBLE).')"
-        for kind in OTHER_TYPES
-    ]
-    number_macros.append(
-        "(x, function_name, column_name) AS error(function_name || ': ' || column_name || "
-        f"' must be {NUMBER_TYPES}, not ' || typeof(any_value(x)) || "
-        "'; take the numbers out of it first, in a query in parentheses.')"
-    )
     return [
         "CREATE OR REPLACE TEMP MACRO _values(x DOUBLE) AS list(x) FILTER (x IS NOT NULL)",
         "CREATE OR REPLACE TEMP MACRO _values_of_pairs(x DOUBLE, w DOUBLE) AS "
@@ -42,8 +31,30 @@ def shared_macros() -> list[str]:
         "CREATE OR REPLACE TEMP MACRO _text(v VARCHAR) AS v",
         "CREATE OR REPLACE TEMP MACRO _flag(v BOOLEAN) AS v",
         "CREATE OR REPLACE TEMP MACRO _numbers(x DOUBLE, function_name, column_name) AS "
-        f"list(x) FILTER (x IS NOT NULL), {', '.join(number_macros)}",
+        f"list(x) FILTER (x IS NOT NULL), {', '.join(_other_types('any_value(x)'))}",
+        # One value rather than a list, NULL included.
+        "CREATE OR REPLACE TEMP MACRO _number_of(x DOUBLE, function_name, column_name) AS "
+        f"x, {', '.join(_other_types('x'))}",
+        # A FLOAT as the shortest decimal that reads back to it: 0.1 and not 0.10000000149.
+        "CREATE OR REPLACE TEMP MACRO _as_written(x FLOAT) AS CAST(CAST(x AS VARCHAR) AS DOUBLE), "
+        "(x DOUBLE) AS x, (x) AS x",
     ]
+
+
+def _other_types(sample: str) -> list[str]:
+    """The overloads that refuse a column which holds no numbers."""
+    refusals = [
+        f"({'x ' + kind}, function_name, column_name) AS error(function_name || ': ' || "
+        f"column_name || ' must be {NUMBER_TYPES}, not {kind}; turn it into a number first, "
+        f"for example with CAST(' || column_name || ' AS DOUBLE).')"
+        for kind in OTHER_TYPES
+    ]
+    refusals.append(
+        "(x, function_name, column_name) AS error(function_name || ': ' || column_name || "
+        f"' must be {NUMBER_TYPES}, not ' || typeof({sample}) || "
+        "'; take the numbers out of it first, in a query in parentheses.')"
+    )
+    return refusals
 
 
 def aggregate_macro(function: Function) -> str:

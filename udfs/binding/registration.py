@@ -22,6 +22,7 @@ from midspread.udfs.binding.profiles import COUNTS_TYPE, PROFILE_MACROS, Profile
 from midspread.udfs.catalogue import functions
 from midspread.udfs.declaring import Function, helpers
 from midspread.udfs.grouped import Control
+from midspread.udfs.outlying import figures as _outlying  # noqa: F401 - declares helpers
 from midspread.udfs.tables.robust_summary import DEEP_FIGURES, SUMMARY_FIELDS
 
 

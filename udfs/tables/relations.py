@@ -4,6 +4,8 @@ import re
 from collections.abc import Iterable, Sequence
 from typing import Final
 
+import numpy as np
+
 from midspread.udfs.declaring import Parameter, ParameterError
 
 BY: Final = Parameter("by", "columns whose values split the rows: a list or one name", "[]")
@@ -108,6 +110,16 @@ def flag(function: str, argument: str, given: object) -> bool:
     return given
 
 
+def number(function: str, parameter: Parameter, given: object) -> float | None:
+    """One number within a parameter's range; None where an optional one is left out."""
+    if given is None and parameter.is_optional:
+        return None
+    if isinstance(given, bool) or not isinstance(given, int | float):
+        raise parameter.refused(function, "NULL" if given is None else repr(given))
+    parameter.check(function, np.array([float(given)]), np.array([False]))
+    return float(given)
+
+
 def number_list(
     function: str, argument: str, given: object, low: float, high: float
 ) -> list[float]:
@@ -125,3 +137,16 @@ def number_list(
 def joined(parts: Sequence[str]) -> str:
     """Parts as the beginning of a list that goes on: each followed by a comma."""
     return "".join(f"{part}, " for part in parts)
+
+
+def own_columns_differ(function: str, source: str, added: Iterable[str]) -> str:
+    """A condition for functions that return whole rows: none of their columns has an added name."""
+    listed = ", ".join(quoted_text(name) for name in added)
+    start = quoted_text(f"{function}: the table has a column ")
+    end = quoted_text(
+        ", which is also a column of the result; rename it first, for example tbl := "
+        "'(SELECT * RENAME (… AS …) FROM …)'."
+    )
+    return f"""(SELECT CASE WHEN count(*) > 0
+        THEN error({start} || min(column_name) || {end}) ELSE true END
+    FROM (DESCRIBE SELECT * FROM {source}) WHERE lower(column_name) IN ({listed}))"""

@@ -1,0 +1,1 @@
+"""What names outlying rows and the look of values: limits, running windows, rounding grids."""
