@@ -27,6 +27,7 @@ COMMANDS = (
     "undo",
     "verify",
     "attach",
+    "push",
     "discard",
     "store",
 )

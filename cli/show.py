@@ -14,7 +14,7 @@ from midspread.cli.numbers import count_text
 from midspread.cli.options import Count, Settings, attach_option, engine_options
 from midspread.cli.screen import Screen, result_console
 from midspread.cli.show_grid import is_grid, show_grid
-from midspread.cli.source_lines import source_lines, sources_named
+from midspread.cli.source_lines import push_lines, source_lines, sources_named
 from midspread.engine.errors import MidspreadError, UsageError
 
 if TYPE_CHECKING:
@@ -177,6 +177,7 @@ def _show_what_there_is(
     lines = [Text("The store", style=HEAD), *store_lines(settings.store), Text()]
     lines += [Text("Grids", style=HEAD), *grid_lines(settings), Text()]
     lines += [Text("Sources", style=HEAD), *source_lines(settings, sources)]
+    lines += push_lines(settings)
     print_lines(console, lines)
 
 

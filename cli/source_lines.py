@@ -29,6 +29,23 @@ def source_lines(settings: Settings, given: Mapping[str, Path]) -> "list[Text]":
     return lines or [Text("none; midspread attach NAME=PATH remembers a database")]
 
 
+def push_lines(settings: Settings) -> "list[Text]":
+    """A line for each push that was begun and never confirmed."""
+    from rich.text import Text
+
+    from midspread.engine.pushing.intents import unconfirmed_in
+    from midspread.engine.store.store import Store
+
+    path = settings.store_path()
+    if not path.exists():
+        return []
+    store = Store.open(path, create=False)
+    try:
+        return [Text(visible(sentence), style="bold") for sentence in unconfirmed_in(store)]
+    finally:
+        store.close()
+
+
 def _line(source: "Source", folder: Path) -> str:
     from midspread.engine.grids.sources import TITLES, SourceKind, gone
 

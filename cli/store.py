@@ -96,6 +96,7 @@ def _when(moment: datetime) -> str:
 
 def _check(opened: "Store") -> None:
     from midspread.engine.errors import StoreDamaged
+    from midspread.engine.pushing.intents import unconfirmed_in
     from midspread.engine.store.answers import Answers
     from midspread.engine.store.housekeeping import check
 
@@ -107,6 +108,8 @@ def _check(opened: "Store") -> None:
             f"store: {count_text(len(faults), 'fault')} in {opened.path}; "
             "midspread store clear-answers drops what is kept, and queries compute it anew."
         )
+    for sentence in unconfirmed_in(opened):
+        click.echo(visible(sentence))
     answers = count_text(Answers(opened).count(), "kept answer")
     click.echo(f"{visible(str(opened.path))} is sound: {answers} read.")
 

@@ -24,6 +24,7 @@ PREPARED = (
     'midspread column route_dwell "remark TEXT"',
     'midspread keep route_dwell --replace "SELECT route, trimmed_mean(dwell_s, 0.2) AS dwell_s, '
     "trimmed_mean_se(dwell_s, 0.2) AS se FROM 'dwell/*.parquet' GROUP BY route\"",
+    "midspread attach wh=warehouse.duckdb",
 )
 
 
@@ -36,7 +37,7 @@ def examples(help_text: str) -> list[str]:
 
 def test_the_commands_are_those_of_today() -> None:
     listed = "tour query functions show keep enter column refresh history changes undo verify"
-    assert set(COMMANDS) == {*listed.split(), "attach", "discard", "store"}
+    assert set(COMMANDS) == {*listed.split(), "attach", "push", "discard", "store"}
 
 
 def test_the_program_lists_its_commands(run: Run) -> None:
