@@ -19,6 +19,7 @@ import association
 import comparison
 import growth
 import memory
+import outlying
 import permutation
 import processes
 import reexpression
@@ -31,6 +32,7 @@ SECTIONS: dict[str, Callable[[int], list[Figure]]] = {
     "growth": growth.measure,
     "association": association.measure,
     "memory": memory.measure,
+    "outlying": outlying.measure,
     "permutation": permutation.measure,
     "processes": processes.measure,
     "reexpression": reexpression.measure,
