@@ -15,6 +15,7 @@ CALLS = {
     "group_differences": "group_differences({}, 'dwell_s', 'ramp_used'{})",
     "straightening_pairs": "straightening_pairs({}, 'dwell_s', 'dwell_s'{})",
     "spread_by_level": "spread_by_level({}, 'dwell_s', 'ramp_used'{})",
+    "choices_table": "choices_table({}, 'dwell_s', 'ramp_used', shuffles := 9{})",
     "rows_to_reverse": "rows_to_reverse({}, 'dwell_s', 'ramp_used'{})",
     "value_profile": "value_profile({}, columns := 'dwell_s'{})",
 }

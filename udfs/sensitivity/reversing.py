@@ -12,6 +12,7 @@ from midspread.udfs.arithmetic.running import add
 from midspread.udfs.compiling import compile_driver
 from midspread.udfs.declaring import Values, compiled
 from midspread.udfs.drivers import DONE, STOP, Indices
+from midspread.udfs.sensitivity.pooled import largest_finite
 
 WIDTH: Final = 10
 """Figures of a group, at the places below."""
@@ -72,7 +73,9 @@ def fewest_to_reverse(
         out[STATE] = HAD_NAN
         return
     unit = 1.0
-    if max(_largest(baseline), _largest(other)) > _HUGE:  # so that no sum leaves the range
+    if (
+        max(largest_finite(baseline), largest_finite(other)) > _HUGE
+    ):  # so that no sum leaves the range
         unit = _SMALL_UNIT
     of_baseline, size_of_baseline = _whole(baseline, share, unit)
     of_other, size_of_other = _whole(other, share, unit)
@@ -247,17 +250,3 @@ def _sums_from_the_middle(
         v = 0.0 if math.isinf(x[i]) else x[i] * unit
         sums[i], lost[i] = add(sums[i + 1], lost[i + 1], -v)
         absolute[i] = absolute[i + 1] - abs(v)
-
-
-@compiled
-def _largest(x: Values) -> float:
-    """The largest finite absolute value of sorted values."""
-    largest = 0.0
-    for i in range(x.size):
-        if not math.isinf(x[i]):
-            largest = max(largest, abs(x[i]))
-            break
-    for i in range(x.size - 1, -1, -1):
-        if not math.isinf(x[i]):
-            return max(largest, abs(x[i]))
-    return largest
