@@ -1,6 +1,7 @@
 """``midspread tour``: builds the demo database and walks the job on it."""
 
 import contextlib
+import json
 import shlex
 import time
 from dataclasses import replace
@@ -9,6 +10,7 @@ from typing import TYPE_CHECKING
 
 import click
 
+from midspread.cli import tour_grids
 from midspread.cli.help import HelpfulCommand
 from midspread.cli.numbers import count_text
 from midspread.cli.options import Count, Settings, engine_options
@@ -22,6 +24,7 @@ if TYPE_CHECKING:
     from midspread.demo_db import Demo
     from midspread.engine.session import Session
 
+_COUNT = len(STEPS) + len(tour_grids.CHAPTERS)
 DEFAULT_FOLDER = Path("larkmoor")
 DEFAULT_VISITS = 2_000_000
 STORE_NAME = "midspread.duckdb"
@@ -82,6 +85,7 @@ def tour(folder: Path, visits: int, settings: Settings) -> None:
         ):
             for number, step in enumerate(STEPS, start=1):
                 _take(console, screen, session, number, step)
+    _keep_results(console, demo.folder.absolute(), store)
     _conclude(console, folder)
 
 
@@ -106,7 +110,7 @@ def _take(console: "Console", screen: Screen, session: "Session", number: int, s
     from midspread.cli.tables import HEAD, INDENT, print_lines, print_table
 
     console.print()
-    print_lines(console, [Text(f"{number} of {len(STEPS)}  {step.title}", style=HEAD)])
+    print_lines(console, [Text(f"{number} of {_COUNT}  {step.title}", style=HEAD)])
     _paragraph(console, step.words)
     console.print()
     margin = " " * INDENT
@@ -121,6 +125,29 @@ def _take(console: "Console", screen: Screen, session: "Session", number: int, s
     _paragraph(console, step.lesson)
 
 
+def _keep_results(console: "Console", folder: Path, store: Path) -> None:
+    """Show what grids are for: the commands as one would type them, and what they print."""
+    from rich.text import Text
+
+    from midspread.cli.tables import HEAD, INDENT, print_lines
+    from midspread.engine.grids.records import record_of
+
+    with tour_grids.prepared(folder, store):
+        for number, chapter in enumerate(tour_grids.CHAPTERS, start=len(STEPS) + 1):
+            console.print()
+            print_lines(console, [Text(f"{number} of {_COUNT}  {chapter.title}", style=HEAD)])
+            _paragraph(console, chapter.words)
+            if chapter.arrives:
+                tour_grids.next_month(folder)
+            for line in chapter.commands:
+                console.print()
+                print_lines(console, [Text(f"{' ' * INDENT}$ {line}", style="green")])
+                tour_grids.run_line(line)
+            _paragraph(console, chapter.lesson)
+        record = record_of(store, "route_dwell")
+        Path(tour_grids.RECORD).write_text(json.dumps(record, indent=2), encoding="utf-8")
+
+
 def _conclude(console: "Console", folder: Path) -> None:
     from rich.text import Text
 
@@ -133,7 +160,7 @@ def _conclude(console: "Console", folder: Path) -> None:
             Text("Where things are", style=HEAD),
             Text(f"{folder / 'dwell'}  the visits, a Parquet file a month"),
             Text(f"{folder / 'warehouse.duckdb'}  routes, stops and vehicles"),
-            Text(f"{folder / STORE_NAME}  the kept answers"),
+            Text(f"{folder / STORE_NAME}  the grids, and the kept answers"),
             Text(),
             Text("What to try next", style=HEAD),
             Text(f"cd {shlex.quote(str(folder))}"),

@@ -8,6 +8,7 @@ from statistics import median
 import pytest
 from click.testing import Result
 
+from midspread.cli.tour_grids import CHAPTERS, RECORD
 from midspread.cli.tour_steps import NEXT, STEPS, WAREHOUSE
 from midspread.engine.session import Session
 
@@ -40,19 +41,32 @@ def test_a_whole_tour(run: Run, tmp_path: Path, monkeypatch: pytest.MonkeyPatch)
     shown = answered.stdout
     assert "5000 stop visits" in shown
     assert "\x1b" not in shown
+    count = len(STEPS) + len(CHAPTERS)
+    for place, chapter in enumerate(CHAPTERS, start=len(STEPS) + 1):
+        assert f"{place} of {count}  {chapter.title}" in shown
+        assert " ".join(chapter.lesson.split()) in " ".join(shown.split())
     for place, step in enumerate(STEPS, start=1):
-        assert f"{place} of {len(STEPS)}  {step.title}" in shown
+        assert f"{place} of {count}  {step.title}" in shown
         for line in step.sql.splitlines():
             assert f"    {line}\n" in shown
         assert " ".join(step.lesson.split()) in " ".join(shown.split())
-    assert len(re.findall(r"\d+ rows?, ", shown)) == len(STEPS)
+    asked, _, kept = shown.partition(CHAPTERS[0].title)
+    assert len(re.findall(r"\d+ rows?, ", asked)) == len(STEPS)
+    assert "route_dwell: 12 rows, version 1" in kept
+    assert "stale: months/2031-07.parquet is new" in kept
+    assert "route_dwell: version 2, 12 rows" in kept
+    assert "layovers booked as dwell" in kept.partition("midspread push")[2]
     assert "rows, answered from the store, " in shown.partition("Asked again")[2]
     for line in ("cd town", *NEXT):
         assert f"  {line}\n" in shown
     assert sorted(path.name for path in tmp_path.iterdir()) == ["town"]
-    assert {"dwell", "warehouse.duckdb", "midspread.duckdb"} <= {
+    assert {"dwell", "months", "route_dwell.json", "warehouse.duckdb", "midspread.duckdb"} <= {
         path.name for path in (tmp_path / "town").iterdir()
     }
+    monkeypatch.chdir(tmp_path / "town")
+    verified = run("verify", RECORD)
+    assert verified.stdout == "route_dwell: agrees to the last digit\n", verified.stderr
+    monkeypatch.chdir(tmp_path)
     again = run("tour", "--to", "town", "--visits", "5000")
     assert again.exit_code == 0
     assert "Found as it was" in again.stdout
