@@ -28,9 +28,9 @@ ACTIONS = ("check", "pack", "clear-answers")
 def store(action: str | None, store: Path | None) -> None:
     """Where the store of kept answers is, and what it holds.
 
-    check reads all of it and says what is wrong; pack gives back the room of answers dropped since;
-    clear-answers drops every kept answer. The environment variable MIDSPREAD_STORE names a store,
-    MIDSPREAD_ANSWERS_LIMIT the room its answers may take.
+    check reads all of it and says what is wrong; pack gives back the room of what was dropped, and
+    lets go of what undo could bring back; clear-answers drops every kept answer. The environment
+    variable MIDSPREAD_STORE names a store, MIDSPREAD_ANSWERS_LIMIT the room its answers may take.
     """
     if action is None:
         from midspread.cli.screen import result_console
@@ -96,6 +96,7 @@ def _when(moment: datetime) -> str:
 
 def _check(opened: "Store") -> None:
     from midspread.engine.errors import StoreDamaged
+    from midspread.engine.grids import ledger
     from midspread.engine.pushing.intents import unconfirmed_in
     from midspread.engine.store.answers import Answers
     from midspread.engine.store.housekeeping import check
@@ -105,13 +106,15 @@ def _check(opened: "Store") -> None:
         click.echo(visible(fault))
     if faults:
         raise StoreDamaged(
-            f"store: {count_text(len(faults), 'fault')} in {opened.path}; "
-            "midspread store clear-answers drops what is kept, and queries compute it anew."
+            f"store: {count_text(len(faults), 'fault')} in {opened.path}; midspread "
+            "store clear-answers drops kept answers, keep --replace computes a grid anew."
         )
     for sentence in unconfirmed_in(opened):
         click.echo(visible(sentence))
     answers = count_text(Answers(opened).count(), "kept answer")
-    click.echo(f"{visible(str(opened.path))} is sound: {answers} read.")
+    with opened.reading() as engine:
+        grids = count_text(len(ledger.grids(engine)), "grid")
+    click.echo(f"{visible(str(opened.path))} is sound: {grids} and {answers} read.")
 
 
 def _pack(opened: "Store") -> None:

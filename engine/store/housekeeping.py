@@ -10,6 +10,7 @@ from pathlib import Path
 import duckdb
 
 from midspread.engine.errors import StoreError
+from midspread.engine.grids.upkeep import faults_of_grids, let_go
 from midspread.engine.store.answers import EPOCH, Answers
 from midspread.engine.store.layout import ALIAS, STORAGE_VERSION, shelf_table
 from midspread.engine.store.quoting import literal, quoted
@@ -126,13 +127,15 @@ def check(store: Store) -> list[str]:
             ).fetchall()[0][0]
             if strays:
                 faults.append(f"Shelf {shelf} holds {strays} answers that are not listed.")
+        faults += faults_of_grids(engine)
     return faults
 
 
 def pack(store: Store) -> int:
     """Write a store anew without the room it no longer needs.
 
-    The new file takes the old one's place only when it is complete.
+    What was discarded or could be undone is let go of. The new file takes the old one's place only
+    when it is complete.
 
     Parameters
     ----------
@@ -146,6 +149,8 @@ def pack(store: Store) -> int:
     """
     fresh = store.path.with_name(f".{store.path.name}.{secrets.token_hex(6)}.new")
     before = _file_bytes(store.path)
+    with store.writing() as engine:
+        let_go(engine)
     with store.exclusively() as engine:
         try:
             _copy(engine, store.path, fresh)

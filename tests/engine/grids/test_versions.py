@@ -16,6 +16,7 @@ from midspread.engine.grids.refreshing import look, refresh
 from midspread.engine.grids.resting import tree_above, tree_below
 from midspread.engine.grids.restoring import undo
 from midspread.engine.session import Session
+from midspread.engine.store.housekeeping import check, pack
 from midspread.engine.store.store import Store
 from tests.engine.grids.conftest import Keep, write_month
 from tests.engine.grids.test_keeping import BY_ROUTE, rows, states
@@ -112,3 +113,20 @@ def test_discard_is_refused_while_others_rest_on_it(kept: Keep, store: Path) -> 
     opened.close()
     assert rows("SELECT * FROM by_route ORDER BY ALL") == before
     assert sorted(states(store)) == ["by_route", "most"]
+
+
+def test_check_finds_what_was_tampered_with_and_pack_lets_go(kept: Keep, store: Path) -> None:
+    kept("by_route", BY_ROUTE)
+    kept("most", "SELECT max(total) AS most FROM by_route")
+    discard(store, "most")
+    opened = Store.open(store)
+    assert check(opened) == []
+    pack(opened)
+    assert check(opened) == []
+    with opened.writing() as engine, pytest.raises(MidspreadError, match="no change"):
+        undo(engine)
+    with opened.writing() as engine:
+        engine.execute("DELETE FROM store.main.by_route WHERE route = 'R1'")
+    faults = check(opened)
+    opened.close()
+    assert faults == ["Grid by_route has 2 rows where 3 were noted."]
