@@ -92,7 +92,7 @@ CHAPTERS: Final = (
             "midspread attach wh=warehouse.duckdb",
             "midspread push route_dwell wh.main.route_dwell --mode replace",
             'midspread query "SELECT name, dwell_s, remark FROM wh.routes '
-            'JOIN wh.route_dwell USING (route) ORDER BY dwell_s DESC LIMIT 3"',
+            'JOIN wh.route_dwell USING (route) ORDER BY dwell_s LIMIT 3"',
         ),
         f"The record is in {RECORD} too; midspread verify {RECORD} computes it all again.",
     ),
