@@ -25,27 +25,32 @@ def measure(rows: int) -> list[Figure]:
         with duckdb.connect(path) as connection:
             fill(connection, rows)
         for words, key in GROUPS.items():
-            added = {name: _added(path, sql.format(key=key)) for name, sql in QUERIES.items()}
+            added = {name: added(path, sql.format(key=key)) for name, sql in QUERIES.items()}
             for name in ("trimmed_mean", "robust_summary"):
                 above = (added[name] - added["median"]) / column
                 figures.append(Figure(f"{name} above median(x), {words}", above, "× column", "≤ 3"))
     return figures
 
 
-def _added(path: Path, sql: str) -> float:
+def added(path: Path, sql: str, *warm: str) -> float:
     """MiB by which the query raises the peak of a fresh process, kernels loaded beforehand."""
     answer = subprocess.run(
-        [sys.executable, __file__, str(path), sql], check=True, capture_output=True, text=True
+        [sys.executable, __file__, str(path), sql, *warm],
+        check=True,
+        capture_output=True,
+        text=True,
     )
     return float(answer.stdout)
 
 
-def _child(path: str, sql: str) -> None:
+def _child(path: str, sql: str, *warm: str) -> None:
     from midspread.engine import Session
 
     with Session(use_store=False, threads=2, sources={"bench": Path(path)}) as session:
         session.query("SELECT trimmed_mean(x, 0.1) FROM (SELECT x FROM bench.t LIMIT 9)")
         session.query("FROM robust_summary('(SELECT x FROM bench.t LIMIT 9)', 'x')")
+        for other in warm:
+            session.query(other)
         before = _peak()
         session.query(sql)
         print(_peak() - before)

@@ -23,6 +23,7 @@ import outlying
 import permutation
 import processes
 import reexpression
+import resampling
 from measuring import Figure, print_figures
 
 SECTIONS: dict[str, Callable[[int], list[Figure]]] = {
@@ -36,6 +37,7 @@ SECTIONS: dict[str, Callable[[int], list[Figure]]] = {
     "permutation": permutation.measure,
     "processes": processes.measure,
     "reexpression": reexpression.measure,
+    "resampling": resampling.measure,
 }
 
 

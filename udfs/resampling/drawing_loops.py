@@ -18,6 +18,7 @@ from midspread.udfs.location.trimming import cut_from_each_tail
 from midspread.udfs.resampling.randomness import stream
 from midspread.udfs.resampling.resamples import (
     BLOCK,
+    SPARE,
     clear,
     count_draws,
     resample_into,
@@ -36,7 +37,7 @@ PAIRS_SIGNATURE: Final = f"void(float64[::1], {SIGNATURE.removeprefix('void(')}"
 RANKS_SIGNATURE: Final = SIGNATURE.removesuffix(")") + ", int64[::1], int64[::1])"
 MIDDLES_SIGNATURE: Final = SIGNATURE.removesuffix(")") + ", boolean, float64[::1], float64[:, ::1])"
 
-_COUNTED: Final = 1000
+_COUNTED: Final = 500
 """Below so many values all draws are counted: zones do not pay."""
 _REACH: Final = 5.0
 """Half width of a window, in standard deviations of the place of the cut."""
@@ -67,12 +68,13 @@ def of_resamples(
         r = rows[place]
         n = lengths[r]
         x = values[starts[r] : starts[r] + n]
-        y = np.empty(n)
+        room = np.empty(n + SPARE)
+        y = room[:n]
         finished = (first * n) % steps
         for j in range(first, stop):
             if control[STOP] != 0:
                 return
-            resample_into(stream(keys[r], j), counts, x, y)
+            resample_into(stream(keys[r], j), counts, x, room)
             draws[r, j] = statistic(y, parameters)
             finished += n
             if finished >= steps:
@@ -99,7 +101,7 @@ def of_resampled_pairs(
     for place in range(rows.size):
         r = rows[place]
         n = lengths[r]
-        drawn = np.empty(n, np.int64)
+        drawn = np.empty(n + SPARE, np.int64)
         y = np.empty(n)
         x = np.empty(n)
         finished = (first * n) % steps
@@ -298,16 +300,22 @@ def _kept_draws(
     before is how many draws lie below v[0]; lowest and highest are places in v, right only when
     the draw with that number is in v.
     """
+    size = v.size
+    under = 0
+    while under < size and before + counts[under] <= first:
+        before += counts[under]
+        under += 1
     total = squares = 0.0
-    under = over = 0
-    reached = min(max(before, first), stop)
-    for i in range(v.size):
-        before += counts[i]
-        now = min(max(before, first), stop)
-        share = v[i] * (now - reached)
+    over = under
+    reached = max(before, first)
+    while over < size:
+        before += counts[over]
+        if before >= stop:
+            share = v[over] * (stop - reached)
+            return total + share, squares + share * v[over], under, over
+        share = v[over] * (before - reached)
         total += share
-        squares += share * v[i]
-        reached = now
-        under += before <= first
-        over += before < stop
+        squares += share * v[over]
+        reached = before
+        over += 1
     return total, squares, under, over

@@ -19,6 +19,8 @@ Counts = npt.NDArray[np.int32]
 
 BLOCK: Final = 4096
 """Values in a block; a power of 2, so that bits of a word are numbers within it."""
+SPARE: Final = 3
+"""Room that a written resample needs behind its end."""
 _BITS: Final = 12
 _MASK: Final = np.uint64(BLOCK - 1)
 _LANE1: Final = np.uint64(_BITS)
@@ -66,7 +68,11 @@ def count_draws(state: np.uint64, counts: Counts, draws: int) -> np.uint64:
 
 @compiled
 def resample_into(state: np.uint64, counts: Counts, x: Values, y: Values) -> np.uint64:
-    """Write a resample of sorted x into y, sorted; counts is scratch for a block."""
+    """Write a resample of sorted x into y, sorted; counts is scratch for a block.
+
+    y holds SPARE more than x: a value is written three times and then overwritten, as guessing
+    how often it was drawn costs more.
+    """
     n = x.size
     left = n
     at = 0
@@ -81,17 +87,22 @@ def resample_into(state: np.uint64, counts: Counts, x: Values, y: Values) -> np.
         clear(block)
         state = count_draws(state, block, own)
         for i in range(stop - start):
-            for _ in range(block[i]):
-                y[at] = x[start + i]
-                at += 1
+            value = x[start + i]
+            y[at] = value
+            y[at + 1] = value
+            y[at + 2] = value
+            end = at + block[i]
+            for place in range(at + SPARE, end):
+                y[place] = value
+            at = end
         start = stop
     return state
 
 
 @compiled
 def resample_rows(state: np.uint64, counts: Counts, rows: npt.NDArray[np.int64]) -> np.uint64:
-    """Write the row numbers of a resample, ascending; counts is scratch for a block."""
-    n = rows.size
+    """Write the row numbers of a resample, ascending, as `resample_into` does."""
+    n = rows.size - SPARE
     left = n
     at = 0
     start = 0
@@ -105,9 +116,13 @@ def resample_rows(state: np.uint64, counts: Counts, rows: npt.NDArray[np.int64])
         clear(block)
         state = count_draws(state, block, own)
         for i in range(stop - start):
-            for _ in range(block[i]):
-                rows[at] = start + i
-                at += 1
+            rows[at] = start + i
+            rows[at + 1] = start + i
+            rows[at + 2] = start + i
+            end = at + block[i]
+            for place in range(at + SPARE, end):
+                rows[place] = start + i
+            at = end
         start = stop
     return state
 
