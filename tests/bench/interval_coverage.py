@@ -1,4 +1,4 @@
-"""How often 95 % intervals cover: ``python tests/bench/interval_coverage.py [--sets N] [--resamples R]``.
+"""How often 95 % intervals cover: ``python tests/bench/interval_coverage.py``.
 
 For each statistic, size and distribution, data sets are drawn with fixed seeds, each a group of
 one query; printed is the share of intervals that hold the statistic's own value in that
