@@ -26,11 +26,15 @@ def verify(file: Path, settings: Settings) -> None:
     """
     from midspread.engine.grids.records import read_record
     from midspread.engine.grids.records import verify as verify_record
+    from midspread.engine.grids.sources import mentioned
 
     document = read_record(file)
+    sources = mentioned(
+        settings.store_path(), (step["sql"] for step in document["steps"] if "sql" in step)
+    )
     with Screen() as screen:
         verdicts = verify_record(
-            lambda place: replace(settings, store=place).session(screen), document
+            lambda place: replace(settings, store=place).session(screen, sources=sources), document
         )
         screen.clear()
     for verdict in verdicts:

@@ -14,6 +14,7 @@ from midspread.engine.grids.definitions import listed_columns
 from midspread.engine.grids.keeping import folder_of
 from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind, checked_name
 from midspread.engine.grids.restoring import note_rows, note_undo
+from midspread.engine.grids.sources import check_no_source
 from midspread.engine.grids.tables import computed_in_order, key_text
 from midspread.engine.nearest import nearest
 from midspread.engine.store.quoting import quoted
@@ -60,6 +61,7 @@ def create(store_path: Path, name: str, columns: str, keys: Sequence[str]) -> Gr
     store = Store.open(store_path)
     try:
         with store.writing() as engine:
+            check_no_source("enter", engine, name)
             if name.casefold() in ledger.grids(engine):
                 raise MidspreadError(
                     f"enter: there is a grid {name} already; type values into it, or add a column "

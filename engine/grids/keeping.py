@@ -11,6 +11,7 @@ from midspread.engine.grids import ledger
 from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind, checked_name
 from midspread.engine.grids.publishing import publish
 from midspread.engine.grids.restoring import note_undo
+from midspread.engine.grids.sources import check_no_source
 from midspread.engine.store.store import Store
 
 if TYPE_CHECKING:
@@ -75,6 +76,7 @@ def keep(
     store = Store.open(store_path)
     with store.reading() as engine:
         before = ledger.grids(engine)
+        check_no_source("keep", engine, name)
     old = before.get(name.casefold())
     _check_replacing(name, old, replacing)
     if later:

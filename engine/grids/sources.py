@@ -2,6 +2,7 @@
 
 import os
 import re
+from collections.abc import Iterable
 from dataclasses import dataclass
 from enum import StrEnum
 from pathlib import Path
@@ -13,6 +14,7 @@ import duckdb
 from midspread.engine.errors import MidspreadError, UsageError
 from midspread.engine.grids import ledger
 from midspread.engine.grids.restoring import write_steps
+from midspread.engine.inputs.scanning import mentions_of
 from midspread.engine.store.quoting import literal
 from midspread.engine.store.store import Store
 
@@ -183,6 +185,27 @@ def gone(source: Source, store_folder: Path) -> str:
         f"was remembered as {source.file(store_folder)}, where there is no file now; point it to "
         f"where that is with midspread attach {source.name}=PATH"
     )
+
+
+def mentioned(store_path: Path, scripts: Iterable[str]) -> dict[str, Path]:
+    """The files of the sources that some scripts mention and that can be read, by name."""
+    words: set[str] = set()
+    for script in scripts:
+        words |= mentions_of(script).names
+    return {
+        source.name: source.file(store_path.parent)
+        for folded, source in remembered(store_path).items()
+        if folded in words and not trouble(source, store_path.parent)
+    }
+
+
+def check_no_source(command: str, engine: duckdb.DuckDBPyConnection, name: str) -> None:
+    """Raise when a new grid would have the name of a source, within `Store.reading`."""
+    source = sources(engine).get(name.casefold())
+    if source is not None:
+        raise UsageError(
+            f"{command}: {source.name} is a source of this store; choose another name for the grid."
+        )
 
 
 def _remember(

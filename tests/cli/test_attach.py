@@ -44,3 +44,11 @@ def test_half_of_what_it_takes(run: Run, arguments: tuple[str, ...]) -> None:
     refused = run("attach", *arguments)
     assert refused.exit_code == 2
     assert refused.stderr.startswith("midspread attach: ")
+
+
+def test_a_record_over_a_source_is_verified(run: Run, here: Path) -> None:
+    run("attach", "wh=warehouse.duckdb")
+    assert run("keep", "ends", "SELECT max(route) AS last FROM wh.routes").exit_code == 0
+    (here / "ends.json").write_text(run("show", "ends", "--record", "--format", "json").stdout)
+    verified = run("verify", "ends.json")
+    assert verified.stdout == "ends: agrees to the last digit\n", verified.stderr

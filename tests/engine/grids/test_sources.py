@@ -7,6 +7,7 @@ import duckdb
 import pytest
 
 from midspread.engine.errors import MidspreadError, UsageError
+from midspread.engine.grids.entering import create
 from midspread.engine.grids.keeping import keep
 from midspread.engine.grids.refreshing import refresh
 from midspread.engine.grids.restoring import undo
@@ -151,3 +152,15 @@ def test_what_cannot_be_a_source(store: Path, name: str, path: str, words: str) 
         attach(store, name, path)
     assert "open" not in str(caught.value)
     assert remembered(store) == {}
+
+
+@pytest.mark.usefixtures("warehouse")
+def test_no_grid_takes_the_name_of_a_source(store: Path) -> None:
+    attach(store, "wh", "warehouse.duckdb")
+    with (
+        Session(threads=1) as session,
+        pytest.raises(UsageError, match="keep: wh is a source of this store"),
+    ):
+        keep(session, store, "WH", "SELECT 1 AS a")
+    with pytest.raises(UsageError, match="enter: wh is a source of this store"):
+        create(store, "wh", "route TEXT", ["route"])
