@@ -1,6 +1,7 @@
 """`choices_table`: its grid, its error under no effect, symmetry, the same bits, stated NULLs."""
 
 import math
+import threading
 from typing import Any
 
 import duckdb
@@ -10,7 +11,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from midspread.demo_db import build, truth
-from midspread.udfs import register
+from midspread.udfs import Control, register
 from tests.udfs.calling import bits
 from tests.udfs.table_calls import answer, complaint
 
@@ -70,6 +71,21 @@ def test_every_choice_has_a_row_in_the_order_of_the_call(
     assert [r["estimator"] for r in some] == ["trimmed_mean(0.25)", "mean"]
     (same,) = (r for r in rows if listed[rows.index(r)] == ("sqrt", "median_mad", "mean"))
     assert [some[1][name] for name in FIGURES] == [same[name] for name in FIGURES]
+
+
+def test_rules_are_those_of_row_flags(connection: duckdb.DuckDBPyConnection) -> None:
+    """On the values of both levels together."""
+    rules = ("fences", "adjusted_fences", "median_mad")
+    sides = {name: [*values, 400.0, 0.1] for name, values in two_sides().items()}
+    rows = table(connection, sides, f", rules := {list(rules)}, estimators := 'mean'" + FEW)
+    for row in rows[:3]:
+        flags = f"row_flags('sides', 'dwell_s', rule := '{row['rule']}')"
+        kept = dict(
+            connection.execute(
+                f"SELECT payment, count(*) FROM {flags} WHERE NOT outside GROUP BY payment"
+            ).fetchall()
+        )
+        assert (row["n_baseline"], row["n_other"]) == (kept["cash box"], kept["tap reader"])
 
 
 def test_choices_that_would_lose_rows_are_left_out(connection: duckdb.DuckDBPyConnection) -> None:
@@ -200,6 +216,37 @@ def test_the_seed_chooses_the_shuffles(connection: duckdb.DuckDBPyConnection) ->
     assert first["share_same_sign"] == other["share_same_sign"]
 
 
+def test_a_stop_is_heeded_within_one_group() -> None:
+    control = Control()
+    with duckdb.connect() as connection:
+        register(connection, control=control)
+        connection.execute(
+            "CREATE TABLE visits AS SELECT hash(i) % 2 AS payment, 1 + i % 997 AS dwell_s "
+            "FROM range(200000) t(i)"
+        )
+        query = "FROM choices_table('visits', 'dwell_s', 'payment', shuffles := {})"
+        connection.execute(query.format(2)).fetchall()
+        before = control.done
+        over = threading.Event()
+
+        def stop_once_shuffling() -> None:
+            while control.done < before + 1_000_000 and not over.wait(0.001):
+                pass
+            control.stop()
+
+        watcher = threading.Thread(target=stop_once_shuffling)
+        watcher.start()
+        try:
+            with pytest.raises(duckdb.Error, match="Stopped"):
+                connection.execute(query.format(100_000)).fetchall()
+        finally:
+            over.set()
+            watcher.join()
+        assert control.done < before + 100_000 * 200_000 / 10
+        control.reset()
+        assert len(connection.execute(query.format(2)).fetchall()) == 36
+
+
 def test_digits_far_away_and_at_the_limits(connection: duckdb.DuckDBPyConnection) -> None:
     sides = {name: np.round(np.array(v) * 64) / 64 for name, v in two_sides().items()}
     raw = ", re_expressions := 'raw'" + FEW
@@ -267,6 +314,7 @@ def test_what_cannot_be_compared(connection: duckdb.DuckDBPyConnection) -> None:
         ),
         ("estimators := []", "estimators must name at least one, got []"),
         ("estimators := ['mean', 'trimmed_mean(0)']", "estimators names mean twice"),
+        ("rules := ['tails']", "rules must be among none, fences, adjusted_fences, median_mad"),
         ("re_expressions := ['raw', 'cube']", "re_expressions must be among raw, log, sqrt, got"),
         ("rules := NULL", "rules must name at least one, got None"),
         ("rules := ['fences', 'Fences']", "rules names fences twice"),

@@ -3,6 +3,7 @@
 import itertools
 import math
 from fractions import Fraction
+from pathlib import Path
 from typing import Any
 
 import duckdb
@@ -11,6 +12,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from midspread.demo_db import build, truth
 from midspread.udfs import register
 from tests.udfs.calling import bits
 from tests.udfs.table_calls import answer, complaint
@@ -203,6 +205,22 @@ def test_groups_without_a_comparison(connection: duckdb.DuckDBPyConnection) -> N
     assert [r["note"] for r in rows[1:]] == [missing, missing]
     assert [(r["n_baseline"], r["n_other"]) for r in rows] == [(1, 1), (0, 1), (0, 2)]
     assert all(r[name] is None for r in rows[1:] for name in FIGURES)
+
+
+def test_a_few_stuck_clocks_carry_the_mean_and_not_the_median(tmp_path: Path) -> None:
+    """Larkmoor's tap readers: the median's difference rests on many rows, but not on L9."""
+    demo = build(tmp_path / "larkmoor", visits=30_000)
+    shares = {}
+    with duckdb.connect() as connection:
+        register(connection)
+        call = f"rows_to_reverse('{demo.dwell}', 'dwell_s', 'payment', by := 'route', statistic := "
+        for name in ("mean", "median"):
+            rows = answer(connection, f"FROM {call} '{name}')")
+            shares[name] = {row["route"]: row["share_of_rows"] for row in rows}
+    faster = [route.route for route in truth.ROUTES if route.tap_factor < 0.86]
+    assert all(shares["median"][route] > 0.03 for route in faster)
+    assert shares["median"]["L9"] < 0.03
+    assert min(shares["mean"][route] for route in faster) < 0.005
 
 
 def test_the_same_bits_for_any_order_and_number_of_threads() -> None:

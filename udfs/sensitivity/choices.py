@@ -148,12 +148,13 @@ def _compute(
     work_off(choose, sizes, work)
     found[chosen] = figures
     ends = samples.starts[np.stack((pairs + 1, pairs + 2), axis=1)] - 1
+    has_nan: list[bool] = np.any(np.isnan(samples.values[ends]), axis=1).tolist()
     jobs = []
     for row, pair, size, nan in zip(
         chosen.tolist(),
         pairs.tolist(),
         sizes.tolist(),
-        np.isnan(samples.values[ends]).any(axis=1).tolist(),
+        has_nan,
         strict=True,
     ):
         step = max(8, _VALUES_A_JOB // size)

@@ -6,20 +6,19 @@ from typing import Final
 import numpy as np
 import numpy.typing as npt
 
-from midspread.udfs.arithmetic.order_statistics import median_sorted
 from midspread.udfs.declaring import Values, compiled
 from midspread.udfs.drivers import Indices
-from midspread.udfs.scale.deviations import mad_scale
-from midspread.udfs.shape.fences import fences
+from midspread.udfs.outlying.limits import LIMIT_FIELDS, limits_of_group
+from midspread.udfs.outlying.limits import RULES as LIMIT_RULES
 
 Labels = npt.NDArray[np.int8]
 
-RULES: Final = ("none", "fences", "median_mad")
-"""Rules for outlying values, by the numbers below."""
-FENCES: Final = 1
-MEDIAN_MAD: Final = 2
-FENCE_SPREADS: Final = 1.5
-MAD_SCALES: Final = 3.0
+NO_RULE: Final = "none"
+RULES: Final = (NO_RULE, *LIMIT_RULES)
+"""Rules for outlying values; kernels know them by their place."""
+_FENCE_SPREADS: Final = 1.5
+_MAD_SCALES: Final = 3.0
+_MEDIAN_MAD: Final = RULES.index("median_mad")
 
 _LARGEST_TO_SUBTRACT: Final = 4e307
 
@@ -101,14 +100,12 @@ def largest_finite(x: Values) -> float:
 @compiled
 def kept_by_rule(y: Values, rule: int) -> tuple[int, int]:
     """First and stop of the sorted values that a rule leaves; limits without width leave all."""
-    limits = np.empty(2)
-    if rule == FENCES:
-        fences(y, FENCE_SPREADS, limits)
-    elif rule == MEDIAN_MAD:
-        middle, reach = median_sorted(y), MAD_SCALES * mad_scale(y)
-        limits[0], limits[1] = middle - reach, middle + reach
-    else:
+    if rule == 0:
         return 0, y.size
+    limits, settings = np.empty(len(LIMIT_FIELDS)), np.empty(2)
+    settings[0] = rule - 1
+    settings[1] = _MAD_SCALES if rule == _MEDIAN_MAD else _FENCE_SPREADS
+    limits_of_group(y, settings, limits)
     if not limits[0] < limits[1]:
         return 0, y.size
     first = np.searchsorted(y, limits[0])

@@ -20,7 +20,7 @@ _SCALES: Final = Parameter(
 )
 _RULES: Final = Parameter(
     "rules",
-    "for outlying values: none, fences, median_mad",
+    "for outlying values: none, fences, adjusted_fences, median_mad",
     "['none', 'fences', 'median_mad']",
 )
 _SHUFFLES: Final = Parameter(
@@ -110,9 +110,9 @@ def choices_table(
         Of 'raw', 'log' (rung 0) and 'sqrt' (rung 0.5). Where one would lose a value of a group,
         its choices are left out there and counted.
     rules : list of text
-        Of 'none', 'fences' (1.5 fourth spreads beyond the fourths) and 'median_mad' (3 mad_scale
-        from the median), on the re-expressed values of both levels together, whatever their
-        label. Limits without width leave every value in.
+        Of 'none', 'fences' (1.5 fourth spreads beyond the fourths), 'adjusted_fences' and
+        'median_mad' (3 mad_scale from the median), on the re-expressed values of both levels
+        together, whatever their label. Limits without width leave every value in.
     confidence : number
         Of the intervals, between 0 and 1; for each choice by itself.
     shuffles : number
