@@ -2,8 +2,6 @@
 
 from typing import Final
 
-import numpy as np
-
 from midspread.udfs.declaring import Parameter, ParameterError, table_function
 from midspread.udfs.resampling.fold import FOLDS
 from midspread.udfs.resampling.held_out import FIGURES
@@ -11,17 +9,17 @@ from midspread.udfs.resampling.randomness import SEED
 from midspread.udfs.resampling.statistics import read_statistic
 from midspread.udfs.tables.relations import (
     BY,
+    UNIT,
     column,
     joined,
     keys,
+    null_unit,
     quoted_name,
     quoted_text,
     relation,
+    whole,
 )
 
-UNIT: Final = Parameter(
-    "unit", "the column that says which rows belong together, such as a vehicle or a day", "NULL"
-)
 _FIELDS: Final = ("statistic", "n", "folds", *FIGURES)
 
 
@@ -154,20 +152,3 @@ def statistic_texts(function: str, given: object) -> list[str]:
     for text in listed:
         read_statistic(function, text)
     return listed
-
-
-def whole(function: str, parameter: Parameter, given: object) -> int:
-    """A whole number within the parameter's range."""
-    if isinstance(given, bool) or not isinstance(given, int | float):
-        shown = "NULL" if given is None else repr(given)
-        raise parameter.refused(function, shown)
-    parameter.check(function, np.array([float(given)]), np.array([False]))
-    return int(given)
-
-
-def null_unit(function: str, name: str) -> str:
-    """The sentence about a row that belongs to no unit."""
-    return (
-        f"{function}: unit must not be NULL, and {name} is in some rows; leave them out, for "
-        f"example tbl := '(SELECT * FROM … WHERE {name} IS NOT NULL)'."
-    )

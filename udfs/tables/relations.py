@@ -10,6 +10,10 @@ from midspread.udfs.declaring import Parameter, ParameterError
 
 BY: Final = Parameter("by", "columns whose values split the rows: a list or one name", "[]")
 
+UNIT: Final = Parameter(
+    "unit", "the column that says which rows belong together, such as a vehicle or a day", "NULL"
+)
+
 _FILE_ENDINGS: Final = frozenset(
     {"parquet", "csv", "tsv", "txt", "json", "jsonl", "ndjson", "gz", "zst", "bz2", "xlsx"}
     | {"arrow", "arrows", "db", "duckdb"}
@@ -132,6 +136,27 @@ def number_list(
             f"write for example {argument} := [0, 0.1, 0.2]."
         )
     return numbers
+
+
+def number(function: str, parameter: Parameter, given: object) -> float:
+    """A number within the parameter's range."""
+    if isinstance(given, bool) or not isinstance(given, int | float):
+        raise parameter.refused(function, "NULL" if given is None else repr(given))
+    parameter.check(function, np.array([float(given)]), np.array([False]))
+    return float(given)
+
+
+def whole(function: str, parameter: Parameter, given: object) -> int:
+    """A whole number within the parameter's range."""
+    return int(number(function, parameter, given))
+
+
+def null_unit(function: str, name: str) -> str:
+    """The sentence about a row that belongs to no unit."""
+    return (
+        f"{function}: unit must not be NULL, and {name} is in some rows; leave them out, for "
+        f"example tbl := '(SELECT * FROM … WHERE {name} IS NOT NULL)'."
+    )
 
 
 def joined(parts: Sequence[str]) -> str:
