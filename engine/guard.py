@@ -5,7 +5,7 @@ holds nothing but query nodes and functions known to be harmless. A statement wh
 had is refused.
 """
 
-from collections.abc import Collection, Mapping
+from collections.abc import Collection, Mapping, Sequence
 from typing import Any, Final
 
 import duckdb
@@ -22,7 +22,16 @@ from midspread.engine.pivoting import parse_with_pivots, without_listed_values
 from midspread.engine.statements import Kind, Statement
 
 _INTERNAL_NAMES: Final = frozenset(
-    {"_values", "_values_of_pairs", "_numbers", "_number", "_text", "_flag", "_estimates"}
+    {
+        "_values",
+        "_values_of_pairs",
+        "_numbers",
+        "_number",
+        "_text",
+        "_flag",
+        "_estimates",
+        "_figure",
+    }
 )
 _QUERY_NODES: Final = frozenset(
     {"SELECT_NODE", "SET_OPERATION_NODE", "RECURSIVE_CTE_NODE", "CTE_NODE"}
@@ -83,15 +92,16 @@ class Guard:
         Any connection; it parses and looks up names, it never runs the statement.
     own_names : collection of str
         Our functions, which no macro may take over.
-    own_tables : collection of str
-        Our table functions, whose first argument is SQL to be judged as well.
+    own_tables : mapping of str to sequence of str
+        Our table functions with the names of their required arguments. `tbl` and `expression` hold
+        SQL to be judged as well.
     """
 
     def __init__(
         self,
         connection: duckdb.DuckDBPyConnection,
         own_names: Collection[str],
-        own_tables: Collection[str],
+        own_tables: Mapping[str, Sequence[str]],
     ) -> None:
         self._connection = connection
         self._own_names = own_names
@@ -176,6 +186,8 @@ class Guard:
             self._check_text(name, call, "", in_macro)
         elif name in self._own_tables:
             self._check_text(name, call, "FROM ", in_macro)
+            if "expression" in self._own_tables[name]:
+                self._check_expression(name, call)
 
     def _check_text(self, name: str, call: Node, before: str, in_macro: bool) -> None:
         """Judge SQL that a function is given as text."""
@@ -199,6 +211,34 @@ class Guard:
             raise RefusedStatement(
                 f"query refuses {name}() over this text: it is no query ({error.reason}); "
                 f"give a table, a file or a query in parentheses."
+            ) from None
+
+    def _check_expression(self, name: str, call: Node) -> None:
+        """Judge an SQL expression that one of our table functions is given as text."""
+        place = self._own_tables[name].index("expression")
+        given = next(
+            (
+                argument["expression"]
+                for position, argument in enumerate(call["arguments"])
+                if argument["name"] == "expression" or (position == place and not argument["name"])
+            ),
+            None,
+        )
+        if given is None:
+            return
+        text = _constant_text(given)
+        if text is None:
+            raise RefusedStatement(
+                f"query refuses {name}() over a computed text: expression must be written out as "
+                f"one string; write expression := 'sum(boardings) / sum(dwell_s)'."
+            )
+        try:
+            # The line break ends a comment.
+            self.check_tree(parse(self._connection, f"SELECT ({text}\n)"))
+        except NotParsed as error:
+            raise RefusedStatement(
+                f"query refuses {name}() over this text: it is no expression ({error.reason}); "
+                f"write expression := 'sum(boardings) / sum(dwell_s)'."
             ) from None
 
     def _is_unknown_builtin(self, name: str) -> bool:

@@ -91,9 +91,11 @@ class Session:
         self._connection = connect(memory=memory, threads=threads, owner=self)
         self._attachments = Attachments(self._connection, checked)
         self._runner = Runner(self._connection, self._functions)
-        self._table_functions = [
-            name for name, function in self._functions.items() if function.kind == "table"
-        ]
+        self._table_functions = {
+            name: function.columns
+            for name, function in self._functions.items()
+            if function.kind == "table"
+        }
         self._guard = Guard(self._connection, self._functions.keys(), self._table_functions)
         self._cache: AnswerCache | None = None
         self._grids: GridsInUse | None = None

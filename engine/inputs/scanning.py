@@ -72,6 +72,8 @@ _NOT_FUNCTIONS = frozenset(_NOT_FUNCTION_TEXT.split())
 _LIST_MAKERS = frozenset(("(", ")", "[", "]", ",", "list_value", "list_pack", "array"))
 _DEPTH = 6
 
+_EXPRESSION_ARGUMENT = ("bootstrap_expression", 1)
+
 
 @dataclass
 class Mentions:
@@ -227,6 +229,8 @@ class _Scan:
 
     def _read_path_argument(self, name: str, start: int, end: int) -> None:
         arguments = self._arguments(start, end)
+        if name in self.ours:
+            self._read_expressions(name, arguments)
         wanted = [a for a in arguments if name in self.ours and _label(a) == "tbl"]
         if not wanted and arguments and _label(arguments[0]) is None:
             wanted = arguments[:1]
@@ -243,6 +247,15 @@ class _Scan:
             elif token.word not in _LIST_MAKERS:
                 self.found.computed = True
             previous = token
+
+    def _read_expressions(self, name: str, arguments: list[list[Token]]) -> None:
+        """Read the expressions that our table functions are given as text."""
+        for place, argument in enumerate(arguments):
+            label = _label(argument)
+            if label == "expression" or (label is None and (name, place) == _EXPRESSION_ARGUMENT):
+                for token in argument:
+                    if token.value is not None:
+                        self.found.add(mentions_of(token.value, self.ours, depth=self.depth))
 
     def _take_text(self, text: str, function: str) -> None:
         if function in FILE_READERS:

@@ -124,7 +124,9 @@ def rewrite(
     passes = [_insertions_as_edits(query.text)]
     did_more = used_faster = False
     within = query_text(
-        query, lambda inner: rewrite(connection, inner, functions, faster=faster).text
+        query,
+        lambda inner: rewrite(connection, inner, functions, faster=faster).text,
+        lambda inner: rewrite(connection, inner, functions, faster=False, keep_names=False).text,
     )
     if within:
         passes.append(tuple(within))

@@ -48,6 +48,8 @@ REFUSED: Final = {
         "SELECT 1; WITH q AS (DELETE FROM town.stops RETURNING *) FROM q",
         "FROM query('FROM query(''WITH q AS (DELETE FROM town.stops) FROM q'')')",
         "FROM query($$WITH q AS (DELETE FROM town.stops RETURNING *) FROM q$$)",
+        "FROM bootstrap_expression('town.stops', "
+        "'(WITH q AS (DELETE FROM town.stops RETURNING *) SELECT count(*) FROM q)')",
         "FROM query(e'WITH q AS (\\x44ELETE FROM town.stops RETURNING *) FROM q')",
         "SUMMARIZE WITH q AS (DELETE FROM town.stops RETURNING *) FROM q",
         "DESCRIBE WITH q AS (DELETE FROM town.stops RETURNING *) FROM q",
@@ -107,6 +109,8 @@ REFUSED: Final = {
         "CREATE TEMP MACRO m() AS nextval('town.numbers')",
         "FROM robust_summary('(SELECT nextval(''town.numbers'') AS a)', 'a')",
         "SELECT sum(1) FILTER (WHERE nextval('town.numbers') > 0)",
+        "FROM bootstrap_expression('town.numbers_seen', 'sum(n) + nextval(''town.numbers'')')",
+        "FROM bootstrap_expression('town.numbers_seen', expression := 'nextval(''town.numbers'')')",
     ],
     "setval": ["SELECT setval('town.numbers', 5)"],
     "write_log": ["SELECT write_log('x')"],
@@ -122,6 +126,8 @@ REFUSED: Final = {
         "CREATE TEMP MACRO m(t) AS TABLE FROM query(t)",
         "CREATE TEMP MACRO m(t) AS TABLE FROM robust_summary(t, 'a')",
         "FROM robust_summary('(SELECT ' || '1)', 'a')",
+        "FROM bootstrap_expression('town.numbers_seen', 'sum' || '(n)')",
+        "CREATE TEMP MACRO m(e) AS TABLE FROM bootstrap_expression('town.numbers_seen', e)",
     ],
     "trimmed_mean": [
         "CREATE OR REPLACE TEMP MACRO trimmed_mean(x) AS 1",
@@ -158,6 +164,9 @@ ALLOWED: Final = [
     "CREATE OR REPLACE TEMP MACRO top(n) AS TABLE FROM town.stops LIMIT n; FROM top(1)",
     "FROM robust_summary('town.numbers_seen', 'n')",
     "FROM robust_summary('(SELECT n FROM town.numbers_seen)', 'n')",
+    "FROM bootstrap_expression('town.numbers_seen', 'sum(n) / count(*) -- why')",
+    "FROM bootstrap_expression('town.numbers_seen', 'mad_scale(n) FILTER (WHERE n > 2)')",
+    "FROM bootstrap_expression(expression := 'median(DISTINCT n)', tbl := 'town.numbers_seen')",
 ]
 
 

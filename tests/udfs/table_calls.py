@@ -20,6 +20,7 @@ CALLS = {
     "spread_by_level": "spread_by_level({}, 'dwell_s', 'ramp_used'{})",
     "choices_table": "choices_table({}, 'dwell_s', 'ramp_used', shuffles := 9{})",
     "rows_to_reverse": "rows_to_reverse({}, 'dwell_s', 'ramp_used'{})",
+    "bootstrap_draws": "bootstrap_draws({}, 'dwell_s', resamples := 20{})",
     "value_profile": "value_profile({}, columns := 'dwell_s'{})",
 }
 EVERY = pytest.mark.parametrize("function", CALLS)

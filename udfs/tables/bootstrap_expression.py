@@ -42,7 +42,10 @@ _SAMPLED: Final = 8
     ),
     source="Efron 1979, Ann. Statist. 7, 1–26; limits: Davison & Hinkley 1997, equation 5.6",
     breakdown="the expression's own",
-    cost="O(resamples · n) time; memory for the rows, a portion of the drawn rows and groups · resamples draws",
+    cost=(
+        "O(resamples · n) time; memory for the rows, a portion of the drawn rows and "
+        "groups · resamples draws"
+    ),
     example=(
         "SELECT * FROM bootstrap_expression('visits', 'sum(boardings) / sum(dwell_s)', "
         "by := 'route', resamples := 200)"

@@ -90,6 +90,16 @@ def test_not_volatile(engine: Engine, sql: str) -> None:
     assert why_volatile([sql], engine) is None
 
 
+def test_chance_in_a_macro_that_an_expression_calls() -> None:
+    with duckdb.connect() as engine:
+        engine.execute("CREATE TEMP MACRO noisy(x) AS sum(x + random())")
+        engine.execute("CREATE TEMP MACRO plain(x) AS sum(x + 1)")
+        for call in ("'t', '{}(x)'", "expression := '{}(x) + 1', tbl := 't'"):
+            sql = "FROM bootstrap_expression(" + call + ", by := 'g')"
+            assert uses_volatile(sql.format("noisy"), engine)
+            assert not uses_volatile(sql.format("plain"), engine)
+
+
 def test_every_volatile_function_of_the_engine_is_known(engine: Engine) -> None:
     """Whatever the engine itself calls volatile in all its forms is refused."""
     names = engine.execute(
