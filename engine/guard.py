@@ -22,16 +22,7 @@ from midspread.engine.pivoting import parse_with_pivots, without_listed_values
 from midspread.engine.statements import Kind, Statement
 
 _INTERNAL_NAMES: Final = frozenset(
-    {
-        "_values",
-        "_values_of_pairs",
-        "_numbers",
-        "_number",
-        "_text",
-        "_flag",
-        "_estimates",
-        "_figure",
-    }
+    {"_values", "_values_of_pairs", "_numbers", "_number", "_text", "_flag", "_estimates"}
 )
 _QUERY_NODES: Final = frozenset(
     {"SELECT_NODE", "SET_OPERATION_NODE", "RECURSIVE_CTE_NODE", "CTE_NODE"}

@@ -216,6 +216,7 @@ def test_no_rows_give_one_row_alone_and_none_by_group(
     expected |= {"straightening_pairs": 36, "spread_by_level": 0, "rows_to_reverse": 0}
     expected |= {"choices_table": 0}
     expected |= {"location_estimates": 9, "leave_one_out": 0, "influential_values": 0}
+    expected |= {"bootstrap_draws": 0}
     assert len(rows) == expected.get(function, 1)
     assert answer(larkmoor, "FROM " + CALLS[function].format(nothing, ", by := 'route'")) == []
 

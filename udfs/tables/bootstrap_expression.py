@@ -145,7 +145,7 @@ def bootstrap_expression(
     ordered = f"ORDER BY {', '.join(order)}" if order else ""
     group = f"GROUP BY {', '.join(grouped)}" if grouped else ""
     # The value first, then what must be a number: the macro cannot see the type of an aggregate.
-    figure = f"_figure(_midspread_value, {quoted_text(function)})"
+    figure = f"_number_of(_midspread_value, {quoted_text(function)}, 'expression')"
     same = " AND ".join(f"r.{key} IS NOT DISTINCT FROM g.{key}" for key in grouped) or "true"
     return f"""
 WITH RECURSIVE _midspread_source AS (SELECT * FROM {relation(function, tbl)}),

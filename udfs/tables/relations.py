@@ -138,17 +138,11 @@ def number_list(
     return numbers
 
 
-def number(function: str, parameter: Parameter, given: object) -> float:
-    """A number within the parameter's range."""
-    if isinstance(given, bool) or not isinstance(given, int | float):
-        raise parameter.refused(function, "NULL" if given is None else repr(given))
-    parameter.check(function, np.array([float(given)]), np.array([False]))
-    return float(given)
-
-
 def whole(function: str, parameter: Parameter, given: object) -> int:
-    """A whole number within the parameter's range."""
-    return int(number(function, parameter, given))
+    """A whole number within the range of a parameter that must be given."""
+    found = number(function, parameter, given)
+    assert found is not None
+    return int(found)
 
 
 def null_unit(function: str, name: str) -> str:
