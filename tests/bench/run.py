@@ -24,6 +24,7 @@ import permutation
 import processes
 import reexpression
 import resampling
+import sensitivity
 from measuring import Figure, print_figures
 
 SECTIONS: dict[str, Callable[[int], list[Figure]]] = {
@@ -38,6 +39,7 @@ SECTIONS: dict[str, Callable[[int], list[Figure]]] = {
     "processes": processes.measure,
     "reexpression": reexpression.measure,
     "resampling": resampling.measure,
+    "sensitivity": sensitivity.measure,
 }
 
 
