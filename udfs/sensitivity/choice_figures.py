@@ -19,7 +19,7 @@ from midspread.udfs.declaring import NULL, Values, compiled
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.location.trimming import cut_from_each_tail, trimmed_mean
 from midspread.udfs.scale.winsorized import winsorized_deviation
-from midspread.udfs.sensitivity.pooled import kept_by_rule, loses, pool, re_express, split
+from midspread.udfs.sensitivity.pooled import kept_by_rule, loses, pool, rank, re_express, split
 
 WIDTH: Final = 6
 """Figures of a choice, at the places below; those of two levels with the baseline first."""
@@ -76,9 +76,9 @@ def _over_choices(
                 first, stop = 0, m + n
                 if not math.isnan(y[0]):
                     first, stop = kept_by_rule(y, rules[rule])
-                a = np.searchsorted(baseline_places, first)
-                b = np.searchsorted(baseline_places, stop)
-                c, d = np.searchsorted(other_places, first), np.searchsorted(other_places, stop)
+                a = rank(baseline_places, first)
+                b = rank(baseline_places, stop)
+                c, d = rank(other_places, first), rank(other_places, stop)
                 _figures(of_baseline[a:b], of_other[c:d], size, shares, out[r, choice:])
                 choice += shares.size
         control[DONE] += m + n

@@ -108,8 +108,12 @@ def kept_by_rule(y: Values, rule: int) -> tuple[int, int]:
     limits_of_group(y, settings, limits)
     if not limits[0] < limits[1]:
         return 0, y.size
-    first = np.searchsorted(y, limits[0])
-    return first, np.searchsorted(y, limits[1], side="right")
+    first, stop = 0, y.size
+    while first < stop and y[first] < limits[0]:
+        first += 1
+    while stop > first and y[stop - 1] > limits[1]:
+        stop -= 1
+    return first, stop
 
 
 @compiled
@@ -121,3 +125,16 @@ def split(y: Values, labels: Labels, label: int, own: Values, places: Indices) -
             own[written] = y[i]
             places[written] = i
             written += 1
+
+
+@compiled
+def rank(places: Indices, place: int) -> int:
+    """How many of some ascending places come before one; numba's own takes long to compile."""
+    low, high = 0, places.size
+    while low < high:
+        middle = (low + high) // 2
+        if places[middle] < place:
+            low = middle + 1
+        else:
+            high = middle
+    return low

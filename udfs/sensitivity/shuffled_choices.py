@@ -18,7 +18,7 @@ from midspread.udfs.declaring import Values, compiled
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.resampling.randomness import below, content_key, stream
 from midspread.udfs.sensitivity.choice_figures import median_place, without_rounding
-from midspread.udfs.sensitivity.pooled import kept_by_rule, loses, pool, re_express
+from midspread.udfs.sensitivity.pooled import kept_by_rule, loses, pool, rank, re_express
 
 STEPS: Final = 1024
 """Critical values are given for 1 / df = 0, 1/STEPS, …, 1, as logarithms; between, on a line."""
@@ -151,7 +151,7 @@ def deal(key: np.uint64, chosen: Indices, rest: Indices) -> None:
 def _sums_from_the_middle(y: Values, places: Indices, sums: Values, squares: Values) -> None:
     """Running sums of the values at some places, 0 at the middle of all values."""
     n = places.size
-    middle = np.searchsorted(places, y.size // 2)
+    middle = rank(places, y.size // 2)
     total = square = 0.0
     sums[middle] = squares[middle] = 0.0
     for i in range(middle, n):
@@ -184,8 +184,8 @@ def _count(
     counts: Indices,
 ) -> None:
     """Add what each estimator says of the values in a window: below 0, above 0, excludes 0."""
-    a, b = np.searchsorted(baseline, window[0]), np.searchsorted(baseline, window[1])
-    c, d = np.searchsorted(other, window[0]), np.searchsorted(other, window[1])
+    a, b = rank(baseline, window[0]), rank(baseline, window[1])
+    c, d = rank(other, window[0]), rank(other, window[1])
     if a == b or c == d:
         return
     for e in range(shares.size):
