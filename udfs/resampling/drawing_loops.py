@@ -3,7 +3,7 @@
 All of them take resamples first ≤ j < stop of the groups named by rows: group r holds
 ``values[starts[r] : starts[r] + lengths[r]]``, sorted, draws from the stream ``keys[r]`` and writes
 its j-th draw to ``draws[r, j]``. Resample j has a stream of its own, so it comes out the same
-whichever loop, thread or portion draws it. steps is what counts as all of a group's work.
+whichever thread or portion draws it. steps is what counts as all of a group's work.
 """
 
 import math
@@ -39,7 +39,7 @@ MIDDLES_SIGNATURE: Final = SIGNATURE.removesuffix(")") + ", boolean, float64[::1
 
 _COUNTED: Final = 500
 """Below so many values all draws are counted: zones do not pay."""
-_REACH: Final = 5.0
+_REACH: Final = 3.5
 """Half width of a window, in standard deviations of the place of the cut."""
 _WORTH_SUMMING: Final = 256
 
@@ -218,7 +218,7 @@ def of_middles(
             state = stream(keys[r], j)
             low = high = 0.0
             if b == 0:
-                total, squares, state = sum_draws(state, v, n)
+                total, squares, state = sum_draws(state, v, n, with_errors)
             elif all_counted:
                 clear(counts)
                 state = count_draws(state, counts, n)
@@ -244,7 +244,7 @@ def of_middles(
                     high = v[c + over]
                     total += part
                     squares += square
-                    part, square, state = sum_draws(state, v[b:c], summed)
+                    part, square, state = sum_draws(state, v[b:c], summed, with_errors)
                     total += part
                     squares += square
                 else:

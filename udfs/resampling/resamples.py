@@ -18,15 +18,15 @@ from midspread.udfs.resampling.variates import GOLDEN, HALF, LOW_HALF, binomial
 Counts = npt.NDArray[np.int32]
 
 BLOCK: Final = 4096
-"""Values in a block; a power of 2, so that bits of a word are numbers within it."""
+SMALLEST: Final = 256
+"""Values in the largest and the smallest block that is a power of 2: bits of a word are numbers
+within it."""
 SPARE: Final = 3
 """Room that a written resample needs behind its end."""
-_BITS: Final = 12
-_MASK: Final = np.uint64(BLOCK - 1)
-_LANE1: Final = np.uint64(_BITS)
-_LANE2: Final = np.uint64(2 * _BITS)
-_LANE3: Final = np.uint64(3 * _BITS)
-_LANE4: Final = np.uint64(4 * _BITS)
+_BITS: Final = np.uint64(12)
+_TWICE: Final = np.uint64(24)
+_THRICE: Final = np.uint64(36)
+_FOURFOLD: Final = np.uint64(48)
 
 
 @compiled
@@ -128,57 +128,55 @@ def resample_rows(state: np.uint64, counts: Counts, rows: npt.NDArray[np.int64])
 
 
 @compiled
-def sum_draws(state: np.uint64, v: Values, draws: int) -> tuple[float, float, np.uint64]:
-    """Draw so many times from v: the sum and the sum of squares of what is drawn."""
+def sum_draws(
+    state: np.uint64, v: Values, draws: int, with_squares: bool
+) -> tuple[float, float, np.uint64]:
+    """Draw so many times from v: the sum and, if wanted, the sum of squares of what is drawn."""
     n = v.size
     total = squares = 0.0
     left = draws
     start = 0
     while start < n and left > 0:
-        stop = min(start + BLOCK, n)
+        size = BLOCK
+        while size > n - start and size > SMALLEST:
+            size //= 2
+        size = min(size, n - start)
         own = left
-        if stop < n:
-            own, state = binomial(state, left, (stop - start) / (n - start))
+        if start + size < n:
+            own, state = binomial(state, left, size / (n - start))
         left -= own
-        block = v[start:stop]
-        if stop - start == BLOCK:
-            part, square, state = _sum_of_whole_block(state, block, own)
+        block = v[start : start + size]
+        if with_squares or size < SMALLEST:
+            part, square, state = _sums_of_any_block(state, block, own)
+            squares += square
         else:
-            part, square, state = _sum_of_part_block(state, block, own)
+            part, state = _sum_of_block(state, block, own)
         total += part
-        squares += square
-        start = stop
+        start += size
     return total, squares, state
 
 
 @compiled
-def _sum_of_whole_block(state: np.uint64, v: Values, draws: int) -> tuple[float, float, np.uint64]:
-    """Five numbers below 4096 from each word."""
-    s0 = s1 = q0 = q1 = 0.0
+def _sum_of_block(state: np.uint64, v: Values, draws: int) -> tuple[float, np.uint64]:
+    """Five numbers from each word, below a size that is a power of 2 up to 4096."""
+    mask = np.uint64(v.size - 1)
+    s0 = s1 = 0.0
     for _ in range(draws // 5):
         state = state + GOLDEN
         bits = mixed(state)
-        a = v[bits & _MASK]
-        b = v[(bits >> _LANE1) & _MASK]
-        c = v[(bits >> _LANE2) & _MASK]
-        d = v[(bits >> _LANE3) & _MASK]
-        e = v[(bits >> _LANE4) & _MASK]
-        s0 += (a + b) + (c + d)
-        s1 += e
-        q0 += (a * a + b * b) + (c * c + d * d)
-        q1 += e * e
+        s0 += v[bits & mask] + v[(bits >> _BITS) & mask]
+        s1 += v[(bits >> _TWICE) & mask] + v[(bits >> _THRICE) & mask]
+        s0 += v[(bits >> _FOURFOLD) & mask]
     state = state + GOLDEN
     bits = mixed(state)
     for _ in range(draws % 5):
-        a = v[bits & _MASK]
-        bits >>= _LANE1
-        s1 += a
-        q1 += a * a
-    return s0 + s1, q0 + q1, state
+        s1 += v[bits & mask]
+        bits >>= _BITS
+    return s0 + s1, state
 
 
 @compiled
-def _sum_of_part_block(state: np.uint64, v: Values, draws: int) -> tuple[float, float, np.uint64]:
+def _sums_of_any_block(state: np.uint64, v: Values, draws: int) -> tuple[float, float, np.uint64]:
     """Two numbers below any bound from each word."""
     span = np.uint64(v.size)
     unfair = np.uint64((1 << 32) % v.size)
