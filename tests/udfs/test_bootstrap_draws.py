@@ -7,9 +7,13 @@ import numpy as np
 import pytest
 import scipy.stats
 
+from midspread.udfs import Control
+from midspread.udfs.binding.computing import Work
 from midspread.udfs.declaring import Values
-from midspread.udfs.resampling import drawing_loops
+from midspread.udfs.grouped import Groups
+from midspread.udfs.resampling.draws import Drawn, draw_all
 from midspread.udfs.resampling.randomness import stream
+from midspread.udfs.resampling.statistics import read_statistic
 from midspread.udfs.resampling.variates import binomial, uniform_rank
 from tests.udfs.test_bootstrap import one
 
@@ -34,7 +38,7 @@ def winsorized(y: Values, share: float) -> Values:
 
 
 @pytest.mark.parametrize("text", PLAIN)
-@pytest.mark.parametrize("n", [4, 11, 60, 700, 1300, 5000])
+@pytest.mark.parametrize("n", [4, 11, 60, 130, 700, 5000])
 def test_distributed_as_plain_resampling(text: str, n: int, generator: np.random.Generator) -> None:
     """Kolmogorov and Smirnov's test on jittered draws (of few values many tie), fixed seeds."""
     x = generator.lognormal(size=n)
@@ -50,54 +54,34 @@ def test_distributed_as_plain_resampling(text: str, n: int, generator: np.random
         assert ours.mean() == pytest.approx(plain.mean(), abs=5 * plain.std() / 60)
 
 
-def test_a_cut_that_leaves_its_window(
-    monkeypatch: pytest.MonkeyPatch, generator: np.random.Generator
-) -> None:
-    """With windows far too narrow all zones are counted, and the distribution stays what it is.
-
-    Run uncompiled, where the constants can be changed.
-    """
-    monkeypatch.setattr(drawing_loops, "_COUNTED", 10)
-    monkeypatch.setattr(drawing_loops, "_REACH", 0.0)
-    monkeypatch.setattr(drawing_loops, "_WORTH_SUMMING", 4)
-    n, count = 120, 1500
+@pytest.mark.parametrize(("n", "share"), [(6, 0.2), (40, 0.0), (90, 0.45), (150, 0.2), (700, 0.1)])
+def test_standard_errors_of_draws(n: int, share: float, generator: np.random.Generator) -> None:
+    """Counted below 100 values, else from the order statistics that bound what is kept."""
     x = np.sort(generator.lognormal(size=n))
-    trimmed, errors = np.empty((1, count)), np.empty((1, count))
-    rows = np.array([0])
-    left = []
-    original = drawing_loops._kept_draws
-
-    def noted(v: Values, *arguments: Any) -> Any:
-        left.append(v.size == n)
-        return original(v, *arguments)
-
-    monkeypatch.setattr(drawing_loops, "_kept_draws", noted)
-    with np.errstate(over="ignore"):
-        drawing_loops.of_middles(
-            x,
-            np.array([0]),
-            np.array([n]),
-            rows,
-            np.array([12345], dtype=np.uint64),
-            np.array([0.2]),
-            0,
-            count,
-            count,
-            trimmed,
-            np.zeros(2, dtype=np.int64),
-            False,
-            np.array([scipy.stats.trim_mean(x, 0.2)]),
-            errors,
-        )
-    assert 0.02 < np.mean(left) < 0.98, "both branches are met"
-    y = x[generator.integers(0, n, (count, n))]
-    assert scipy.stats.ks_2samp(trimmed[0], PLAIN["trimmed_mean(0.2)"](y)).pvalue > 1e-3
-    g = int(0.2 * n)
-    y.sort(axis=1)
-    clipped = np.clip(y, y[:, g : g + 1], y[:, -g - 1 : n - g])
-    expected = clipped.std(axis=1, ddof=1) / (0.6 * np.sqrt(n))
-    assert errors[0].mean() == pytest.approx(expected.mean(), rel=0.03)
-    assert scipy.stats.ks_2samp(errors[0], expected).pvalue > 1e-3
+    statistic = read_statistic("test", f"trimmed_mean({share})")
+    found: list[Drawn] = []
+    draw_all(
+        Groups(x, np.array([0, n])),
+        np.array([0]),
+        statistic,
+        4000,
+        np.zeros(1),
+        Work(Control(), 1),
+        lambda _, drawn: found.append(drawn),
+        with_errors=True,
+    )
+    g = int(share * n)
+    y = np.sort(x[generator.integers(0, n, (4000, n))], axis=1)
+    clipped = np.clip(y, y[:, g : g + 1], y[:, n - g - 1 : n - g])
+    expected = clipped.std(axis=1, ddof=1) * np.sqrt((n - 1) / ((n - 2 * g) * (n - 2 * g - 1)))
+    means = y[:, g : n - g].mean(axis=1)
+    (drawn,) = found
+    jitter = 1e-9 * generator.uniform(size=(2, 4000))
+    for ours, plain in ((drawn.errors[0], expected), (drawn.draws[0], means)):
+        assert scipy.stats.ks_2samp(ours + jitter[0], plain + jitter[1]).pvalue > 1e-3
+    together = np.corrcoef(drawn.draws[0], drawn.errors[0])[0, 1]
+    assert together == pytest.approx(np.corrcoef(means, expected)[0, 1], abs=0.08)
+    assert (drawn.errors[0] == 0.0).mean() == pytest.approx((expected < 1e-12).mean(), abs=0.01)
 
 
 @pytest.mark.parametrize(

@@ -89,10 +89,10 @@ def bootstrap_interval(batch: "Batch") -> dict[str, Values]:
     when that leaves less than half; the interval has no width where the estimate's own is 0.
 
     How resamples are drawn: medians, quantiles and what is made of a few of them from the exact
-    distribution of order statistics; trimmed and winsorized means from 500 values on by zones
-    (values that are surely cut are only counted, those surely kept only summed), with the exact
-    case distinction where a cut leaves its zone; all else as multinomial counts of the sorted
-    values. All of it is exact resampling with replacement, to the rounding of doubles.
+    distribution of order statistics; trimmed and winsorized means from 100 values on by drawing
+    the lowest and the highest value kept in the same way and, given these, the values in between;
+    all else as multinomial counts of the sorted values. All of it is exact resampling with
+    replacement, to the rounding of doubles.
 
     Coverage falls short of what is asked for in small groups, for the mean of skewed data, and
     with 'basic' for medians; below 10 values no method keeps its promise. For rows that are not

@@ -37,11 +37,8 @@ PAIRS_SIGNATURE: Final = f"void(float64[::1], {SIGNATURE.removeprefix('void(')}"
 RANKS_SIGNATURE: Final = SIGNATURE.removesuffix(")") + ", int64[::1], int64[::1])"
 MIDDLES_SIGNATURE: Final = SIGNATURE.removesuffix(")") + ", boolean, float64[::1], float64[:, ::1])"
 
-_COUNTED: Final = 500
-"""Below so many values all draws are counted: zones do not pay."""
-_REACH: Final = 3.5
-"""Half width of a window, in standard deviations of the place of the cut."""
-_WORTH_SUMMING: Final = 256
+_COUNTED: Final = 100
+"""Below so many values all draws are counted, and sorted by that."""
 
 
 def statistic(*_arguments: Any) -> float:
@@ -183,10 +180,10 @@ def of_middles(
 ) -> None:
     """Trimmed or winsorized means, of share parameters[0]; finite values only.
 
-    The sorted values are cut into zones. In the tails, where a resample's cut cannot be, draws are
-    only counted; in the middle, which is always kept, they are only summed; in a window around
-    either cut they are counted value by value. Should a cut leave its window, all zones are counted
-    value by value, given how many draws fell in each. With errors, their standard errors too.
+    In large groups the lowest and the highest value kept are drawn as order statistics. Given
+    them, the draws in between are independent and uniform between both, so that nothing need be
+    drawn of what is cut. In small groups all draws are counted. With errors, their standard errors
+    too.
     """
     with_errors = errors.shape[0] > 0
     for place in range(rows.size):
@@ -199,12 +196,8 @@ def of_middles(
         v = np.empty(n)
         for i in range(n):
             v[i] = x[i] - x[n // 2]
-        a, b = _zones(n, g, with_errors)
-        lost, middle, c = a, n - 2 * b, n - b
-        all_counted = a == 0 and b > 0 and middle < 2
-        counts = np.empty(n if all_counted else b - a, np.int32)
-        upper_counts = np.empty(b - a, np.int32)
-        everything = np.empty(0, np.int32)
+        counted = n < _COUNTED and (g > 0 or with_errors)
+        counts = np.empty(n if counted else 0, np.int32)
         kept = n - 2 * g
         more = float(g) if winsorize else 0.0
         weight = kept + 2.0 * more
@@ -217,54 +210,21 @@ def of_middles(
                 return
             state = stream(keys[r], j)
             low = high = 0.0
-            if b == 0:
-                total, squares, state = sum_draws(state, v, n, with_errors)
-            elif all_counted:
+            if counted:
                 clear(counts)
-                state = count_draws(state, counts, n)
-                total, squares, under, over = _kept_draws(v, counts, 0, g, n - g)
+                count_draws(state, counts, n)
+                total, squares, under, over = _kept_draws(v, counts, g, n - g)
                 low, high = v[under], v[over]
+            elif g == 0:
+                total, squares, state = sum_draws(state, v, n, with_errors)
             else:
-                below, state = binomial(state, n, lost / n)
-                inside, state = binomial(state, n - below, (b - a) / (n - a))
-                summed, state = binomial(state, n - below - inside, middle / (n - b))
-                rest = n - below - inside - summed
-                above, state = binomial(state, rest, (b - a) / b)
-                upper = n - rest
-                if below <= g < below + inside and upper < n - g <= upper + above:
-                    clear(counts)
-                    state = count_draws(state, counts, inside)
-                    total, squares, under, _ = _kept_draws(v[a:b], counts, below, g, n - g)
-                    low = v[a + under]
-                    clear(upper_counts)
-                    state = count_draws(state, upper_counts, above)
-                    part, square, _, over = _kept_draws(
-                        v[c : c + b - a], upper_counts, upper, g, n - g
-                    )
-                    high = v[c + over]
-                    total += part
-                    squares += square
-                    part, square, state = sum_draws(state, v[b:c], summed, with_errors)
-                    total += part
-                    squares += square
-                else:
-                    if everything.size == 0:
-                        everything = np.empty(n, np.int32)
-                    clear(everything)
-                    if lost > 0:
-                        state = count_draws(state, everything[:a], below)
-                        state = count_draws(state, everything[n - a :], rest - above)
-                    state = count_draws(state, everything[a:b], inside)
-                    state = count_draws(state, everything[b:c], summed)
-                    state = count_draws(state, everything[c : n - a], above)
-                    total, squares, under, over = _kept_draws(v, everything, 0, g, n - g)
-                    low, high = v[under], v[over]
+                total, squares, low, high = _between_order_statistics(state, v, g, with_errors)
             moved = (total + more * (low + high) - original) / weight
             draws[r, j] = min(max(estimates[r] + moved, x[0]), x[n - 1])
             if with_errors:
                 full = total + g * (low + high)
                 spread = squares + g * (low * low + high * high) - full * full / n
-                if (b > 0 and low == high) or spread < 0.0:
+                if ((counted or g > 0) and low == high) or spread < 0.0:
                     spread = 0.0
                 errors[r, j] = math.sqrt(spread / (kept * (kept - 1.0))) if kept > 1 else NULL
             finished += n
@@ -274,48 +234,63 @@ def of_middles(
 
 
 @compiled
-def _zones(n: int, g: int, counted_means: bool) -> tuple[int, int]:
-    """Where the lower window starts and stops; the upper one mirrors it.
+def _between_order_statistics(
+    state: np.uint64, v: Values, g: int, with_squares: bool
+) -> tuple[float, float, float, float]:
+    """Of a resample without its g lowest and highest: sum, squares, lowest and highest value.
 
-    (0, 0) when nothing is cut and all draws are summed; a window that holds all of the lower half
-    when all draws are counted.
+    A draw is the value number ⌊n u⌋, u uniform. Of the cells of u only the two that the outermost
+    kept draws fall in are open in part.
     """
-    half = int(_REACH * math.sqrt(g * (1.0 - g / n))) + 8
-    if n < _COUNTED and (g > 0 or counted_means):
-        return 0, n // 2
-    if g == 0:
-        return 0, 0
-    a, b = max(g - half, 0), g + half
-    if n - 2 * b < _WORTH_SUMMING:
-        return 0, n // 2
-    return a, b
+    n = v.size
+    kept = n - 2 * g
+    u, state = uniform_rank(state, g + 1, n)
+    start = u * n
+    bottom = min(int(start), n - 1)
+    low = v[bottom]
+    if kept == 1:
+        return low, low * low, low, low
+    part, state = uniform_rank(state, kept - 1, n - g - 1)
+    end = (u + (1.0 - u) * part) * n
+    top = min(int(end), n - 1)
+    high = v[top]
+    left = kept - 2
+    if bottom == top:
+        return kept * low, kept * low * low, low, low
+    lowest, state = binomial(state, left, (bottom + 1 - start) / (end - start))
+    left -= lowest
+    highest = left
+    total = squares = 0.0
+    if top > bottom + 1:
+        highest, state = binomial(state, left, (end - top) / (end - (bottom + 1)))
+        total, squares, state = sum_draws(state, v[bottom + 1 : top], left - highest, with_squares)
+    total += (lowest + 1) * low + (highest + 1) * high
+    squares += (lowest + 1) * low * low + (highest + 1) * high * high
+    return total, squares, low, high
 
 
 @compiled
 def _kept_draws(
-    v: Values, counts: npt.NDArray[np.int32], before: int, first: int, stop: int
+    v: Values, counts: npt.NDArray[np.int32], first: int, stop: int
 ) -> tuple[float, float, int, int]:
     """Of draws in order, those with numbers first … stop − 1: sum, squares, lowest and highest.
 
-    before is how many draws lie below v[0]; lowest and highest are places in v, right only when
-    the draw with that number is in v.
+    Lowest and highest are places in v.
     """
-    size = v.size
-    under = 0
-    while under < size and before + counts[under] <= first:
+    before = under = 0
+    while before + counts[under] <= first:
         before += counts[under]
         under += 1
     total = squares = 0.0
     over = under
-    reached = max(before, first)
-    while over < size:
+    reached = first
+    while True:
         before += counts[over]
-        if before >= stop:
-            share = v[over] * (stop - reached)
-            return total + share, squares + share * v[over], under, over
-        share = v[over] * (before - reached)
+        now = min(before, stop)
+        share = v[over] * (now - reached)
         total += share
         squares += share * v[over]
-        reached = before
+        if before >= stop:
+            return total, squares, under, over
+        reached = now
         over += 1
-    return total, squares, under, over

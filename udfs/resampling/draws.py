@@ -22,7 +22,7 @@ if TYPE_CHECKING:
     from midspread.udfs.binding.computing import Work
 
 MIDDLES: Final = ("trimmed_mean", "winsorized_mean")
-"""Drawn by zones of the sorted values."""
+"""Drawn from the order statistics that bound what is kept, or by counts."""
 FEW_RANKS: Final = ("quantile_hf", "trimean", "iqr_scale", "bowley_skew", "octile_skew")
 """Read a few order statistics, which are drawn alone; so do medians."""
 
