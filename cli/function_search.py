@@ -12,6 +12,8 @@ if TYPE_CHECKING:
 _WORD: Final = re.compile(r"[a-z0-9]+")
 
 # What a hit in each place counts.
+# A table of many figures is named after what it does, an estimator after what it is.
+_TABLE_NAME = 6.0
 _NAME, _SYNONYM, _FAMILY, _MEANING, _RESULT, _REST = 12.0, 8.0, 9.0, 4.0, 2.0, 1.0
 
 # Words an analyst may think of, and the words by which the catalogue speaks of the same.
@@ -54,8 +56,8 @@ SYNONYMS: Final[Mapping[str, tuple[str, ...]]] = {
     "peak": ("mode",),
     "frequent": ("mode", "profile"),
     "error": ("se", "standard"),
-    "uncertainty": ("se", "standard"),
-    "confidence": ("se", "standard"),
+    "uncertainty": ("resampling", "interval", "bootstrap", "se", "standard"),
+    "confidence": ("resampling", "interval", "bootstrap", "se", "standard"),
     "clean": ("profile", "sentinels"),
     "quality": ("profile", "sentinels"),
     "missing": ("profile", "null"),
@@ -120,7 +122,10 @@ def nearest(word: str, catalogue: Mapping[str, "Function"]) -> list[str]:
 def _places(function: "Function") -> list[tuple[float, frozenset[str]]]:
     family = {function.family, "weighted"} if "w" in function.columns else {function.family}
     return [
-        (_NAME, frozenset(_words(function.name))),
+        (
+            _TABLE_NAME if function.kind == "table" else _NAME,
+            frozenset(_words(function.name)),
+        ),
         (_FAMILY, frozenset(family)),
         (_MEANING, frozenset(_words(function.meaning))),
         (_RESULT, frozenset(_words(" ".join(function.fields)))),

@@ -73,7 +73,7 @@ def compile_driver(
                     compiled.compile(signature)
                 else:
                     compiled._cache = _driver_cache(function, folder)
-                    with _only_one_process(folder):
+                    with _only_one_process(folder, name):
                         compiled.compile(signature)
             return compiled
         finally:
@@ -152,14 +152,14 @@ def _cache_folder() -> Path | None:
 
 
 @contextlib.contextmanager
-def _only_one_process(folder: Path) -> Iterator[None]:
-    """Hold the folder's lock: numba's index of compiled code is not made for two writers."""
+def _only_one_process(folder: Path, name: str) -> Iterator[None]:
+    """Hold a loop's lock: numba's index of its compiled code is not made for two writers."""
     try:
         import fcntl
     except ImportError:  # no flock here: the worst case is compiling twice
         yield
         return
-    with (folder / "lock").open("w") as lock:
+    with (folder / f"{name}.lock").open("w") as lock:
         fcntl.flock(lock, fcntl.LOCK_EX)
         yield
 
