@@ -5,7 +5,6 @@ from typing import Final
 from midspread.udfs.declaring import Parameter, table_function
 from midspread.udfs.resampling.statistics import STATISTIC, read_statistic
 from midspread.udfs.sensitivity import values_left_out as values_left_out
-from midspread.udfs.tables.held_out_errors import whole
 from midspread.udfs.tables.relations import (
     BY,
     column,
@@ -14,6 +13,7 @@ from midspread.udfs.tables.relations import (
     quoted_name,
     quoted_text,
     relation,
+    whole,
 )
 
 _TOP: Final = Parameter(

@@ -6,7 +6,6 @@ from midspread.udfs.declaring import Parameter, table_function
 from midspread.udfs.resampling.randomness import SEED
 from midspread.udfs.sensitivity import joint_estimates as joint_estimates
 from midspread.udfs.tables.comparing import CONFIDENCE, checked_number
-from midspread.udfs.tables.held_out_errors import whole
 from midspread.udfs.tables.relations import (
     BY,
     column,
@@ -15,6 +14,7 @@ from midspread.udfs.tables.relations import (
     quoted_name,
     quoted_text,
     relation,
+    whole,
 )
 
 _RESAMPLES: Final = Parameter(
