@@ -194,7 +194,8 @@ SELECT route, any_value(choices) AS choices,
        any_value(share_excluding_zero)    AS excluding_zero,
        any_value(expected_excluding_zero) AS by_chance
 FROM choices_table(
-    '(FROM ''dwell/2031-06.parquet'' WHERE route IN (''L2'', ''L7'', ''L9''))',
+    '(FROM ''dwell/2031-06.parquet''
+      WHERE route IN (''L2'', ''L7'', ''L9''))',
     'dwell_s', 'payment', by := 'route', shuffles := 100)
 GROUP BY route
 ORDER BY excluding_zero DESC""",

@@ -1,11 +1,14 @@
 """What all tests share: a connection with our functions, and a way to ask for one figure."""
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import zlib
 from typing import Any
 
+import Callable
 import duckdb
+import Iterator
 import numpy as np
 import pytest
+import Sequence
 
 from midspread.udfs import functions, register
 
@@ -47,3 +50,25 @@ def estimate(connection: duckdb.DuckDBPyConnection) -> Estimate:
 def generator() -> np.random.Generator:
     """Random numbers, the same ones in every run."""
     return np.random.default_rng(20310307)
+
+
+# Products of every function with every form of a call: a quarter of them, the same each time, keeps
+# the run short; ``--exhaustive`` runs them all.
+_PRODUCTS = ("test_table_places.py", "test_table_refusals.py", "test_bootstrap_draws.py")
+
+
+def pytest_addoption(parser: pytest.Parser) -> None:
+    """Add ``--exhaustive``."""
+    parser.addoption("--exhaustive", action="store_true", help="run every combination")
+
+
+def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item]) -> None:
+    """Leave three quarters of the large products out unless all are asked for."""
+    if config.getoption("--exhaustive"):
+        return
+    items[:] = [
+        item
+        for item in items
+        if not item.nodeid.partition("::")[0].endswith(_PRODUCTS)
+        or zlib.crc32(item.nodeid.encode()) % 4 == 0
+    ]
