@@ -1,14 +1,12 @@
 """What all tests share: a connection with our functions, and a way to ask for one figure."""
 
-from collections.abc import zlib
+import zlib
+from collections.abc import Callable, Iterator, Sequence
 from typing import Any
 
-import Callable
 import duckdb
-import Iterator
 import numpy as np
 import pytest
-import Sequence
 
 from midspread.udfs import functions, register
 
