@@ -9,6 +9,7 @@ import duckdb
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
+from midspread.engine.grids.comparing import found_grid
 from midspread.engine.grids.definitions import one_column
 from midspread.engine.grids.entering import equip
 from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind
@@ -107,14 +108,7 @@ def _change(
     store = Store.open(store_path, create=False)
     try:
         with store.writing() as engine:
-            grids = ledger.grids(engine)
-            before = grids.get(name.casefold())
-            if before is None:
-                meant = nearest(name, [one.name for one in grids.values()])
-                hint = (
-                    f"did you mean {meant}?" if meant else "midspread show lists those there are."
-                )
-                raise MidspreadError(f"column: there is no grid {name}; {hint}")
+            before = found_grid(engine, "column", name)
             if before.version == 0:
                 raise MidspreadError(
                     f"column: {before.name} has not been computed yet; run midspread refresh "

@@ -46,11 +46,12 @@ def history(store_path: Path, name: str) -> "pa.Table":
             found_grid(engine, "history", name)
         table = engine.sql(
             "SELECT c.moment::TIMESTAMP(0) AS moment, c.action, v.version, v.row_count AS rows,"
-            " nullif(c.key, '') AS key, nullif(c.name, '') AS column, c.old, c.new,"
+            " nullif(c.key, '') AS key, nullif(c.name, '') AS column, c.old,"
+            " CASE WHEN c.action IN ('keep', 'refresh') THEN NULL ELSE c.new END AS new,"
             " nullif(c.note, '') AS note"
             " FROM store.ledger.changes AS c LEFT JOIN store.ledger.versions AS v"
-            " ON lower(v.grid) = lower(c.grid) AND v.made BETWEEN c.moment - INTERVAL 1 SECOND"
-            " AND c.moment + INTERVAL 1 SECOND AND c.action IN ('keep', 'refresh')"
+            " ON lower(v.grid) = lower(c.grid) AND c.action IN ('keep', 'refresh')"
+            " AND v.version = TRY_CAST(c.new AS INTEGER)"
             f" WHERE lower(c.grid) = {literal(name.lower())}"
             " ORDER BY c.stamp DESC, c.key, c.name"
         ).to_arrow_table()

@@ -4,8 +4,8 @@ from pathlib import Path
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
+from midspread.engine.grids.comparing import found_grid
 from midspread.engine.grids.restoring import note_undo
-from midspread.engine.nearest import nearest
 from midspread.engine.store.store import Store
 
 
@@ -35,13 +35,7 @@ def discard(store_path: Path, name: str, *, with_dependents: bool = False) -> li
     try:
         with store.writing() as engine:
             grids = ledger.grids(engine)
-            if name.casefold() not in grids:
-                meant = nearest(name, [one.name for one in grids.values()])
-                hint = (
-                    f"did you mean {meant}?" if meant else "midspread show lists those there are."
-                )
-                raise MidspreadError(f"discard: there is no grid {name}; {hint}")
-            going = [name.casefold()]
+            going = [found_grid(engine, "discard", name).folded]
             for folded in going:  # grows while it is walked
                 going += [
                     other.folded

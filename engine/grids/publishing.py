@@ -78,7 +78,7 @@ def publish(
                 computed.record.to_json(),
             ],
         )
-        ledger.log(engine, written.stamp, grid.name, command, note=cause)
+        ledger.log(engine, written.stamp, grid.name, command, new=str(written.version), note=cause)
     ledger.write_grid(engine, written)
     return written, changed
 
