@@ -85,14 +85,14 @@ def _print_all(console: "Console", known: Mapping[str, "Function"]) -> None:
     from midspread.cli.tables import FAINT, HEAD, INDENT, print_lines
     from midspread.cli.wrapping import wrapped
 
+    room = min(console.width, WIDEST) - INDENT
     for heading, members in families(known.values()):
-        print_lines(console, [Text(heading, style=HEAD)])
+        print_lines(console, [Text(line, style=HEAD) for line in wrapped(heading, room)])
         print_lines(console, [*list_lines(members, console.width), Text()])
     words = (
         "midspread functions NAME explains one and shows an example; midspread functions WORD "
         "finds some by meaning, such as spread."
     )
-    room = min(console.width, WIDEST) - INDENT
     print_lines(console, [Text(line, style=FAINT) for line in wrapped(words, room)])
 
 

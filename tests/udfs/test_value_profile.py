@@ -105,9 +105,9 @@ def test_against_python(
     connection: duckdb.DuckDBPyConnection, by: list[str], seed: int, rows: int
 ) -> None:
     drawn = drawn_table(seed, rows)
-    connection.register("given", drawn)
-    connection.execute("CREATE OR REPLACE TEMP TABLE drawn AS FROM given")
-    connection.unregister("given")
+    connection.register("drawn_rows", drawn)
+    connection.execute("CREATE OR REPLACE TEMP TABLE drawn AS FROM drawn_rows")
+    connection.unregister("drawn_rows")
     found = answer(connection, f"FROM value_profile('drawn', by := {by!r}::VARCHAR[])")
     records = drawn.to_pylist()
     groups: dict[tuple[Any, ...], list[Row]] = {}
@@ -132,9 +132,9 @@ def test_longest_runs_against_python(connection: duckdb.DuckDBPyConnection, by: 
     positions = list(range(297)) + [None] * 3
     random.Random(5).shuffle(positions)
     drawn = drawn.set_column(2, "at", pa.array(positions, pa.int64()))
-    connection.register("given", drawn)
-    connection.execute("CREATE OR REPLACE TEMP TABLE drawn AS FROM given")
-    connection.unregister("given")
+    connection.register("drawn_rows", drawn)
+    connection.execute("CREATE OR REPLACE TEMP TABLE drawn AS FROM drawn_rows")
+    connection.unregister("drawn_rows")
     found = answer(
         connection, f"FROM value_profile('drawn', by := {by!r}::VARCHAR[], position := 'at')"
     )
