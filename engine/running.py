@@ -72,6 +72,7 @@ class Runner:
         self._connection = connection
         self._functions = functions
         self._control: Control | None = None
+        self._equipped: set[str] = set()
 
     @cached_property
     def messages(self) -> "Messages":
@@ -134,20 +135,31 @@ class Runner:
         if self._control is not None:
             self._control.reset()
 
-    def _equip(self) -> None:
-        if self._control is None:
-            from midspread.udfs import Control, register
+    def _equip(self, text: str | None = None) -> bool:
+        """Register the functions that a text names, without a text all; whether any were missing.
 
-            control = Control()
-            register(self._connection, control=control)
-            self._control = control
+        To register all of them takes a tenth of a second.
+        """
+        lowered = None if text is None else text.lower()
+        wanted = {name for name in self._functions if lowered is None or name in lowered}
+        if any(self._functions[name].kind == "table" for name in wanted):
+            wanted = set(self._functions)
+        if wanted <= self._equipped:
+            return False
+        from midspread.udfs import Control, register
+
+        control = self._control or Control()
+        register(self._connection, control=control, names=wanted)
+        self._control = control
+        self._equipped |= wanted
+        return True
 
     def _run(self, sql: str, statement: Statement, act: Callable[[str], Result]) -> Result:
-        self._equip()
+        self._equip(statement.text)
         prepared = self._prepare(statement, faster=True)
         try:
             try:
-                return act(prepared.text)
+                return self._planned(prepared.text, act)
             except _REFUSED_WHILE_PLANNING:
                 if not prepared.is_faster:
                     raise
@@ -155,6 +167,15 @@ class Runner:
                 return act(prepared.text)
         except duckdb.Error as error:
             raise self.messages.explained(error, sql, statement, prepared) from None
+
+    def _planned(self, text: str, act: Callable[[str], Result]) -> Result:
+        """Act on a text; once more with all functions where only a view or a macro names one."""
+        try:
+            return act(text)
+        except _REFUSED_WHILE_PLANNING:
+            if not self._equip():
+                raise
+            return act(text)
 
     def _rows(self, text: str) -> "pa.Table":
         # A relation hands over Arrow without another copy of the rows, execute() does not.

@@ -226,3 +226,15 @@ def test_every_clause_on_every_function(session: Session, function: Any) -> None
         f"SELECT stop, {call} FROM visits WHERE ramp_used GROUP BY stop ORDER BY stop"
     ).rows()
     assert repr([row for row in filtered if row[0] in dict(where)]) == repr(where)
+
+
+def test_a_view_of_a_source_names_a_function_that_the_query_does_not(tmp_path: Path) -> None:
+    path = tmp_path / "extract.duckdb"
+    with duckdb.connect(str(path)) as made:
+        made.execute("CREATE MACRO trimmed_mean(x, share) AS sum(x)")  # so that the view is taken
+        made.execute("CREATE VIEW middle AS SELECT trimmed_mean(i, 0.25) AS m FROM range(5) t(i)")
+        made.execute("DROP MACRO trimmed_mean")
+    with Session(use_store=False, sources={"depot": path}) as session:
+        assert session.query("SELECT mad_scale(i) FROM range(5) t(i)").rows() != []
+        assert session.query("FROM depot.middle").rows() == [(2.0,)]
+        assert session.query("SELECT huber_location(i) FROM range(5) t(i)").rows() == [(2.0,)]

@@ -7,7 +7,6 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 import pyarrow as pa
-import pyarrow.compute as pc
 
 from midspread.udfs.binding.arrow_columns import (
     arrow_mask,
@@ -134,6 +133,8 @@ class Batch:
         array, values = self._given[name], self.keys(column).values
         if pa.types.is_null(array.type):
             return np.full(self.size, -1, dtype=np.int64)
+        import pyarrow.compute as pc  # slow to import, and most queries do without
+
         codes = pc.index_in(array, value_set=values)
         unknown = is_missing(codes) & ~is_missing(array)
         if unknown.any():
@@ -155,6 +156,8 @@ def ranked(function: str, column: str, values: pa.Array) -> Keys:
     ParameterError
         When the values are records or lists.
     """
+    import pyarrow.compute as pc  # slow to import, and most queries do without
+
     values = single_chunk(values)
     if pa.types.is_null(values.type):
         return Keys(np.full(len(values), -1, dtype=np.int64), values.slice(0, 0))

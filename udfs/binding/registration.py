@@ -3,7 +3,7 @@
 import functools
 import inspect
 import json
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Collection, Sequence
 from typing import Any
 
 import duckdb
@@ -31,8 +31,9 @@ def register(
     *,
     control: Control | None = None,
     threads: int | None = None,
+    names: Collection[str] | None = None,
 ) -> None:
-    """Equip a DuckDB connection with every function of the catalogue.
+    """Equip a DuckDB connection with the functions of the catalogue.
 
     Parameters
     ----------
@@ -44,6 +45,9 @@ def register(
         connections of the same instance.
     threads : int, optional
         Threads that work on one batch; DuckDB's own setting when not given.
+    names : collection of str, optional
+        Only these functions, for a quicker start; all of them when not given, and also when there
+        is a table function among them, since those are written in terms of others.
 
     Examples
     --------
@@ -55,9 +59,11 @@ def register(
     if threads is None:
         row = connection.execute("SELECT current_setting('threads')").fetchone()
         threads = int(row[0]) if row else 1
-    listed = functions().values()  # also imports the modules that declare helpers
+    known = functions()  # also imports the modules that declare helpers
+    if names is None or any(known[name].kind == "table" for name in names):
+        names = known
+    listed = [function for name, function in known.items() if name in names]
     binding = _Binding(connection, Work(control or Control(), threads))
-    listed = functions().values()  # which also declares the helpers of the families
     binding.register_shared()
     for register_one, kind in (
         (binding.register_aggregate, "aggregate"),
