@@ -7,12 +7,12 @@ the tests walk are all derived from these declarations.
 import inspect
 import struct
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
-from typing import Any, Final, Literal, TypeVar
+from typing import Any, Final, TypeVar
 
 import numpy as np
 import numpy.typing as npt
 
+from midspread.udfs.function import Family, Function, Helper
 from midspread.udfs.parameters import Parameter, ParameterError
 
 __all__ = [
@@ -46,91 +46,13 @@ NULL: Final[float] = struct.unpack("<d", struct.pack("<Q", _NULL_BITS))[0]
 NO_RECORD: Final = "no record"
 """What a batch aggregate may return besides its fields: which groups are NULL as a whole."""
 
-Family = Literal[
-    "location",
-    "weighted",
-    "scale",
-    "shape",
-    "association",
-    "re-expression",
-    "comparison",
-    "resampling",
-    "tables",
-]
-Kind = Literal["aggregate", "batch", "row", "table"]
 Anything = TypeVar("Anything", bound=Callable[..., Any])
 
 _COMPILED_MARK: Final = "__midspread_compiled__"
-_AGGREGATES: dict[str, "Function"] = {}
-_ROW_FUNCTIONS: dict[str, "Function"] = {}
-_TABLES: dict[str, "Function"] = {}
-_HELPERS: dict[str, "Helper"] = {}
-
-
-@dataclass(frozen=True)
-class Function:
-    """One function of the catalogue.
-
-    See `aggregate`, `batch_aggregate`, `row_function` and `table_function` for how it is made.
-    """
-
-    name: str
-    family: Family
-    kind: Kind
-    columns: tuple[str, ...]
-    parameters: tuple[Parameter, ...]
-    fields: tuple[str, ...]
-    formula: str
-    source: str
-    breakdown: str
-    cost: str
-    smallest_n: int
-    example: str
-    description: str
-    version: int = 1
-    shares_sort: bool = False
-    watches: bool = False
-    kernel: Callable[..., Any] | None = None
-    rows: Callable[[int], int] | None = None
-    labels: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
-    field_types: Mapping[str, str] = field(default_factory=dict)
-    keys: tuple[str, ...] = ()
-    body: str = ""
-
-    @property
-    def is_aggregate(self) -> bool:
-        """Whether a call makes one value of many rows."""
-        return self.kind in ("aggregate", "batch")
-
-    @property
-    def meaning(self) -> str:
-        """The first sentence of the description."""
-        return self.description.split("\n", 1)[0]
-
-    @property
-    def signature(self) -> str:
-        """As written in SQL, with the defaults: ``trimmed_mean(x, share := 0.2)``."""
-        shown = [*self.columns]
-        for parameter in self.parameters:
-            default = parameter.default_text
-            shown.append(f"{parameter.name} := {default}" if default else parameter.name)
-        return f"{self.name}({', '.join(shown)})"
-
-    @property
-    def place(self) -> str:
-        """Where a call goes in a query."""
-        if self.kind == "table":
-            return "in FROM, as a table"
-        return "in SELECT, as AVG is" if self.is_aggregate else "anywhere, as ROUND is"
-
-
-@dataclass(frozen=True)
-class Helper:
-    """An Arrow function that macros and table functions call; it is in no reference."""
-
-    name: str
-    result: str
-    compute: Callable[..., Any]
+_AGGREGATES: dict[str, Function] = {}
+_ROW_FUNCTIONS: dict[str, Function] = {}
+_TABLES: dict[str, Function] = {}
+_HELPERS: dict[str, Helper] = {}
 
 
 def compiled(function: Anything) -> Anything:
