@@ -100,7 +100,12 @@ def example_query(function: "Function") -> str:
     """The example as a whole query over the sample."""
     if function.kind == "table" or function.example.lstrip().upper().startswith("SELECT"):
         return function.example
-    return f"SELECT {function.example} FROM visits"
+    call = function.example
+    if function.rows is not None:
+        call = f"unnest({call}, recursive := true)"
+    elif function.fields:
+        call = f"unnest({call})"
+    return f"SELECT {call} FROM visits"
 
 
 def as_record(function: "Function") -> dict[str, Any]:
