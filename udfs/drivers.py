@@ -233,11 +233,19 @@ def _ranked_record(
 
 
 @compiled
-def _ranked_pairs(
-    x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int
+def _watching_ranked_record(
+    x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int, control: Indices
 ) -> None:
-    """For a kernel of pairs that deals with NaN itself; all groups share one list of numbers."""
-    kernel(x, w, p[0], out[rows[g], c:])
+    """For a kernel that deals with NaN itself; all groups share one list of numbers."""
+    kernel(x, p[0], out[rows[g], c:], control)
+
+
+@compiled
+def _watching_ranked_pairs(
+    x: Values, w: Values, p: Values, g: int, out: Values, rows: Indices, c: int, control: Indices
+) -> None:
+    """The same for a kernel of pairs."""
+    kernel(x, w, p[0], out[rows[g], c:], control)
 
 
 @compiled
@@ -288,9 +296,14 @@ def ranked_driver(name: str, function: Callable[..., None]) -> Callable[..., Non
     return _compiled_loop(name, function, _ranked_record)
 
 
-def pairs_driver(name: str, function: Callable[..., None]) -> Callable[..., None]:
-    """The compiled loop of a kernel ``(y, x, numbers, out)`` that handles NaN by itself."""
-    return _compiled_loop(name, function, _ranked_pairs)
+def watching_ranked_driver(name: str, function: Callable[..., None]) -> Callable[..., None]:
+    """The same for a kernel ``(x, numbers, out, control)`` that heeds a request to stop."""
+    return _watching_loop(name, function, _watching_ranked_record)
+
+
+def watching_pairs_driver(name: str, function: Callable[..., None]) -> Callable[..., None]:
+    """The same for a kernel of pairs ``(y, x, numbers, out, control)``."""
+    return _watching_loop(name, function, _watching_ranked_pairs)
 
 
 @functools.cache

@@ -120,6 +120,23 @@ def test_box_cox_power_as_scipy(estimate: Estimate, name: str) -> None:
     assert found["log_likelihood"] == pytest.approx(float(likelihood), rel=1e-12)
 
 
+# R 4.2.2, MASS 7.3-58.2: of b <- boxcox(x ~ 1, lambda = seq(-1, 3, by = 1e-4), interp = FALSE)
+# the power b$x[which.max(b$y)] and range(b$x[b$y > max(b$y) - qchisq(0.95, 1) / 2]).
+MASS_BOX_COX = {
+    "rivers": (-0.5521, -0.8104, -0.3021),
+    "lynx": (0.1462, -0.0006, 0.2980),
+    "precip": (1.1352, 0.6872, 1.6092),
+    "islands": (-0.4006, -0.5853, -0.2340),
+}
+
+
+@pytest.mark.parametrize("name", MASS_BOX_COX)
+def test_box_cox_limits_as_mass(estimate: Estimate, name: str) -> None:
+    found = estimate("box_cox_power", published(name))
+    limits = (found["power"], found["lower"], found["upper"])
+    assert limits == pytest.approx(MASS_BOX_COX[name], abs=1.01e-4)
+
+
 @pytest.mark.parametrize("name", NAMES)
 def test_yeo_johnson_power_as_scipy(estimate: Estimate, name: str) -> None:
     x = np.array(published(name))

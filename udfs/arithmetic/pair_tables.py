@@ -131,37 +131,102 @@ def count_ratios(
     a: Values, b: Values, low: float, high: float, ends_low: Places, ends_high: Places
 ) -> tuple[int, int]:
     """Do for ratios what `count_sums` does for sums: larger divisors reach farther."""
+    return count_up_to_ratio(a, b, low, ends_low), count_up_to_ratio(a, b, high, ends_high)
+
+
+@compiled
+def count_up_to_ratio(a: Values, b: Values, bound: float, ends: Places) -> int:
+    """Count the ratios ≤ bound; ``ends[i]`` becomes the first column of row i that exceeds it.
+
+    Each step of the walk waits for the one before it, so four quarters of it go side by side.
+    """
     rows, columns = a.size, b.size
+    quarter = _steps_along(a, b, bound) // 4
+    first, second, third = 0, 0, 0
+    if quarter > 0:
+        first = _row_after(a, b, bound, quarter)
+        second = _row_after(a, b, bound, 2 * quarter)
+        third = _row_after(a, b, bound, 3 * quarter)
     i, j, count = 0, 0, 0
-    p, q, count_high = 0, 0, 0
-    while q < columns and i < rows:
-        within = int(b[j] / a[i] <= low)
-        within_high = int(b[q] / a[p] <= high)
-        ends_low[i] = j
-        ends_high[p] = q
+    k, m, count_1 = first, quarter - first, 0
+    p, q, count_2 = second, 2 * quarter - second, 0
+    r, s, count_3 = third, 3 * quarter - third, 0
+    for _ in range(quarter):
+        within = int(b[j] / a[i] <= bound)
+        within_1 = int(b[m] / a[k] <= bound)
+        within_2 = int(b[q] / a[p] <= bound)
+        within_3 = int(b[s] / a[r] <= bound)
+        ends[i], ends[k], ends[p], ends[r] = j, m, q, s
         count += (1 - within) * j
-        count_high += (1 - within_high) * q
+        count_1 += (1 - within_1) * m
+        count_2 += (1 - within_2) * q
+        count_3 += (1 - within_3) * s
         i += 1 - within
         j += within
-        p += 1 - within_high
-        q += within_high
-    while j < columns and i < rows:
-        within = int(b[j] / a[i] <= low)
-        ends_low[i] = j
-        count += (1 - within) * j
-        i += 1 - within
-        j += within
-    while q < columns and p < rows:
-        within_high = int(b[q] / a[p] <= high)
-        ends_high[p] = q
-        count_high += (1 - within_high) * q
-        p += 1 - within_high
-        q += within_high
-    for row in range(i, rows):
-        ends_low[row] = columns
-    for row in range(p, rows):
-        ends_high[row] = columns
-    return count + (rows - i) * columns, count_high + (rows - p) * columns
+        k += 1 - within_1
+        m += within_1
+        p += 1 - within_2
+        q += within_2
+        r += 1 - within_3
+        s += within_3
+    while s < columns and r < rows:
+        within = int(b[s] / a[r] <= bound)
+        ends[r] = s
+        count += (1 - within) * s
+        r += 1 - within
+        s += within
+    for row in range(r, rows):
+        ends[row] = columns
+    if quarter > 0:  # two quarters wrote to the row where they meet
+        _end_row(a, b, bound, first, quarter - first, ends)
+        _end_row(a, b, bound, second, 2 * quarter - second, ends)
+        _end_row(a, b, bound, third, 3 * quarter - third, ends)
+    return count + count_1 + count_2 + count_3 + (rows - r) * columns
+
+
+@compiled
+def _steps_along(a: Values, b: Values, bound: float) -> int:
+    """How many steps the walk takes until it has passed the last row or the last column."""
+    rows, columns = a.size, b.size
+    low = 0
+    if b[columns - 1] / a[rows - 1] <= bound:
+        high = rows - 1
+        while low < high:
+            middle = (low + high) // 2
+            if b[columns - 1] / a[middle] <= bound:
+                high = middle
+            else:
+                low = middle + 1
+        return columns + low
+    high = columns - 1
+    while low < high:
+        middle = (low + high) // 2
+        if b[middle] / a[rows - 1] > bound:
+            high = middle
+        else:
+            low = middle + 1
+    return rows + low
+
+
+@compiled
+def _row_after(a: Values, b: Values, bound: float, steps: int) -> int:
+    """The row that the walk stands in after so many steps."""
+    low, high = max(0, steps - b.size), min(steps, a.size)
+    while low < high:
+        middle = (low + high) // 2
+        if b[steps - middle - 1] / a[middle] <= bound:
+            high = middle
+        else:
+            low = middle + 1
+    return low
+
+
+@compiled
+def _end_row(a: Values, b: Values, bound: float, row: int, column: int, ends: Places) -> None:
+    """Write where a row ends, from a column that the walk comes through."""
+    while column < b.size and b[column] / a[row] <= bound:
+        column += 1
+    ends[row] = column
 
 
 @compiled

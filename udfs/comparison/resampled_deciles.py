@@ -8,15 +8,14 @@ from typing import Final
 import numpy as np
 
 from midspread.udfs.arithmetic.beta import beta_masses
-from midspread.udfs.arithmetic.pair_tables import Places
 from midspread.udfs.compiling import compile_driver
 from midspread.udfs.declaring import Values, compiled
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.location.quantiles import harrell_davis
-from midspread.udfs.resampling.randomness import below, content_key, stream
+from midspread.udfs.resampling.randomness import content_key, stream
+from midspread.udfs.resampling.resamples import BLOCK, SPARE, resample_into
 
 DECILES: Final = 9
-_DRAWN_BETWEEN_LOOKS: Final = 1 << 22
 
 
 def _over_resamples(
@@ -64,79 +63,63 @@ def resample_loop() -> Callable[..., None]:
 def resample(
     x: Values, place: int, first: int, last: int, seed: int, moves: Values, control: Indices
 ) -> None:
-    """Draw n of the n values with replacement and move every decile, for each resample."""
+    """Draw n of the n values with replacement and move every decile, for each resample.
+
+    A resample is written out in order, so that a decile is a sum over consecutive places.
+    """
     n = x.size
     # Stream by content and seed; the place keeps two equal samples from moving together.
     key = stream(stream(content_key(x), seed), place)
-    weights = np.empty((DECILES, n + 1))
+    masses = np.empty(n)
     bounds = np.empty((DECILES, 2), np.int64)
+    widest = 0
     for k in range(DECILES):
-        cumulative_weights((k + 1) / 10.0, weights[k], bounds[k])
+        bounds[k, 0], bounds[k, 1] = _decile_masses(k, masses)
+        widest = max(widest, bounds[k, 1] - bounds[k, 0])
+    weights = np.empty((DECILES, widest))
+    for k in range(DECILES):
+        _decile_masses(k, masses)
+        total = 0.0
+        for i in range(bounds[k, 0], bounds[k, 1]):
+            total += masses[i]
+        for i in range(bounds[k, 0], bounds[k, 1]):
+            weights[k, i - bounds[k, 0]] = masses[i] / total
     origin = x[n // 2] if not math.isinf(x[n // 2]) else 0.0
-    up_to = np.empty(n + 1, np.int32)
-    for i in range(n + 1):
-        up_to[i] = i
+    away = x - origin
     at_rest = np.empty(DECILES)
     for k in range(DECILES):
-        at_rest[k] = weighted(x, origin, up_to, weights[k], bounds[k, 0], bounds[k, 1])
+        at_rest[k] = _weighted(away, weights[k], bounds[k, 0], bounds[k, 1])
+    counts = np.empty(min(n, BLOCK), np.int32)
+    drawn = np.empty(n + SPARE)
     for r in range(first, last):
-        own = stream(key, r)
-        for i in range(n + 1):
-            up_to[i] = 0
-        drawn = 0
-        while drawn < n:
-            if control[STOP] != 0:
-                return
-            stop = min(n, drawn + _DRAWN_BETWEEN_LOOKS)
-            for i in range(drawn, stop):
-                up_to[below(own, i, n) + 1] += 1
-            drawn = stop
-        for i in range(n):
-            up_to[i + 1] += up_to[i]
+        if control[STOP] != 0:
+            return
+        resample_into(stream(key, r), counts, away, drawn)
         for k in range(DECILES):
-            moved = weighted(x, origin, up_to, weights[k], bounds[k, 0], bounds[k, 1])
+            moved = _weighted(drawn, weights[k], bounds[k, 0], bounds[k, 1])
             moves[r, k] = moved - at_rest[k]
 
 
 @compiled
-def cumulative_weights(prob: float, weights: Values, bounds: Indices) -> None:
-    """Sums of Harrell and Davis's weights: ``weights[i]`` of the first i order statistics.
-
-    Weights before bounds[0] and from bounds[1] on are negligible; only what lies between is set.
-    """
-    n = weights.size - 1
-    masses = np.empty(n)
-    first, stop = beta_masses((n + 1) * prob, (n + 1) * (1.0 - prob), masses)
-    total = 0.0
-    for i in range(first, stop):
-        total += masses[i]
-    so_far = 0.0
-    for i in range(first, stop):
-        weights[i] = so_far / total
-        so_far += masses[i]
-    weights[stop] = 1.0
-    bounds[0] = first
-    bounds[1] = stop
+def _decile_masses(k: int, masses: Values) -> tuple[int, int]:
+    """Harrell and Davis's weights of decile k from 0, up to a factor: from first to stop."""
+    n = masses.size
+    prob = (k + 1) / 10.0
+    return beta_masses((n + 1) * prob, (n + 1) * (1.0 - prob), masses)
 
 
 @compiled
-def weighted(
-    x: Values, origin: float, up_to: Places, weights: Values, first: int, stop: int
-) -> float:
-    """Σ weight · (x − origin) of a resample that holds ``up_to[i]`` of the first i values."""
-    low, high = 0, x.size
-    while low < high:  # the value at rank first: the last i with up_to[i] ≤ first
-        middle = (low + high + 1) // 2
-        if up_to[middle] <= first:
-            low = middle
-        else:
-            high = middle - 1
-    total = 0.0
-    i, before = low, first
-    while before < stop:
-        after = min(up_to[i + 1], stop)
-        if after > before:
-            total += (weights[after] - weights[before]) * (x[i] - origin)
-            before = after
+def _weighted(x: Values, weights: Values, first: int, stop: int) -> float:
+    """Σ weight · x over places; four sums, as each addition waits for the one before it."""
+    a = b = c = d = 0.0
+    i = first
+    while i + 4 <= stop:
+        a += weights[i - first] * x[i]
+        b += weights[i - first + 1] * x[i + 1]
+        c += weights[i - first + 2] * x[i + 2]
+        d += weights[i - first + 3] * x[i + 3]
+        i += 4
+    while i < stop:
+        a += weights[i - first] * x[i]
         i += 1
-    return total
+    return (a + b) + (c + d)

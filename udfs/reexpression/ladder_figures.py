@@ -9,6 +9,7 @@ from midspread.udfs.arithmetic.normal import lower_normal_quantile
 from midspread.udfs.arithmetic.order_statistics import median_of_sorted, median_sorted
 from midspread.udfs.arithmetic.sums import compensated_mean
 from midspread.udfs.declaring import Values, compiled
+from midspread.udfs.drivers import STOP, Indices
 from midspread.udfs.shape.medcouple import medcouple
 from midspread.udfs.shape.skewness import quantile_skew
 
@@ -20,7 +21,7 @@ _BLOCK: Final = 64
 
 
 @compiled
-def ladder_figures(x: Values, powers: Values, out: Values) -> None:
+def ladder_figures(x: Values, powers: Values, out: Values, control: Indices) -> None:
     """Fill FIGURES for each power in turn, from sorted values, NaN last.
 
     Figures that have no value (all values equal) stay NULL.
@@ -33,6 +34,8 @@ def ladder_figures(x: Values, powers: Values, out: Values) -> None:
     scores = np.empty(n // 2)
     scored = 0
     for place in range(powers.size):
+        if control[STOP] != 0:
+            return
         power = powers[place]
         lost = 0 if power == 1.0 else (below if power > 0.0 else not_above)
         figures = out[place * _WIDTH : (place + 1) * _WIDTH]

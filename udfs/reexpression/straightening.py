@@ -9,11 +9,11 @@ import math
 from typing import Final
 
 import numpy as np
-import numpy.typing as npt
 
 from midspread.udfs.arithmetic.order_statistics import median_sorted, midpoint
 from midspread.udfs.arithmetic.sums import compensated_mean
 from midspread.udfs.declaring import NULL, Values, compiled
+from midspread.udfs.drivers import STOP, Indices
 from midspread.udfs.reexpression.ladder_figures import re_express
 
 FIGURES: Final = ("n", "n_lost", "half_slope_ratio", "winsorized_corr")
@@ -21,15 +21,13 @@ FIGURES: Final = ("n", "n_lost", "half_slope_ratio", "winsorized_corr")
 
 SHARE: Final = 0.2
 
-Indices = npt.NDArray[np.int64]
-
 _WIDTH: Final = len(FIGURES)
 _BLOCK: Final = 64
 _FEWEST: Final = 3
 
 
 @compiled
-def straightening(y: Values, x: Values, powers: Values, out: Values) -> None:
+def straightening(y: Values, x: Values, powers: Values, out: Values, control: Indices) -> None:
     """Fill FIGURES for each pair of powers; the pairs come sorted by y, then x, NaN last in y."""
     n = y.size
     spoilt = math.isnan(y[n - 1])
@@ -51,7 +49,9 @@ def straightening(y: Values, x: Values, powers: Values, out: Values) -> None:
                 if spoilt or (_fits(y[i], y_kind) and _fits(x[i], x_kind)):
                     rows[kept] = i
                     kept += 1
-            _one_kind(y[rows[:kept]], x[rows[:kept]], powers, y_kind, x_kind, n, spoilt, out)
+            _one_kind(
+                y[rows[:kept]], x[rows[:kept]], powers, y_kind, x_kind, n, spoilt, out, control
+            )
 
 
 @compiled
@@ -77,6 +77,7 @@ def _one_kind(
     rows: int,
     spoilt: bool,
     out: Values,
+    control: Indices,
 ) -> None:
     """The pairs of powers that take the same rows, which are given."""
     n, count = y.size, powers.size
@@ -89,6 +90,8 @@ def _one_kind(
     room = np.empty(n)
     if n >= _FEWEST and not spoilt:
         for place in range(count):
+            if control[STOP] != 0:
+                return
             if _kind(powers[place]) == y_kind:
                 _winsorized_unit(y, powers[place], room, unit_y[place])
             if _kind(powers[place]) == x_kind:
@@ -101,6 +104,8 @@ def _one_kind(
         for j in range(count):
             if _kind(powers[i]) != y_kind or _kind(powers[j]) != x_kind:
                 continue
+            if control[STOP] != 0:
+                return
             figures = out[(i * count + j) * _WIDTH : (i * count + j + 1) * _WIDTH]
             figures[0] = n
             figures[1] = rows - n

@@ -19,7 +19,7 @@ from midspread.udfs.declaring import NULL, Values, compiled
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.location.trimming import cut_from_each_tail, trimmed_mean
 from midspread.udfs.scale.winsorized import winsorized_deviation
-from midspread.udfs.sensitivity.pooled import kept_by_rule, loses, pool, rank, re_express, split
+from midspread.udfs.sensitivity.pooled import Windows, loses, pool, rank, re_express, split
 
 WIDTH: Final = 6
 """Figures of a choice, at the places below; those of two levels with the baseline first."""
@@ -40,16 +40,17 @@ def _over_choices(
     starts: Indices,
     pairs: Indices,
     powers: Values,
-    rules: Indices,
+    windows: Windows,
     shares: Values,
     out: Values,
     control: Indices,
 ) -> None:
     """Fill ``out[r, choice]`` for the samples pairs[r], the baseline, and pairs[r] + 1.
 
-    Choices come re-expression by re-expression, rule by rule, estimator by estimator. What would
-    lose a value stays NULL.
+    Choices come re-expression by re-expression, rule by rule, estimator by estimator;
+    ``windows[r, power, rule]`` says what a rule keeps. What would lose a value stays NULL.
     """
+    rules = windows.shape[2]
     for r in range(pairs.size):
         s = pairs[r]
         m, n = starts[s + 1] - starts[s], starts[s + 2] - starts[s + 1]
@@ -58,7 +59,7 @@ def _over_choices(
         choice = 0
         for p in range(powers.size):
             if loses(x, powers[p]):
-                choice += rules.size * shares.size
+                choice += rules * shares.size
                 continue
             y = np.empty(m + n)
             size = 0.0
@@ -70,12 +71,10 @@ def _over_choices(
             baseline_places, other_places = np.empty(m, np.int64), np.empty(n, np.int64)
             split(y, labels, 0, of_baseline, baseline_places)
             split(y, labels, 1, of_other, other_places)
-            for rule in range(rules.size):
+            for rule in range(rules):
                 if control[STOP] != 0:
                     return
-                first, stop = 0, m + n
-                if not math.isnan(y[0]):
-                    first, stop = kept_by_rule(y, rules[rule])
+                first, stop = windows[r, p, rule, 0], windows[r, p, rule, 1]
                 a = rank(baseline_places, first)
                 b = rank(baseline_places, stop)
                 c, d = rank(other_places, first), rank(other_places, stop)
@@ -91,8 +90,8 @@ def choices_loop() -> Callable[..., None]:
         _over_choices,
         {},
         "over_choices",
-        "void(float64[::1], int64[::1], int64[::1], float64[::1], int64[::1], float64[::1], "
-        "float64[:, :, ::1], int64[::1])",
+        "void(float64[::1], int64[::1], int64[::1], float64[::1], int64[:, :, :, ::1], "
+        "float64[::1], float64[:, :, ::1], int64[::1])",
     )
 
 

@@ -18,6 +18,7 @@ from midspread.udfs.sensitivity.choice_figures import (
     N,
     choices_loop,
 )
+from midspread.udfs.sensitivity.rules import rules_loop
 from midspread.udfs.sensitivity.shuffled_choices import STEPS, shuffles_loop
 from midspread.udfs.sensitivity.two_levels import two_levels, whole_numbers
 
@@ -129,21 +130,16 @@ def _compute(
     """Fill in the figures of each choice and of each shuffle for the groups with two levels."""
     pairs = samples.groups[chosen]
     sizes = samples.starts[pairs + 2] - samples.starts[pairs]
+    windows = np.zeros((chosen.size, grid.powers.size, grid.rules.size, 2), dtype=np.int64)
     figures = np.full((chosen.size, grid.size, WIDTH), NULL)
     figures[:, :, N : N + 2] = -1.0
-    loop = choices_loop()
+    keep, loop = rules_loop(), choices_loop()
 
     def choose(first: int, last: int) -> None:
-        loop(
-            samples.values,
-            samples.starts,
-            pairs[first:last],
-            grid.powers,
-            grid.rules,
-            grid.shares,
-            figures[first:last],
-            work.control.cells,
-        )
+        rows = samples.values, samples.starts, pairs[first:last], grid.powers
+        kept, cells = windows[first:last], work.control.cells
+        keep(*rows, grid.rules, kept, cells)
+        loop(*rows, kept, grid.shares, figures[first:last], cells)
 
     work_off(choose, sizes, work)
     found[chosen] = figures
@@ -151,7 +147,7 @@ def _compute(
     has_nan: list[bool] = np.any(np.isnan(samples.values[ends]), axis=1).tolist()
     jobs = []
     for row, pair, size, nan in zip(
-        chosen.tolist(),
+        range(chosen.size),
         pairs.tolist(),
         sizes.tolist(),
         has_nan,
@@ -164,6 +160,7 @@ def _compute(
         return
     listed = np.array(jobs, dtype=np.int64)
     critical, normal = _critical_values(grid.confidence)
+    agreeing, excluding = np.zeros((2, chosen.size, grid.shuffles))
     shuffling = shuffles_loop()
 
     def shuffle(first: int, last: int) -> None:
@@ -172,18 +169,19 @@ def _compute(
             samples.starts,
             listed[first:last],
             grid.powers,
-            grid.rules,
+            windows,
             grid.shares,
             critical,
             normal,
             grid.seed,
-            by_chance[0],
-            by_chance[1],
+            agreeing,
+            excluding,
             work.control.cells,
         )
 
     own = samples.starts[listed[:, 1] + 2] - samples.starts[listed[:, 1]]
     work_off(shuffle, own * (listed[:, 3] - listed[:, 2]), work)
+    by_chance[:, chosen] = agreeing, excluding
 
 
 def _critical_values(confidence: float) -> tuple[Values, float]:

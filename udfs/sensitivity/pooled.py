@@ -1,4 +1,4 @@
-"""Two samples pooled, re-expressed and cut by a rule that does not see the labels."""
+"""Two samples pooled and re-expressed."""
 
 import math
 from typing import Final
@@ -8,17 +8,10 @@ import numpy.typing as npt
 
 from midspread.udfs.declaring import Values, compiled
 from midspread.udfs.drivers import Indices
-from midspread.udfs.outlying.limits import LIMIT_FIELDS, limits_of_group
-from midspread.udfs.outlying.limits import RULES as LIMIT_RULES
 
 Labels = npt.NDArray[np.int8]
-
-NO_RULE: Final = "none"
-RULES: Final = (NO_RULE, *LIMIT_RULES)
-"""Rules for outlying values; kernels know them by their place."""
-_FENCE_SPREADS: Final = 1.5
-_MAD_SCALES: Final = 3.0
-_MEDIAN_MAD: Final = RULES.index("median_mad")
+Windows = npt.NDArray[np.int64]
+"""First and stop of what is kept of sorted values."""
 
 _LARGEST_TO_SUBTRACT: Final = 4e307
 
@@ -95,25 +88,6 @@ def largest_finite(x: Values) -> float:
     while high > low and math.isinf(x[high]):
         high -= 1
     return 0.0 if math.isinf(x[low]) else max(abs(x[low]), abs(x[high]))
-
-
-@compiled
-def kept_by_rule(y: Values, rule: int) -> tuple[int, int]:
-    """First and stop of the sorted values that a rule leaves; limits without width leave all."""
-    if rule == 0:
-        return 0, y.size
-    limits, settings = np.empty(len(LIMIT_FIELDS)), np.empty(2)
-    settings[0] = rule - 1
-    settings[1] = _MAD_SCALES if rule == _MEDIAN_MAD else _FENCE_SPREADS
-    limits_of_group(y, settings, limits)
-    if not limits[0] < limits[1]:
-        return 0, y.size
-    first, stop = 0, y.size
-    while first < stop and y[first] < limits[0]:
-        first += 1
-    while stop > first and y[stop - 1] > limits[1]:
-        stop -= 1
-    return first, stop
 
 
 @compiled

@@ -18,7 +18,7 @@ from midspread.udfs.declaring import Values, compiled
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.resampling.randomness import below, content_key, stream
 from midspread.udfs.sensitivity.choice_figures import median_place, without_rounding
-from midspread.udfs.sensitivity.pooled import kept_by_rule, loses, pool, rank, re_express
+from midspread.udfs.sensitivity.pooled import Windows, loses, pool, rank, re_express
 
 STEPS: Final = 1024
 """Critical values are given for 1 / df = 0, 1/STEPS, …, 1, as logarithms; between, on a line."""
@@ -30,7 +30,7 @@ def _over_shuffles(
     starts: Indices,
     jobs: Indices,
     powers: Values,
-    rules: Indices,
+    windows: Windows,
     shares: Values,
     critical: Values,
     normal: float,
@@ -43,6 +43,8 @@ def _over_shuffles(
 
     Parameters
     ----------
+    windows : ndarray of int64, shape (rows, powers, rules, 2)
+        What each rule keeps of the values on each rung.
     critical, normal : ndarray of float64, float
         Two-sided critical values of Student's t by 1 / df, and of the normal.
     agreeing, excluding : ndarray of float64, shape (rows, shuffles)
@@ -58,11 +60,10 @@ def _over_shuffles(
         key = stream(stream(content_key(x), seed), min(m, n))
         rungs = np.empty((powers.size, total))
         sizes = np.empty(powers.size)
-        windows = np.empty((powers.size, rules.size, 2), np.int64)
         for p in range(powers.size):
             sizes[p] = -1.0
             if not loses(x, powers[p]):
-                sizes[p] = _prepare(x, powers[p], rules, rungs[p], windows[p])
+                sizes[p] = _prepare(x, powers[p], rungs[p])
         side = 1 if n <= m else 0
         # One place more than is needed, so that dealing never asks.
         chosen, rest = np.empty(min(m, n) + 1, np.int64), np.empty(max(m, n) + 1, np.int64)
@@ -81,12 +82,12 @@ def _over_shuffles(
                 y = rungs[p]
                 _sums_from_the_middle(y, baseline, sums[0], squares[0])
                 _sums_from_the_middle(y, other, sums[1], squares[1])
-                for rule in range(rules.size):
+                for rule in range(windows.shape[2]):
                     _count(
                         y,
                         baseline,
                         other,
-                        windows[p, rule],
+                        windows[row, p, rule],
                         sums,
                         squares,
                         shares,
@@ -107,17 +108,15 @@ def shuffles_loop() -> Callable[..., None]:
         _over_shuffles,
         {},
         "over_shuffles",
-        "void(float64[::1], int64[::1], int64[:, ::1], float64[::1], int64[::1], float64[::1], "
-        "float64[::1], float64, int64, float64[:, ::1], float64[:, ::1], int64[::1])",
+        "void(float64[::1], int64[::1], int64[:, ::1], float64[::1], int64[:, :, :, ::1], "
+        "float64[::1], float64[::1], float64, int64, float64[:, ::1], float64[:, ::1], int64[::1])",
     )
 
 
 @compiled
-def _prepare(x: Values, power: float, rules: Indices, y: Values, windows: Indices) -> float:
-    """Re-express into y and find what each rule keeps; y ends in a unit that can be squared."""
+def _prepare(x: Values, power: float, y: Values) -> float:
+    """Re-express into y, in a unit that can be squared."""
     size = re_express(x, power, y)
-    for rule in range(rules.size):
-        windows[rule, 0], windows[rule, 1] = kept_by_rule(y, rules[rule])
     n = y.size
     widest = max(abs(y[n // 4]), abs(y[3 * n // 4]))
     if widest == 0.0 or math.isinf(widest):

@@ -7,6 +7,7 @@ import numpy as np
 
 from midspread.udfs.arithmetic.order_statistics import median_sorted
 from midspread.udfs.arithmetic.pair_selection import ordered_ratios
+from midspread.udfs.arithmetic.pair_tables import count_up_to_ratio
 from midspread.udfs.declaring import Values, aggregate, compiled
 
 _LARGEST_TO_ADD: Final = 8.9e307
@@ -161,13 +162,12 @@ def _kernel(up: Values, down: Values, ratio: float) -> float:
 
     From the pair itself, because a kernel near 0 has more digits than a ratio near 1.
     """
-    i, j = 0, 0
-    while i < up.size and j < down.size:
-        here = down[j] / up[i]
-        if here == ratio:
+    ends = np.empty(up.size, np.int32)
+    count_up_to_ratio(up, down, ratio, ends)
+    for i in range(up.size):
+        j = ends[i] - 1
+        if j >= 0 and down[j] / up[i] == ratio:
+            while j > 0 and down[j - 1] / up[i] == ratio:
+                j -= 1
             return (up[i] - down[j]) / (up[i] + down[j])
-        if here < ratio:
-            j += 1
-        else:
-            i += 1
     return (1.0 - ratio) / (1.0 + ratio)

@@ -4,7 +4,7 @@ from typing import Final
 
 from midspread.udfs.declaring import Parameter, ParameterError, table_function
 from midspread.udfs.resampling.randomness import SEED
-from midspread.udfs.sensitivity.pooled import RULES
+from midspread.udfs.sensitivity.rules import RULES
 from midspread.udfs.tables.comparing import CONFIDENCE, checked_number
 from midspread.udfs.tables.relations import BY, joined, keys, quoted_name, quoted_text
 from midspread.udfs.tables.two_levels import BASELINE, computed_by_group, share_of

@@ -5,7 +5,7 @@ from typing import Any, Final
 import numpy as np
 
 from midspread.udfs.declaring import NULL, Parameter, Values, helper, table_function
-from midspread.udfs.drivers import ranked_driver
+from midspread.udfs.drivers import watching_ranked_driver
 from midspread.udfs.reexpression.ladder_figures import FIGURES, ladder_figures
 from midspread.udfs.tables.relations import (
     BY,
@@ -42,7 +42,8 @@ def rungs_of_groups(work: Any, lists: Any, powers: Any) -> Any:
     steps = numpy_view(single_chunk(powers).values)[: len(single_chunk(powers)[0])]
     steps = np.ascontiguousarray(steps, dtype=np.float64)
     out = np.full((count, len(FIGURES) * steps.size), NULL)
-    task = Task(ranked_driver("power_ladder", ladder_figures), steps[np.newaxis, :], 1, 0)
+    loop = watching_ranked_driver("power_ladder", ladder_figures)
+    task = Task(loop, steps[np.newaxis, :], 1, 0)
     run(groups, [task], out, row_numbers(np.ones(count, np.int64)), work.control, work.threads)
     by_rung = out.reshape(count, steps.size, len(FIGURES))
     by_rung[groups.lengths == 0, :, :2] = 0.0

@@ -5,7 +5,7 @@ from typing import Any, Final
 import numpy as np
 
 from midspread.udfs.declaring import NULL, Parameter, Values, helper, table_function
-from midspread.udfs.drivers import pairs_driver
+from midspread.udfs.drivers import watching_pairs_driver
 from midspread.udfs.reexpression.straightening import FIGURES, straightening
 from midspread.udfs.tables.power_ladder import HIGHEST, LOWEST, rung_expression
 from midspread.udfs.tables.relations import (
@@ -41,7 +41,8 @@ def pairs_of_groups(work: Any, y_lists: Any, x_lists: Any, powers: Any) -> Any:
     steps = np.array(numpy_view(listed.values)[: len(listed[0])], dtype=np.float64)
     pairs = steps.size**2
     out = np.full((count, len(FIGURES) * pairs), NULL)
-    task = Task(pairs_driver("straightening", straightening), steps[np.newaxis, :], 1, 0)
+    loop = watching_pairs_driver("straightening", straightening)
+    task = Task(loop, steps[np.newaxis, :], 1, 0)
     run(groups, [task], out, row_numbers(np.ones(count, np.int64)), work.control, work.threads)
     by_pair = out.reshape(count, pairs, len(FIGURES))
     by_pair[groups.lengths == 0, :, :2] = 0.0
