@@ -21,7 +21,12 @@ from midspread.udfs.resampling.working import work_off
 if TYPE_CHECKING:
     from midspread.udfs.binding.computing import Work
 
-MIDDLES: Final = ("trimmed_mean", "winsorized_mean")
+MIDDLES: Final = {
+    "trimmed_mean": drawing_loops.TRIMMED_MEAN,
+    "winsorized_mean": drawing_loops.WINSORIZED_MEAN,
+    "winsorized_sd": drawing_loops.DEVIATION,
+    "trimmed_mean_se": drawing_loops.ERROR,
+}
 """Drawn from the order statistics that bound what is kept, or by counts."""
 FEW_RANKS: Final = ("quantile_hf", "trimean", "iqr_scale", "bowley_skew", "octile_skew")
 """Read a few order statistics, which are drawn alone; so do medians."""
@@ -29,6 +34,8 @@ FEW_RANKS: Final = ("quantile_hf", "trimean", "iqr_scale", "bowley_skew", "octil
 _LARGE: Final = 1 << 26
 """A group with so many draws of single values is shared out to the threads."""
 _PIECE: Final = 1 << 25
+_PIECES: Final = 32
+"""Shared out in no more pieces than this: each makes the values ready once."""
 _PORTION_VALUES: Final = 1 << 20
 _PORTION_DRAWS: Final = 1 << 18
 _HUGE: Final = 2.0**500
@@ -172,7 +179,7 @@ def draw_all(
         samples = samples_of(groups, chosen, statistic)
         drawn = _prepared(samples, resamples, with_errors)
         keys = keys_of(samples, seeds[chosen])
-        at_once = max(_PIECE // int(samples.lengths[0]), 4)
+        at_once = max(_PIECE // int(samples.lengths[0]), -(-resamples // _PIECES))
         shares = (
             functools.partial(
                 _draw, statistic, drawn, keys, first, min(first + at_once, resamples), steps, work
@@ -244,8 +251,7 @@ def _draw(
     if function.name in MIDDLES:
         plain = _is_plain(samples)[rows]
         if plain.any():
-            winsorize = function.name == MIDDLES[1]
-            more = (winsorize, samples.estimates, drawn.errors)
+            more = (MIDDLES[function.name], samples.estimates, drawn.errors)
             loop = _loop(drawing_loops.of_middles, drawing_loops.MIDDLES_SIGNATURE)
             run(loop, rows[plain], drawn.draws, *more)
         rows = rows[~plain]
@@ -363,7 +369,7 @@ def left_out_figures(
             if chosen.size < samples.size:
                 values = values[np.repeat(_marked(samples.size, chosen), samples.lengths)]
             out[chosen] = middles_left_out(
-                values, lengths, statistic.parameters[0], winsorize=function.name == MIDDLES[1]
+                values, lengths, statistic.parameters[0], MIDDLES[function.name]
             )
             work.control.cells[DONE] += int((lengths * further // steps).sum())
         rows = rows[~plain]

@@ -32,7 +32,8 @@ _FORMULA: Final = (
     formula=_FORMULA,
     source=_SOURCE,
     breakdown="0: one wild value may carry bias and se off, unless the statistic cuts it",
-    cost="O(n log n) for means, trimmed and winsorized means, medians and quantiles; else "
+    version=2,
+    cost="O(n log n) for means, sd, what is trimmed or winsorized, medians and quantiles; else "
     "1,000 times that of the statistic",
     smallest_n=2,
     example="jackknife(dwell_s, 'trimmed_mean(0.2)')",
@@ -60,9 +61,9 @@ def jackknife(batch: "Batch") -> dict[str, Values]:
     however many values there are; use `bootstrap_interval`, whose se does. The same goes for
     statistics that jump, such as half_sample_mode, and roughly for those made of medians.
 
-    In one exact pass for means, trimmed and winsorized means, medians and quantiles. Of other
-    statistics with more than 1,000 values 400 values are left out, among them the 64 outermost at
-    each end, and the rest is interpolated.
+    In one exact pass for trimmed and winsorized means and standard deviations, the mean and sd
+    among them, and for medians and quantiles. Of other statistics with more than 1,000 values 400
+    values are left out, among them the 64 outermost at each end, and the rest is interpolated.
 
     References
     ----------

@@ -1,14 +1,15 @@
-"""The jackknife of trimmed and winsorized means, in closed form, for many groups at once."""
+"""The jackknife of means and deviations of trimmed or winsorized values, in closed form."""
 
 import numpy as np
 import numpy.typing as npt
 
-from midspread.udfs.declaring import Values
+from midspread.udfs.declaring import NULL, Values
 from midspread.udfs.drivers import Indices
+from midspread.udfs.resampling.drawing_loops import DEVIATION, ERROR, WINSORIZED_MEAN
 
 
 def middles_left_out(
-    values: Values, lengths: Indices, share: float, *, winsorize: bool
+    values: Values, lengths: Indices, share: float, figure: int
 ) -> npt.NDArray[np.float64]:
     """The figures of `leave_one_out` for each group.
 
@@ -20,13 +21,14 @@ def middles_left_out(
         How many values each group has, 2 or more.
     share : float
         Share cut from each tail.
-    winsorize : bool
-        Whether what is cut is replaced by the nearest kept value.
+    figure : int
+        What is computed of the values, as for `drawing_loops.of_middles`.
 
     Notes
     -----
     Without value i a trimmed mean is (S − x_j) / h, S being the sum from the first to the last
-    value that is kept without some value, and x_j the value among these nearest to value i.
+    value that is kept without some value, and x_j the value among these nearest to value i. Sums of
+    squares go likewise.
     """
     ends = np.cumsum(lengths)
     starts = ends - lengths
@@ -36,16 +38,33 @@ def middles_left_out(
     whole, kept = _cuts(lengths, share)
     cut, h = _cuts(lengths - 1, share)
     first, last = starts + cut, ends - 1 - cut
-    total = _sums(v, first, last + 1)
     nearest = np.clip(rank, cut[group], (last - starts)[group]) + starts[group]
-    left = total[group] - v[nearest]
-    own = _sums(v, starts + whole, ends - whole)
-    if winsorize:
-        place = np.arange(values.size)
-        low = np.where(place > first[group], v[first][group], v[first + 1][group])
-        high = np.where(place < last[group], v[last][group], v[last - 1][group])
-        left = (left + cut[group] * (low + high)) / (lengths - 1)[group]
-        own = (own + whole * (v[starts + whole] + v[ends - 1 - whole])) / lengths
+    place = np.arange(values.size)
+
+    def sums(w: Values, tails: bool) -> tuple[Values, Values]:
+        """Of w without each value, and of all of it: what is kept, with what replaces the rest."""
+        left = _sums(w, first, last + 1)[group] - w[nearest]
+        own = _sums(w, starts + whole, ends - whole)
+        if tails:
+            low = np.where(place > first[group], w[first][group], w[first + 1][group])
+            high = np.where(place < last[group], w[last][group], w[last - 1][group])
+            left += cut[group] * (low + high)
+            own += whole * (w[starts + whole] + w[ends - 1 - whole])
+        return left, own
+
+    left, own = sums(v, figure >= WINSORIZED_MEAN)
+    if figure >= DEVIATION:
+        squares, own_squares = sums(v * v, True)
+        squares -= left * left / (lengths - 1)[group]
+        own_squares -= own * own / lengths
+        free, own_free = lengths - 2, lengths - 1
+        if figure == ERROR:
+            free, own_free = h * (h - 1), kept * (kept - 1)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            left = np.sqrt(np.maximum(squares, 0.0) / free[group])
+            own = np.sqrt(np.maximum(own_squares, 0.0) / own_free)
+    elif figure == WINSORIZED_MEAN:
+        left, own = left / (lengths - 1)[group], own / lengths
     else:
         left, own = left / h[group], own / kept
 
@@ -59,8 +78,12 @@ def middles_left_out(
     none = squares == 0.0
     accelerations = np.where(none, 0.0, cubes) / (6.0 * np.where(none, 1.0, squares) ** 1.5)
     # A mean is the mean of its leave-one-out values.
-    bias = np.where((whole == 0) & (cut == 0) | none, 0.0, mean)
-    return np.stack((bias, squares * largest * largest, accelerations), axis=1)
+    is_mean = (whole == 0) & (cut == 0) & (figure <= WINSORIZED_MEAN)
+    bias = np.where(is_mean | none, 0.0, mean)
+    figures = np.stack((bias, squares * largest * largest, accelerations), axis=1)
+    if figure == ERROR:
+        figures[h < 2] = NULL
+    return figures
 
 
 def _cuts(lengths: Indices, share: float) -> tuple[Indices, Indices]:

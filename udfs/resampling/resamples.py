@@ -2,8 +2,9 @@
 
 A resample is multinomial: how often each value is drawn. Over long runs of values the number of
 draws that fall in each block is drawn first, by binomial splitting, which is exact; what is drawn
-within a block then stays in the processor's cache. Whole numbers below a bound are exactly uniform
-(Lemire 2019).
+within a block then stays in the processor's cache. Nearly all blocks hold a power of 2 of values,
+so that each sixteen bits of a random word are a number within them; in the others whole numbers
+below a bound are exactly uniform (Lemire 2019).
 """
 
 from typing import Final
@@ -16,17 +17,18 @@ from midspread.udfs.resampling.randomness import mixed
 from midspread.udfs.resampling.variates import GOLDEN, HALF, LOW_HALF, binomial
 
 Counts = npt.NDArray[np.int32]
+Words = npt.NDArray[np.uint64]
 
 BLOCK: Final = 4096
 SMALLEST: Final = 256
-"""Values in the largest and the smallest block that is a power of 2: bits of a word are numbers
-within it."""
+"""Values in the largest and the smallest block that is a power of 2."""
+WORDS: Final = 512
+"""Random words made at once: a processor makes many side by side faster than one by one."""
 SPARE: Final = 3
 """Room that a written resample needs behind its end."""
-_BITS: Final = np.uint64(12)
-_TWICE: Final = np.uint64(24)
-_THRICE: Final = np.uint64(36)
-_FOURFOLD: Final = np.uint64(48)
+_SIXTEEN: Final = np.uint64(16)
+_ONE: Final = np.uint64(1)
+_EIGHT: Final = np.uint64(8)
 
 
 @compiled
@@ -37,9 +39,40 @@ def clear(counts: Counts) -> None:
 
 
 @compiled
-def count_draws(state: np.uint64, counts: Counts, draws: int) -> np.uint64:
+def block_size(values: int) -> int:
+    """How many of the values still to come make up the next block."""
+    size = BLOCK
+    while size > values and size > SMALLEST:
+        size //= 2
+    return min(size, values)
+
+
+@compiled
+def _fill(state: np.uint64, words: Words, size: int) -> np.uint64:
+    """Make words of four numbers below a power of 2 each."""
+    mask = np.uint64(size) - _ONE
+    mask |= mask << _SIXTEEN
+    mask |= mask << HALF
+    for i in range(words.size):
+        state = state + GOLDEN
+        words[i] = mixed(state) & mask
+    return state
+
+
+@compiled
+def count_draws(state: np.uint64, counts: Counts, draws: int, words: Words) -> np.uint64:
     """Draw so many times from as many values as there are counts, and count."""
     size = counts.size
+    if size >= SMALLEST and size & (size - 1) == 0:
+        numbers = words.view(np.uint16)
+        left = draws
+        while left > 0:
+            now = min(left, numbers.size)
+            state = _fill(state, words[: (now + 3) // 4], size)
+            for k in range(np.uint64(now)):
+                counts[numbers[k]] += 1
+            left -= now
+        return state
     if size == 1:
         counts[0] += draws
         return state
@@ -67,8 +100,10 @@ def count_draws(state: np.uint64, counts: Counts, draws: int) -> np.uint64:
 
 
 @compiled
-def resample_into(state: np.uint64, counts: Counts, x: Values, y: Values) -> np.uint64:
-    """Write a resample of sorted x into y, sorted; counts is scratch for a block.
+def resample_into(
+    state: np.uint64, counts: Counts, words: Words, x: Values, y: Values
+) -> np.uint64:
+    """Write a resample of sorted x into y, sorted; counts and words are scratch.
 
     y holds SPARE more than x: a value is written three times and then overwritten, as guessing
     how often it was drawn costs more.
@@ -78,14 +113,14 @@ def resample_into(state: np.uint64, counts: Counts, x: Values, y: Values) -> np.
     at = 0
     start = 0
     while start < n:
-        stop = min(start + BLOCK, n)
+        stop = start + block_size(n - start)
         own = left
         if stop < n:
             own, state = binomial(state, left, (stop - start) / (n - start))
         left -= own
         block = counts[: stop - start]
         clear(block)
-        state = count_draws(state, block, own)
+        state = count_draws(state, block, own, words)
         for i in range(stop - start):
             value = x[start + i]
             y[at] = value
@@ -100,21 +135,23 @@ def resample_into(state: np.uint64, counts: Counts, x: Values, y: Values) -> np.
 
 
 @compiled
-def resample_rows(state: np.uint64, counts: Counts, rows: npt.NDArray[np.int64]) -> np.uint64:
+def resample_rows(
+    state: np.uint64, counts: Counts, words: Words, rows: npt.NDArray[np.int64]
+) -> np.uint64:
     """Write the row numbers of a resample, ascending, as `resample_into` does."""
     n = rows.size - SPARE
     left = n
     at = 0
     start = 0
     while start < n:
-        stop = min(start + BLOCK, n)
+        stop = start + block_size(n - start)
         own = left
         if stop < n:
             own, state = binomial(state, left, (stop - start) / (n - start))
         left -= own
         block = counts[: stop - start]
         clear(block)
-        state = count_draws(state, block, own)
+        state = count_draws(state, block, own, words)
         for i in range(stop - start):
             rows[at] = start + i
             rows[at + 1] = start + i
@@ -129,7 +166,7 @@ def resample_rows(state: np.uint64, counts: Counts, rows: npt.NDArray[np.int64])
 
 @compiled
 def sum_draws(
-    state: np.uint64, v: Values, draws: int, with_squares: bool
+    state: np.uint64, v: Values, draws: int, words: Words, with_squares: bool
 ) -> tuple[float, float, np.uint64]:
     """Draw so many times from v: the sum and, if wanted, the sum of squares of what is drawn."""
     n = v.size
@@ -137,42 +174,77 @@ def sum_draws(
     left = draws
     start = 0
     while start < n and left > 0:
-        size = BLOCK
-        while size > n - start and size > SMALLEST:
-            size //= 2
-        size = min(size, n - start)
+        size = block_size(n - start)
         own = left
         if start + size < n:
             own, state = binomial(state, left, size / (n - start))
         left -= own
-        block = v[start : start + size]
-        if with_squares or size < SMALLEST:
-            part, square, state = _sums_of_any_block(state, block, own)
-            squares += square
-        else:
-            part, state = _sum_of_block(state, block, own)
+        part, square, state = sum_of_block(state, v[start : start + size], own, words, with_squares)
         total += part
+        squares += square
         start += size
     return total, squares, state
 
 
 @compiled
-def _sum_of_block(state: np.uint64, v: Values, draws: int) -> tuple[float, np.uint64]:
-    """Five numbers from each word, below a size that is a power of 2 up to 4096."""
-    mask = np.uint64(v.size - 1)
+def sum_of_block(
+    state: np.uint64, v: Values, draws: int, words: Words, with_squares: bool
+) -> tuple[float, float, np.uint64]:
+    """As `sum_draws`, all from one block."""
+    if v.size < SMALLEST:
+        return _sums_of_any_block(state, v, draws)
+    if with_squares:
+        return _sums_of_block(state, v, draws, words)
+    total, state = _sum_of_block(state, v, draws, words)
+    return total, 0.0, state
+
+
+@compiled
+def _sum_of_block(state: np.uint64, v: Values, draws: int, words: Words) -> tuple[float, np.uint64]:
+    """Of a power of 2 of values; numbers without a sign, which need no look at negative places."""
+    numbers = words.view(np.uint16)
     s0 = s1 = 0.0
-    for _ in range(draws // 5):
-        state = state + GOLDEN
-        bits = mixed(state)
-        s0 += v[bits & mask] + v[(bits >> _BITS) & mask]
-        s1 += v[(bits >> _TWICE) & mask] + v[(bits >> _THRICE) & mask]
-        s0 += v[(bits >> _FOURFOLD) & mask]
-    state = state + GOLDEN
-    bits = mixed(state)
-    for _ in range(draws % 5):
-        s1 += v[bits & mask]
-        bits >>= _BITS
+    left = draws
+    while left > 0:
+        now = min(left, numbers.size)
+        state = _fill(state, words[: (now + 3) // 4], v.size)
+        for eighth in range(np.uint64(now // 8)):
+            k = eighth * _EIGHT
+            a, b = v[numbers[k]], v[numbers[k + np.uint64(1)]]
+            c, d = v[numbers[k + np.uint64(2)]], v[numbers[k + np.uint64(3)]]
+            s0 += (a + b) + (c + d)
+            a, b = v[numbers[k + np.uint64(4)]], v[numbers[k + np.uint64(5)]]
+            c, d = v[numbers[k + np.uint64(6)]], v[numbers[k + np.uint64(7)]]
+            s1 += (a + b) + (c + d)
+        for rest in range(np.uint64(now // 8 * 8), np.uint64(now)):
+            s0 += v[numbers[rest]]
+        left -= now
     return s0 + s1, state
+
+
+@compiled
+def _sums_of_block(
+    state: np.uint64, v: Values, draws: int, words: Words
+) -> tuple[float, float, np.uint64]:
+    """As `_sum_of_block`, with squares."""
+    numbers = words.view(np.uint16)
+    total = squares = 0.0
+    left = draws
+    while left > 0:
+        now = min(left, numbers.size)
+        state = _fill(state, words[: (now + 3) // 4], v.size)
+        for quarter in range(np.uint64(now // 4)):
+            k = quarter * np.uint64(4)
+            a, b = v[numbers[k]], v[numbers[k + np.uint64(1)]]
+            c, d = v[numbers[k + np.uint64(2)]], v[numbers[k + np.uint64(3)]]
+            total += (a + b) + (c + d)
+            squares += (a * a + b * b) + (c * c + d * d)
+        for rest in range(np.uint64(now // 4 * 4), np.uint64(now)):
+            a = v[numbers[rest]]
+            total += a
+            squares += a * a
+        left -= now
+    return total, squares, state
 
 
 @compiled

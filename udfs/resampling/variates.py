@@ -44,6 +44,14 @@ def next_uniform(state: np.uint64) -> tuple[float, np.uint64]:
 
 
 @compiled
+def next_normal(state: np.uint64) -> tuple[float, np.uint64]:
+    """A standard normal number (Box & Muller 1958), and the new state."""
+    u, state = next_uniform(state)
+    v, state = next_uniform(state)
+    return math.sqrt(-2.0 * math.log(u)) * math.cos(2.0 * math.pi * v), state
+
+
+@compiled
 def _stirling(k: float) -> float:
     """What Stirling's formula lacks of ln k!."""
     if k < 10.0:

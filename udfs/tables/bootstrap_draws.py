@@ -61,6 +61,7 @@ def drawn_lists(work: "Work", lists: Any, texts: Any, resamples: Any, seeds: Any
     source="Efron 1979, Ann. Statist. 7, 1–26",
     breakdown="the statistic's own",
     cost="as bootstrap_interval; groups · resamples rows",
+    version=2,
     example=(
         "SELECT * FROM bootstrap_draws('visits', 'dwell_s', statistic := 'median', resamples := 9)"
     ),
