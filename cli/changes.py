@@ -1,36 +1,65 @@
 """``midspread changes``: how two versions of a grid differ."""
 
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import click
 
 from midspread.cli.help import HelpfulCommand
-from midspread.cli.numbers import count_text
-from midspread.cli.options import Count, Settings, store_option
+from midspread.cli.numbers import count_text, single_text
+from midspread.cli.options import Count, Settings, names_in, store_option
 from midspread.cli.screen import Screen, result_console
+
+if TYPE_CHECKING:
+    import pyarrow as pa
 
 
 @click.command(
     cls=HelpfulCommand,
-    examples=("midspread changes route_dwell", "midspread changes route_dwell 1 2"),
+    examples=(
+        "midspread changes route_dwell",
+        "midspread changes route_dwell 1 2 --columns dwell_s",
+    ),
 )
 @click.argument("name", metavar="GRID")
 @click.argument("before", metavar="[FROM", type=Count(1), required=False)
 @click.argument("after", metavar="[TO]]", type=Count(1), required=False)
+@click.option(
+    "--columns", metavar="NAMES", help="Only these columns, with commas between them.  [all]"
+)
 @store_option
-def changes(name: str, before: int | None, after: int | None, store: Path | None) -> None:
+def changes(
+    name: str, before: int | None, after: int | None, columns: str | None, store: Path | None
+) -> None:
     """How two versions of a grid differ, row by row and cell by cell.
 
     Without numbers, the present version and the one before it. in_se is the size of a change in
-    standard errors, where the grid has a column of the same name with _se, or one called se.
+    standard errors of the difference of two independent estimates, where the grid has a column of
+    the same name with _se, or one called se right after it.
     """
     from midspread.cli.tables import print_table
     from midspread.engine.grids.comparing import changes as changes_of
 
-    table, first, last = changes_of(Settings(store=store).store_path(), name, before, after)
+    only = () if columns is None else names_in("--columns", columns)
+    table, first, last = changes_of(Settings(store=store).store_path(), name, before, after, only)
     with Screen() as screen:
         screen.notice(f"{name}, version {first} to {last}")
     if not table.num_rows:
         click.echo("no row differs")
         return
-    print_table(result_console(), table, note=count_text(table.num_rows, "difference"))
+    print_table(result_console(), _readable(table), note=count_text(table.num_rows, "difference"))
+
+
+def _readable(table: "pa.Table") -> "pa.Table":
+    """Numbers before and after with as many digits as one reads."""
+    import pyarrow as pa
+
+    is_number = [change is not None for change in table.column("change").to_pylist()]
+    for side in ("before", "after"):
+        texts = [
+            single_text(float(text)) if is_one and text is not None else text
+            for text, is_one in zip(table.column(side).to_pylist(), is_number, strict=True)
+        ]
+        place = table.schema.get_field_index(side)
+        table = table.set_column(place, side, pa.array(texts, pa.string()))
+    return table

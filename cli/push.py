@@ -6,6 +6,7 @@ from midspread.cli.cells import visible
 from midspread.cli.help import HelpfulCommand
 from midspread.cli.numbers import count_text
 from midspread.cli.options import Settings, engine_options, names_in
+from midspread.cli.screen import Screen
 
 MODES = ("create", "replace", "append", "merge")
 
@@ -53,12 +54,14 @@ def push(
     from midspread.engine.pushing.target import Mode
 
     keys = () if key is None else tuple(names_in("--key", key))
-    made = push_grid(
-        settings.store_path(),
-        Wish(name, place, Mode(mode), keys, dry_run, stale_ok),
-        memory=settings.memory,
-        threads=settings.threads,
-    )
+    with Screen() as screen:
+        made = push_grid(
+            settings.store_path(),
+            Wish(name, place, Mode(mode), keys, dry_run, stale_ok),
+            memory=settings.memory,
+            threads=settings.threads,
+            on_progress=screen.building(f"pushing {visible(name)}"),
+        )
     outcome = made.outcome
     parts = [f"{count_text(outcome.added, 'row')} added"]
     if not made.is_new:

@@ -2,6 +2,7 @@
 
 import click
 
+from midspread.cli.cells import visible
 from midspread.cli.help import HelpfulCommand
 from midspread.cli.numbers import count_text
 from midspread.cli.options import Settings, engine_options
@@ -41,7 +42,7 @@ def refresh(names: tuple[str, ...], dry_run: bool, settings: Settings) -> None:
     with Screen() as screen:
 
         def about(grid: Grid, place: int, count: int) -> None:
-            screen.work = f"{grid.name}, {place} of {count}"
+            screen.step(visible(grid.name), place, count)
 
         for made in refresh_grids(lambda: settings.session(screen), path, names, about):
             screen.clear()

@@ -35,7 +35,9 @@ class Screen:
         self._quiet = quiet
         self._is_terminal = sys.stderr.isatty()
         self._display: ProgressDisplay | None = None
-        self.work = "working"
+        self._work = "working"
+        self._step = (1, 1)
+        self._began = time.monotonic()
 
     def __enter__(self) -> Self:
         return self
@@ -57,15 +59,28 @@ class Screen:
     def progress(self, made: "Progress") -> None:
         """Show how far a query is; the session calls this every now and then."""
         if self._is_terminal and made.seconds >= BAR_AFTER_SECONDS:
-            self._show(_current_work(self.work), made.fraction, made.elements, made.seconds)
+            place, count = self._step
+            fraction = made.fraction
+            if count > 1:
+                fraction = (place - 1 + (fraction or 0.0)) / count
+            self._show(_current_work(self._work), fraction, made.elements, made.seconds)
 
-    def building(self, what: str) -> Callable[[float], None]:
-        """A function that shows what share of something is done."""
+    def step(self, what: str, place: int, count: int) -> None:
+        """Show which of several queries comes now; the progress of each is a part of the whole."""
+        self._work = f"{what}, {place} of {count}"
+        self._step = (place, count)
+        seconds = time.monotonic() - self._began
+        if self._is_terminal and seconds >= BAR_AFTER_SECONDS:
+            self._show(self._work, (place - 1) / count, 0, seconds)
+
+    def building(self, what: str) -> Callable[[float | None], None]:
+        """A function that shows what share of something is done, where that is known."""
         started = time.monotonic()
 
-        def show(fraction: float) -> None:
-            if self._is_terminal:
-                self._show(what, fraction, 0, time.monotonic() - started)
+        def show(fraction: float | None) -> None:
+            seconds = time.monotonic() - started
+            if self._is_terminal and seconds >= BAR_AFTER_SECONDS:
+                self._show(what, fraction, 0, seconds)
 
         return show
 

@@ -36,6 +36,7 @@ _DUCKDB_MARK_AT = 8
     cls=HelpfulCommand,
     examples=(
         'midspread show "dwell/*.parquet"',
+        "midspread show route_dwell --rests-on",
         "midspread show warehouse.duckdb",
         "midspread show --attach warehouse=warehouse.duckdb warehouse.routes",
     ),
@@ -80,9 +81,14 @@ def show(
             rests_on=rests_on,
             as_json=form == "json",
         )
+    elif name is None and (version is not None or record or rests_on):
+        raise UsageError(
+            "show: --version, --record and --rests-on are for a grid; name it first, as in "
+            "midspread show GRID --record."
+        )
     elif version is not None or record or rests_on:
         raise MidspreadError(
-            f"show: there is no grid {name or ''}, and --version, --record and --rests-on are "
+            f"show: there is no grid {name}, and --version, --record and --rests-on are "
             f"for grids; midspread show lists those there are."
         )
     elif name is None:

@@ -1,7 +1,8 @@
 """What `show` says of one grid."""
 
 import json
-from typing import TYPE_CHECKING
+from datetime import UTC, datetime
+from typing import TYPE_CHECKING, Any
 
 import click
 
@@ -12,6 +13,7 @@ from midspread.cli.screen import Screen
 
 if TYPE_CHECKING:
     from rich.console import Console
+    from rich.text import Text
 
     from midspread.engine.grids.freshness import Freshness
     from midspread.engine.grids.model import Grid
@@ -60,9 +62,11 @@ def show_grid(
     grid = grids[name.casefold()]
     if rests_on:
         _print_tree(grid, grids)
-        return
-    _print_head(console, grid, states[grid.folded])
-    _print_rows(console, grid, settings, version)
+    elif version is not None and version != grid.version:
+        _print_earlier(console, grid, settings, version)
+    else:
+        _print_head(console, grid, states[grid.folded])
+        _print_rows(console, grid, settings)
 
 
 def _print_record(name: str, settings: Settings, as_json: bool) -> None:
@@ -75,10 +79,27 @@ def _print_record(name: str, settings: Settings, as_json: bool) -> None:
     for step in document["steps"]:
         click.echo(f"{visible(step['grid'])}, {step['kind']}, version {step['version']}")
         for field, value in step.items():
-            if field in ("grid", "kind", "version", "values") or not value:
+            if field in ("grid", "kind", "version") or not value:
+                continue
+            if field in ("files", "values", "entries"):
+                _print_items(field, value)
                 continue
             text = value if isinstance(value, str) else json.dumps(value, ensure_ascii=False)
             click.echo(f"  {field}: {text}")
+
+
+def _print_items(field: str, value: Any) -> None:
+    """A line for each file of each pattern, or for each row of values."""
+    if field == "files":
+        for pattern, files in value.items():
+            click.echo(f"  {field}: {visible(pattern)}")
+            for path, size, mtime, *_ in files:
+                when = datetime.fromtimestamp(mtime / 1e9, UTC)
+                click.echo(f"    {visible(path)}, {size:,} bytes, of {when:%Y-%m-%d %H:%M:%S} UTC")
+        return
+    click.echo(f"  {field}:")
+    for row in value:
+        click.echo(f"    {visible(json.dumps(row, ensure_ascii=False))}")
 
 
 def _print_tree(grid: "Grid", grids: "dict[str, Grid]") -> None:
@@ -113,16 +134,39 @@ def _print_head(console: "Console", grid: "Grid", freshness: "Freshness") -> Non
         line = Text(words)
         line.append(f"  {column.kind}", style=FAINT)
         lines.append(line)
-    if grid.sql:
-        lines.append(Text())
-        lines += [Text(visible(line), style="green") for line in grid.sql.splitlines()]
+    lines += _query_lines(grid.sql)
     lines.append(Text())
     print_lines(console, lines)
 
 
-def _print_rows(console: "Console", grid: "Grid", settings: Settings, version: int | None) -> None:
+def _query_lines(sql: str) -> "list[Text]":
+    from rich.text import Text
+
+    return [Text(), *(Text(visible(line), style="green") for line in sql.splitlines())]
+
+
+def _print_earlier(console: "Console", grid: "Grid", settings: Settings, version: int) -> None:
+    """An earlier version: when it was made and why, its query then, its first rows."""
+    from rich.text import Text
+
+    from midspread.cli.tables import FAINT, HEAD, print_lines, print_table
+    from midspread.engine.grids.comparing import earlier_version
+    from midspread.engine.grids.freshness import clock
+
+    found = earlier_version(settings.store_path(), grid, version, FIRST_ROWS)
+    head = Text(visible(grid.name), style=HEAD)
+    head.append(
+        f"  version {version} of {grid.version}, {count_text(found.rows, 'row')}, made "
+        f"at {clock(found.made)}: {visible(found.cause)}",
+        style=f"not bold {FAINT}",
+    )
+    print_lines(console, [head, *_query_lines(found.sql), Text()])
+    print_table(console, found.first, note=f"the first {count_text(found.first.num_rows, 'row')}")
+
+
+def _print_rows(console: "Console", grid: "Grid", settings: Settings) -> None:
     from midspread.cli.tables import print_table
-    from midspread.engine.grids.comparing import version_table
+    from midspread.engine.grids.comparing import first_rows, version_table
     from midspread.engine.grids.entries import set_aside
     from midspread.engine.store.store import Store
 
@@ -132,8 +176,8 @@ def _print_rows(console: "Console", grid: "Grid", settings: Settings, version: i
     store = Store.open(settings.store_path(), create=False)
     try:
         with store.reading() as engine:
-            table = version_table(engine, "show", grid, version or grid.version)
-            rows = engine.sql(f"FROM {table} LIMIT {FIRST_ROWS}").to_arrow_table()
+            table = version_table(engine, "show", grid, grid.version)
+            rows = first_rows(engine, grid, table, FIRST_ROWS)
             aside = set_aside(engine, grid)
     finally:
         store.close()
@@ -142,4 +186,5 @@ def _print_rows(console: "Console", grid: "Grid", settings: Settings, version: i
         click.echo()
         click.echo("typed in for keys that are no longer there, and kept for their return:")
         for key, column, value in aside:
-            click.echo(f"  {visible(key)} {visible(column)}: {visible(value or '')}")
+            whose = ", ".join(json.loads(key))
+            click.echo(f"  {visible(column)} of {visible(whose)}: {visible(value or '')}")

@@ -9,7 +9,7 @@ import click
 from midspread.cli.cells import visible
 from midspread.cli.help import HelpfulCommand
 from midspread.cli.numbers import count_text, size_text
-from midspread.cli.options import store_option
+from midspread.cli.options import Count, store_option
 
 if TYPE_CHECKING:
     from rich.text import Text
@@ -21,17 +21,29 @@ ACTIONS = ("check", "pack", "clear-answers")
 
 @click.command(
     cls=HelpfulCommand,
-    examples=("midspread store", "midspread store check", "midspread store clear-answers"),
+    examples=("midspread store", "midspread store check", "midspread store --keep-versions 3"),
 )
 @click.argument("action", metavar="[check or pack or clear-answers]", required=False)
+@click.option(
+    "--keep-versions",
+    "versions",
+    type=Count(0),
+    metavar="N",
+    help="From now on keep N earlier versions of each grid, and let go of older ones.  [10]",
+)
 @store_option
-def store(action: str | None, store: Path | None) -> None:
-    """Where the store of kept answers is, and what it holds.
+def store(action: str | None, versions: int | None, store: Path | None) -> None:
+    """Where the store of grids and kept answers is, and what it holds.
 
     check reads all of it and says what is wrong; pack gives back the room of what was dropped, and
     lets go of what undo could bring back; clear-answers drops every kept answer. The environment
     variable MIDSPREAD_STORE names a store, MIDSPREAD_ANSWERS_LIMIT the room its answers may take.
     """
+    if versions is not None:
+        if action is not None:
+            raise click.UsageError(f"--keep-versions goes without {action}")
+        _keep_versions(_place(store), versions)
+        return
     if action is None:
         from midspread.cli.screen import result_console
         from midspread.cli.tables import print_lines
@@ -74,12 +86,13 @@ def store_lines(named: Path | None) -> "list[Text]":
         "file": size_text(found.file_bytes),
         "answers": count_text(found.answers, "kept answer"),
         "room": f"{size_text(found.answer_bytes)} of at most {size_text(found.limit_bytes)}",
+        "versions": f"{found.versions} earlier ones of each grid are kept",
     }
     if found.oldest is not None and found.newest is not None:
         facts["kept"] = f"from {_when(found.oldest)} to {_when(found.newest)}"
     lines = []
     for name, words in facts.items():
-        lines.append(Text(name.ljust(9), style=FAINT))
+        lines.append(Text(name.ljust(10), style=FAINT))
         lines[-1].append(words, style="not dim")
     return lines
 
@@ -115,6 +128,14 @@ def _check(opened: "Store") -> None:
     with opened.reading() as engine:
         grids = count_text(len(ledger.grids(engine)), "grid")
     click.echo(f"{visible(str(opened.path))} is sound: {grids} and {answers} read.")
+
+
+def _keep_versions(path: Path, count: int) -> None:
+    from midspread.engine.grids.publishing import keep_versions
+
+    gone = keep_versions(path, count)
+    let_go = f"; {count_text(gone, 'older one')} let go" if gone else ""
+    click.echo(f"{count_text(count, 'earlier version')} of each grid will be kept{let_go}.")
 
 
 def _pack(opened: "Store") -> None:

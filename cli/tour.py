@@ -141,7 +141,8 @@ def _keep_results(console: "Console", folder: Path, store: Path) -> None:
                 tour_grids.next_month(folder)
             for line in chapter.commands:
                 console.print()
-                print_lines(console, [Text(f"{' ' * INDENT}$ {line}", style="green")])
+                typed = f"$ {line}".splitlines()
+                print_lines(console, [Text(" " * INDENT + one, style="green") for one in typed])
                 tour_grids.run_line(line)
             _paragraph(console, chapter.lesson)
         record = record_of(store, "route_dwell")

@@ -19,10 +19,20 @@ FOLDER: Final = "months"
 ARRIVED: Final = 6
 RECORD: Final = "route_dwell.json"
 
-KEEP: Final = (
-    'midspread keep route_dwell "SELECT route, trimmed_mean(dwell_s, 0.1) AS dwell_s, '
-    f"trimmed_mean_se(dwell_s, 0.1) AS se FROM '{FOLDER}/*.parquet' GROUP BY route\""
-)
+GRIDS: Final = ("route_dwell", "vehicle_dwell", "limits", "over_limit")
+"""The grids that the tour makes."""
+
+
+def _keeping(name: str, group: str) -> str:
+    """The command that keeps what is typical of each group."""
+    return f"""\
+midspread keep {name} "
+  SELECT {group},
+         trimmed_mean(dwell_s, 0.1)    AS dwell_s,
+         trimmed_mean_se(dwell_s, 0.1) AS se,
+         mad_scale(dwell_s)            AS spread_s
+  FROM '{FOLDER}/*.parquet'
+  GROUP BY {group}\""""
 
 
 @dataclass(frozen=True)
@@ -52,23 +62,26 @@ CHAPTERS: Final = (
         f"The first {ARRIVED} months lie in {FOLDER}. keep stores a query with its result as a "
         "grid, a table that any later query can read; enter makes one of typed-in values.",
         (
-            KEEP,
-            'midspread enter limits --columns "route TEXT, share DOUBLE, limit_s DOUBLE" '
-            "--key route",
-            'midspread enter limits route=L3 share=0.25 limit_s=15 --note "driver survey"',
-            "midspread enter limits route=L7 share=0.1 limit_s=25",
-            'midspread keep over_limit "SELECT route, dwell_s, limit_s FROM route_dwell '
-            'JOIN limits USING (route) WHERE dwell_s > limit_s" --key route',
+            _keeping("route_dwell", "route"),
+            _keeping("vehicle_dwell", "vehicle"),
+            'midspread enter limits --key route \\\n  --columns "route TEXT, limit_s DOUBLE"',
+            'midspread enter limits route=L3 limit_s=15 --note "driver survey"',
+            "midspread enter limits route=L7 limit_s=25",
+            'midspread keep over_limit --key route "\n'
+            "  SELECT route, dwell_s, limit_s\n"
+            "  FROM route_dwell JOIN limits USING (route)\n"
+            '  WHERE dwell_s > limit_s"',
         ),
         "over_limit rests on route_dwell and limits, and they on files and on people.",
     ),
     Chapter(
         "Columns of one's own",
-        "A column may be typed in, and then follows its row's key, or be computed from the row.",
+        "A column may be computed from its row, here the time that a timetable should allow for a "
+        "stop, or be typed in: then it follows its row's key.",
         (
-            'midspread column route_dwell "remark TEXT"',
-            'midspread enter route_dwell route=L3 "remark=layovers booked as dwell"',
-            'midspread column route_dwell "upper_s AS (dwell_s + 2 * se)"',
+            'midspread column route_dwell "allowance_s AS (dwell_s + 2 * spread_s)"',
+            'midspread column vehicle_dwell "remark TEXT"',
+            'midspread enter vehicle_dwell vehicle=V158 "remark=its clock drifts"',
         ),
         "Nothing of it is lost when the grid is computed again.",
     ),
@@ -79,7 +92,7 @@ CHAPTERS: Final = (
         (
             "midspread show",
             "midspread refresh",
-            "midspread changes route_dwell",
+            "midspread changes route_dwell --columns dwell_s",
         ),
         "in_se tells a change from noise: beyond 2 or 3 it is more than chance.",
         arrives=True,
@@ -90,11 +103,14 @@ CHAPTERS: Final = (
         "with a record of how it came about.",
         (
             "midspread attach wh=warehouse.duckdb",
-            "midspread push route_dwell wh.main.route_dwell --mode replace",
-            'midspread query "SELECT name, dwell_s, remark FROM wh.routes '
-            'JOIN wh.route_dwell USING (route) ORDER BY dwell_s LIMIT 3"',
+            "midspread push vehicle_dwell wh.main.vehicle_dwell --mode replace",
+            'midspread query "\n'
+            "  SELECT vehicle, model, depot, dwell_s, remark\n"
+            "  FROM wh.vehicles JOIN wh.vehicle_dwell USING (vehicle)\n"
+            '  WHERE remark IS NOT NULL"',
         ),
-        f"The record is in {RECORD} too; midspread verify {RECORD} computes it all again.",
+        f"The record of route_dwell is in {RECORD}; midspread verify {RECORD} computes it again "
+        "and compares every digit.",
     ),
 )
 
@@ -138,7 +154,7 @@ def _forget_earlier(store: Path) -> None:
 
     if not store.exists():
         return
-    for name in ("route_dwell", "limits", "over_limit"):
+    for name in GRIDS:
         opened = Store.open(store)
         with contextlib.closing(opened), opened.reading() as engine:
             is_there = name in ledger.grids(engine)
@@ -150,6 +166,6 @@ def run_line(line: str) -> None:
     """Run one command line of midspread in this process; its output goes where ours goes."""
     from midspread.cli.main import application
 
-    arguments = shlex.split(line)[1:]
+    arguments = shlex.split(line.replace("\\\n", " "))[1:]  # a shell joins such lines
     with application.make_context("midspread", arguments) as context:
         application.invoke(context)

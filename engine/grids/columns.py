@@ -11,10 +11,9 @@ from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
 from midspread.engine.grids.comparing import found_grid
 from midspread.engine.grids.definitions import one_column
-from midspread.engine.grids.entering import equip
 from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind
 from midspread.engine.grids.restoring import note_undo
-from midspread.engine.grids.tables import computed_in_order, contents_query
+from midspread.engine.grids.tables import computed_in_order, contents_query, equip
 from midspread.engine.inputs.scanning import mentions_of
 from midspread.engine.nearest import nearest
 from midspread.engine.store.quoting import literal, quoted
@@ -114,7 +113,8 @@ def _change(
                     f"column: {before.name} has not been computed yet; run midspread refresh "
                     f"{before.name} first."
                 )
-            note_undo(engine, before.name, before)
+            stamp = ledger.next_stamp(engine)
+            note_undo(engine, stamp, before.name, before)
             after = change(engine, before)
             computed_in_order(after)  # refuses a circle
             equip(engine, after)
@@ -135,7 +135,7 @@ def _change(
                 engine.execute(f"CREATE OR REPLACE TABLE {table} AS {query}")
             except duckdb.Error as error:
                 raise _not_computed(after, error) from None
-            written = replace(after, stamp=ledger.next_stamp(engine), changed=datetime.now(UTC))
+            written = replace(after, stamp=stamp, changed=datetime.now(UTC))
             ledger.write_grid(engine, written)
             gone = {c.name for c in before.columns} - {c.name for c in after.columns}
             new = {c.name for c in after.columns} - {c.name for c in before.columns}
@@ -164,7 +164,7 @@ def _typed(engine: duckdb.DuckDBPyConnection, grid: Grid, column: Column) -> Col
 
 
 def _not_computed(grid: Grid, error: duckdb.Error) -> MidspreadError:
-    reason = str(error).split("\n", 1)[0].split(": ", 1)[-1].rstrip(".")
+    reason = str(error).split("\n", 1)[0].split(": ", 1)[-1].rstrip(".!")
     column = grid.columns[-1]
     return MidspreadError(
         f"column: {column.name} of {grid.name} cannot be computed as ({column.expression}): "

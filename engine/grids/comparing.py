@@ -1,5 +1,8 @@
 """`history` and `changes`: what was done to a grid, and how two of its versions differ."""
 
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from datetime import datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Final
 
@@ -7,7 +10,7 @@ import duckdb
 
 from midspread.engine.errors import MidspreadError, UsageError
 from midspread.engine.grids import ledger
-from midspread.engine.grids.model import Grid
+from midspread.engine.grids.model import Grid, GridKind
 from midspread.engine.nearest import nearest
 from midspread.engine.store.quoting import literal, quoted
 from midspread.engine.store.store import Store
@@ -15,7 +18,7 @@ from midspread.engine.store.store import Store
 if TYPE_CHECKING:
     import pyarrow as pa
 
-_NUMERIC: Final = ("INT", "DOUBLE", "FLOAT", "DECIMAL", "REAL", "NUMERIC", "HUGEINT")
+_FRACTIONAL: Final = ("DOUBLE", "FLOAT", "DECIMAL")
 
 
 def found_grid(engine: duckdb.DuckDBPyConnection, command: str, name: str) -> Grid:
@@ -53,6 +56,9 @@ def history(store_path: Path, name: str) -> "pa.Table":
             " ON lower(v.grid) = lower(c.grid) AND c.action IN ('keep', 'refresh')"
             " AND v.version = TRY_CAST(c.new AS INTEGER)"
             f" WHERE lower(c.grid) = {literal(name.lower())}"
+            # A push that was begun and then confirmed or refused is one line, not two.
+            " AND NOT (c.action = 'push begun' AND EXISTS (FROM store.ledger.changes AS d WHERE"
+            " d.stamp = c.stamp AND d.action IN ('pushed', 'push failed')))"
             " ORDER BY c.stamp DESC, c.key, c.name"
         ).to_arrow_table()
     store.close()
@@ -77,6 +83,11 @@ def version_table(engine: duckdb.DuckDBPyConnection, command: str, grid: Grid, v
             [grid.name],
         ).fetchall()
     ]
+    if grid.kind is GridKind.ENTERED:
+        raise MidspreadError(
+            f"{command}: {grid.name} is a grid of typed-in values, which has no versions; "
+            f"midspread history {grid.name} lists every change."
+        )
     if version not in kept:
         listed = ", ".join(map(str, kept)) or "none"
         raise MidspreadError(
@@ -85,8 +96,56 @@ def version_table(engine: duckdb.DuckDBPyConnection, command: str, grid: Grid, v
     return ledger.earlier(grid.name, version)
 
 
+@dataclass(frozen=True)
+class EarlierVersion:
+    """What is known of an earlier version: when and why it was made, its query, its rows."""
+
+    made: datetime | None
+    cause: str
+    rows: int
+    sql: str
+    first: "pa.Table"
+
+
+def earlier_version(store_path: Path, grid: Grid, version: int, most_rows: int) -> EarlierVersion:
+    """An earlier version of a grid with its first rows.
+
+    Raises
+    ------
+    MidspreadError
+        When that version is not kept.
+    """
+    store = Store.open(store_path, create=False)
+    try:
+        with store.reading() as engine:
+            table = version_table(engine, "show", grid, version)
+            (made, cause, rows, sql) = engine.execute(
+                "SELECT epoch_us(made), cause, row_count, sql FROM store.ledger.versions"
+                " WHERE lower(grid) = lower($1) AND version = $2",
+                [grid.name, version],
+            ).fetchall()[0]
+            first = first_rows(engine, grid, table, most_rows)
+    finally:
+        store.close()
+    return EarlierVersion(ledger.moment(made), cause, rows, sql, first)
+
+
+def first_rows(
+    engine: duckdb.DuckDBPyConnection, grid: Grid, table: str, most_rows: int
+) -> "pa.Table":
+    """The first rows of a grid's table in the order of its key, where that version has one."""
+    there = {str(row[0]) for row in engine.execute(f"DESCRIBE {table}").fetchall()}
+    order = ", ".join(quoted(key) for key in grid.keys if key in there)
+    by_key = f" ORDER BY {order}" if order else ""
+    return engine.sql(f"FROM {table}{by_key} LIMIT {most_rows}").to_arrow_table()
+
+
 def changes(
-    store_path: Path, name: str, before: int | None = None, after: int | None = None
+    store_path: Path,
+    name: str,
+    before: int | None = None,
+    after: int | None = None,
+    columns: Sequence[str] = (),
 ) -> tuple["pa.Table", int, int]:
     """How two versions of a grid differ, by key.
 
@@ -98,6 +157,8 @@ def changes(
         Of the grid, which must have a key.
     before, after : int, optional
         The versions; by default the last one before the present, and the present.
+    columns : sequence of str
+        Only changes of these columns; of all when empty. Rows added and gone are always told.
 
     Returns
     -------
@@ -110,6 +171,8 @@ def changes(
     try:
         with store.reading() as engine:
             grid = found_grid(engine, "changes", name)
+            if grid.kind is GridKind.ENTERED:
+                version_table(engine, "changes", grid, 0)
             if not grid.keys:
                 raise MidspreadError(
                     f"changes: {grid.name} has no key, so its rows cannot be told apart; name one "
@@ -124,13 +187,30 @@ def changes(
                 )
             old = version_table(engine, "changes", grid, first)
             new = version_table(engine, "changes", grid, last)
-            table = engine.sql(_changes_query(engine, grid, old, new)).to_arrow_table()
+            only = _of_grid(grid, columns)
+            table = engine.sql(_changes_query(engine, grid, old, new, only)).to_arrow_table()
     finally:
         store.close()
     return table, first, last
 
 
-def _changes_query(engine: duckdb.DuckDBPyConnection, grid: Grid, old: str, new: str) -> str:
+def _of_grid(grid: Grid, names: Sequence[str]) -> frozenset[str]:
+    """The columns of some names as the grid spells them; of all when there are none."""
+    for name in names:
+        if grid.column(name) is None:
+            there = [column.name for column in grid.columns]
+            meant = nearest(name, there)
+            hint = f"did you mean {meant}?" if meant else f"it has {', '.join(there)}."
+            raise UsageError(f"changes: {grid.name} has no column {name}; {hint}")
+    wanted = {name.casefold() for name in names}
+    return frozenset(
+        column.name for column in grid.columns if not names or column.name.casefold() in wanted
+    )
+
+
+def _changes_query(
+    engine: duckdb.DuckDBPyConnection, grid: Grid, old: str, new: str, only: frozenset[str]
+) -> str:
     kinds = {str(row[0]): str(row[1]) for row in engine.execute(f"DESCRIBE {new}").fetchall()}
     before = {str(row[0]) for row in engine.execute(f"DESCRIBE {old}").fetchall()}
     shared = [name for name in kinds if name in before and name not in grid.keys]
@@ -150,12 +230,12 @@ def _changes_query(engine: duckdb.DuckDBPyConnection, grid: Grid, old: str, new:
         f"SELECT {keys}, 'added' AS what, {nothing} FROM {joined} WHERE {there[1]} IS NULL",
         f"SELECT {keys}, 'gone' AS what, {nothing} FROM {joined} WHERE {there[0]} IS NULL",
     ]
-    for name in shared:
+    for name in [one for one in shared if one in only]:
         column = quoted(name)
         change = in_se = "CAST(NULL AS DOUBLE)"
-        if kinds[name].upper().startswith(_NUMERIC) or "INT" in kinds[name].upper():
+        if _is_number(kinds[name]):
             change = f"CAST(n.{column} AS DOUBLE) - CAST(o.{column} AS DOUBLE)"
-            se = _standard_error(name, shared)
+            se = _standard_error(name, {one: kinds[one] for one in shared})
             if se:
                 squares = " + ".join(f"CAST({v}.{quoted(se)} AS DOUBLE) ** 2" for v in "on")
                 spread = f"sqrt({squares})"
@@ -170,12 +250,26 @@ def _changes_query(engine: duckdb.DuckDBPyConnection, grid: Grid, old: str, new:
     return f'FROM ({" UNION ALL ".join(parts)}) ORDER BY {order}, what, "column"'
 
 
-def _standard_error(name: str, columns: list[str]) -> str:
-    """The column that holds a column's standard error; empty when there is none."""
-    lower = {one.casefold(): one for one in columns}
+def _is_number(kind: str) -> bool:
+    upper = kind.upper()
+    is_whole = upper.endswith("INT") or upper in ("INTEGER", "UINTEGER")
+    return is_whole or (upper.startswith(_FRACTIONAL) and "[" not in upper)
+
+
+def _standard_error(name: str, kinds: Mapping[str, str]) -> str:
+    """The column that holds a column's standard error; empty when there is none.
+
+    That is the one of its name with _se; a plain se belongs to the last column of fractions before
+    it.
+    """
+    lower = {one.casefold(): one for one in kinds}
     own = lower.get(f"{name.casefold()}_se")
-    if own:
-        return own
-    is_plain = name.casefold() not in ("se", "n") and not name.casefold().startswith("n_")
-    is_error = name.casefold().endswith("_se")
-    return lower.get("se", "") if is_plain and not is_error else ""
+    if own or "se" not in lower:
+        return own or ""
+    names = list(kinds)
+    before = [
+        one
+        for one in names[: names.index(lower["se"])]
+        if kinds[one].upper().startswith(_FRACTIONAL) and not one.casefold().endswith("_se")
+    ]
+    return lower["se"] if before and before[-1] == name else ""

@@ -1,5 +1,6 @@
 """What computing a grid's query gives, before it is written to the store."""
 
+import re
 import time
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
@@ -7,6 +8,7 @@ from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import version
 from pathlib import Path
+from typing import Final
 
 import duckdb
 
@@ -46,6 +48,9 @@ class Computed:
     record: Record
     reads: tuple[str, ...]
     grouped_by: tuple[str, ...]
+
+
+_WORD: Final = re.compile(r"\w+")
 
 
 class Inquiry:
@@ -103,6 +108,8 @@ class Inquiry:
     def record(self) -> Record:
         """What the rows rest on; call it when the query has run."""
         text = ";".join([*self._script, *self._before.definitions.values()]).lower()
+        words = set(_WORD.findall(text))
+        called = {name: one for name, one in self._functions.items() if name in words}
         return Record(
             files=files_of(self._before),
             definitions={
@@ -115,8 +122,12 @@ class Inquiry:
                 for name, stamp in self._before.definitions.items()
                 if name.startswith("grid ")
             },
-            functions={
-                name: function.version for name, function in self._functions.items() if name in text
+            functions={name: function.version for name, function in called.items()},
+            seeds={
+                name: float(str(parameter.default))
+                for name, function in called.items()
+                for parameter in function.parameters
+                if parameter.name == "seed"
             },
             duckdb=duckdb.__version__,
             midspread=version("midspread"),

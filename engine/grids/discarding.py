@@ -46,14 +46,13 @@ def discard(store_path: Path, name: str, *, with_dependents: bool = False) -> li
             if len(going) > 1 and not with_dependents:
                 users = ", ".join(grids[folded].name for folded in going[1:])
                 raise MidspreadError(
-                    f"discard: {users} rest on {grids[going[0]].name}; discard them first, or all "
-                    f"with --with-dependents."
+                    f"discard: {users} {'rests' if len(going) == 2 else 'rest'} on "
+                    f"{grids[going[0]].name}; discard that first, or all with --with-dependents."
                 )
-            for folded in going:
-                note_undo(engine, grids[folded].name, grids[folded])
             stamp = ledger.next_stamp(engine)
             for folded in going:
                 grid = grids[folded]
+                note_undo(engine, stamp, grid.name, grid)
                 ledger.log(engine, stamp, grid.name, "discard")
                 engine.execute(f"DROP TABLE IF EXISTS {ledger.contents(grid.name)}")
                 for table in ("entries", "versions"):

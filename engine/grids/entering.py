@@ -4,24 +4,21 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import Final
 
 import duckdb
 
 from midspread.engine.errors import MidspreadError, UsageError
 from midspread.engine.grids import ledger
 from midspread.engine.grids.definitions import listed_columns
+from midspread.engine.grids.given import GIVEN, KEY, columns_given, count_new, load, no_such_row
 from midspread.engine.grids.keeping import folder_of
 from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind, checked_name
 from midspread.engine.grids.restoring import note_rows, note_undo
-from midspread.engine.grids.sources import check_no_source
-from midspread.engine.grids.tables import computed_in_order, key_text
+from midspread.engine.grids.sources import check_free
+from midspread.engine.grids.tables import computing_steps, key_text
 from midspread.engine.nearest import nearest
 from midspread.engine.store.quoting import quoted
 from midspread.engine.store.store import Store
-
-_GIVEN: Final = "temp.main._m_given"
-_KEY: Final = "_m_key"
 
 
 @dataclass(frozen=True)
@@ -61,7 +58,7 @@ def create(store_path: Path, name: str, columns: str, keys: Sequence[str]) -> Gr
     store = Store.open(store_path)
     try:
         with store.writing() as engine:
-            check_no_source("enter", engine, name)
+            check_free("enter", engine, name)
             if name.casefold() in ledger.grids(engine):
                 raise MidspreadError(
                     f"enter: there is a grid {name} already; type values into it, or add a column "
@@ -75,13 +72,14 @@ def create(store_path: Path, name: str, columns: str, keys: Sequence[str]) -> Gr
                         f"enter: --key names {key}, which is not among the columns "
                         f"({', '.join(known.values())}); name one of them."
                     )
-            note_undo(engine, name, None)
+            stamp = ledger.next_stamp(engine)
+            note_undo(engine, stamp, name, None)
             grid = Grid(
                 name=name,
                 kind=GridKind.ENTERED,
                 keys=tuple(known[key.casefold()] for key in keys),
                 columns=made,
-                stamp=ledger.next_stamp(engine),
+                stamp=stamp,
                 version=1,
                 changed=datetime.now(UTC),
                 folder=folder_of(store.path),
@@ -89,7 +87,7 @@ def create(store_path: Path, name: str, columns: str, keys: Sequence[str]) -> Gr
             listed = ", ".join(f"{quoted(column.name)} {column.type}" for column in made)
             engine.execute(f"CREATE TABLE {ledger.contents(name)} ({listed})")
             ledger.write_grid(engine, grid)
-            ledger.log(engine, grid.stamp, name, "created")
+            ledger.log(engine, stamp, name, "created")
     finally:
         store.close()
     return grid
@@ -126,13 +124,18 @@ def enter(
     try:
         with store.writing() as engine:
             grid = grid_to_enter(engine, name)
-            chosen = _columns(grid, columns)
-            _load(engine, grid, chosen, rows)
-            new = _count_new(engine, grid)
+            chosen = columns_given(grid, columns)
+            load(engine, grid, chosen, rows)
+            new = count_new(engine, grid)
             if grid.kind is GridKind.DERIVED and new:
-                raise _no_such_row(engine, grid)
-            stamp = note_rows(engine, grid, _GIVEN, _KEY)
+                raise no_such_row(engine, grid)
+            stamp = ledger.next_stamp(engine)
             cells = _log_cells(engine, stamp, grid, chosen, note)
+            if not (new or cells):  # what rests on the grid stays fresh
+                if note:
+                    _log_note(engine, stamp, grid, note)
+                return Entered(grid, 0, 0)
+            note_rows(engine, stamp, grid, GIVEN, KEY)
             if grid.kind is GridKind.DERIVED:
                 _write_entries(engine, grid, chosen, note)
             _write_rows(engine, grid, chosen)
@@ -161,26 +164,27 @@ def delete(
                     f"enter: the rows of {grid.name} come from its query; change that with "
                     f"midspread keep {grid.name} --replace."
                 )
-            chosen = _columns(grid, columns)
+            chosen = columns_given(grid, columns)
             if {c.name for c in chosen} != set(grid.keys):
                 raise UsageError(
                     f"enter: --delete takes the key and nothing else; write "
                     f"{' '.join(f'{key}=…' for key in grid.keys)}."
                 )
-            _load(engine, grid, chosen, [values])
-            if _count_new(engine, grid):
-                raise _no_such_row(engine, grid)
-            stamp = note_rows(engine, grid, _GIVEN, _KEY)
+            load(engine, grid, chosen, [values])
+            if count_new(engine, grid):
+                raise no_such_row(engine, grid)
+            stamp = ledger.next_stamp(engine)
+            note_rows(engine, stamp, grid, GIVEN, KEY)
             table = ledger.contents(grid.name)
             engine.execute(
                 f"INSERT INTO store.ledger.changes SELECT $1, now(), $2, 'deleted',"
                 f" {key_text(grid.keys, '_m_row')}, '', to_json(_m_row)::VARCHAR, NULL, $3"
                 f" FROM {table} AS _m_row WHERE {key_text(grid.keys, '_m_row')}"
-                f" IN (SELECT {_KEY} FROM {_GIVEN})",
+                f" IN (SELECT {KEY} FROM {GIVEN})",
                 [stamp, grid.name, note],
             )
             engine.execute(
-                f"DELETE FROM {table} WHERE {key_text(grid.keys)} IN (SELECT {_KEY} FROM {_GIVEN})"
+                f"DELETE FROM {table} WHERE {key_text(grid.keys)} IN (SELECT {KEY} FROM {GIVEN})"
             )
             written = replace(grid, stamp=stamp, changed=datetime.now(UTC), rows=grid.rows - 1)
             ledger.write_grid(engine, written)
@@ -212,112 +216,6 @@ def grid_to_enter(engine: duckdb.DuckDBPyConnection, name: str) -> Grid:
     return grid
 
 
-def _columns(grid: Grid, names: Sequence[str]) -> list[Column]:
-    """The columns that are given, when they may be typed in and the key is among them."""
-    chosen: list[Column] = []
-    keys = {key.casefold() for key in grid.keys}
-    for name in names:
-        column = grid.column(name)
-        if column is None:
-            meant = nearest(name, [c.name for c in grid.columns])
-            hint = f"did you mean {meant}?" if meant else f"it has {_listed(grid.columns)}."
-            raise MidspreadError(f"enter: {grid.name} has no column {name}; {hint}")
-        if column in chosen:
-            raise UsageError(f"enter: {column.name} is given twice; give it once.")
-        if column.kind is not ColumnKind.ENTERED and column.name.casefold() not in keys:
-            source = "the query" if column.kind is ColumnKind.DERIVED else f"({column.expression})"
-            raise MidspreadError(
-                f"enter: {column.name} of {grid.name} is computed by {source} and cannot be typed "
-                f"in; those that can are {_listed(grid.of_kind(ColumnKind.ENTERED))}."
-            )
-        chosen.append(column)
-    missing = [key for key in grid.keys if grid.column(key) not in chosen]
-    if missing:
-        raise UsageError(
-            f"enter: {grid.name} finds its rows by {', '.join(grid.keys)}, and {missing[0]} is not "
-            f"given; add {missing[0]}=…."
-        )
-    return chosen
-
-
-def _listed(columns: Sequence[Column]) -> str:
-    return ", ".join(column.name for column in columns)
-
-
-def _load(
-    engine: duckdb.DuckDBPyConnection,
-    grid: Grid,
-    columns: Sequence[Column],
-    rows: Sequence[Sequence[str | None]],
-) -> None:
-    """Put the values into a table of the engine's, each in its column's type, with the key."""
-    listed = ", ".join(f"c{i} VARCHAR" for i in range(len(columns)))
-    engine.execute(f"CREATE OR REPLACE TEMP TABLE _m_texts ({listed})")
-    if rows:
-        marks = ", ".join(f"${i + 1}" for i in range(len(columns)))
-        engine.executemany(f"INSERT INTO temp.main._m_texts VALUES ({marks})", [*map(list, rows)])
-    for i, column in enumerate(columns):
-        wrong = engine.execute(
-            f"SELECT c{i} FROM temp.main._m_texts WHERE c{i} IS NOT NULL"
-            f" AND TRY_CAST(c{i} AS {column.type}) IS NULL LIMIT 1"
-        ).fetchall()
-        if wrong:
-            text = wrong[0][0]
-            remedy = (
-                f"write {column.name}=NULL to leave it empty."
-                if text == ""
-                else "correct it, or leave the column out."
-            )
-            raise MidspreadError(
-                f"enter: {column.name} of {grid.name} takes {column.type}, and {text!r} is none; "
-                f"{remedy}"
-            )
-        if (
-            column.name in grid.keys
-            and engine.execute(
-                f"SELECT 1 FROM temp.main._m_texts WHERE c{i} IS NULL LIMIT 1"
-            ).fetchall()
-        ):
-            raise MidspreadError(
-                f"enter: {column.name} is part of the key of {grid.name} and cannot be NULL; give "
-                f"it a value."
-            )
-    typed = ", ".join(
-        f"CAST(c{i} AS {column.type}) AS {quoted(column.name)}" for i, column in enumerate(columns)
-    )
-    engine.execute(
-        f"CREATE OR REPLACE TEMP TABLE _m_given AS SELECT *, {key_text(grid.keys)} AS {_KEY}"
-        f" FROM (SELECT {typed} FROM temp.main._m_texts)"
-    )
-    twice = engine.execute(
-        f"SELECT {_KEY} FROM {_GIVEN} GROUP BY ALL HAVING count(*) > 1 LIMIT 1"
-    ).fetchall()
-    if twice:
-        raise MidspreadError(
-            f"enter: the key {twice[0][0]} ({', '.join(grid.keys)}) is given twice; give it once."
-        )
-
-
-def _count_new(engine: duckdb.DuckDBPyConnection, grid: Grid) -> int:
-    """How many of the given rows are not there yet."""
-    rows = engine.execute(
-        f"SELECT count(*) FROM {_GIVEN} WHERE {_KEY} NOT IN"
-        f" (SELECT {key_text(grid.keys)} FROM {ledger.contents(grid.name)})"
-    ).fetchall()
-    return int(rows[0][0])
-
-
-def _no_such_row(engine: duckdb.DuckDBPyConnection, grid: Grid) -> MidspreadError:
-    keys = engine.execute(
-        f"SELECT {_KEY} FROM {_GIVEN} WHERE {_KEY} NOT IN (SELECT {key_text(grid.keys)}"
-        f" FROM {ledger.contents(grid.name)}) ORDER BY ALL LIMIT 1"
-    ).fetchall()
-    return MidspreadError(
-        f"enter: {grid.name} has no row with the key {keys[0][0]} ({', '.join(grid.keys)}); "
-        f"midspread show {grid.name} lists those it has."
-    )
-
-
 def _log_cells(
     engine: duckdb.DuckDBPyConnection,
     stamp: int,
@@ -325,24 +223,38 @@ def _log_cells(
     columns: Sequence[Column],
     note: str,
 ) -> int:
-    """Note every cell whose value will be another; how many."""
+    """Note every cell whose value will be another, and new rows without values; how many cells."""
     cells = 0
     for column in columns:
         if column.name in grid.keys:
             continue
         name = quoted(column.name)
         rows = engine.execute(
-            f"INSERT INTO store.ledger.changes SELECT $1, now(), $2, 'entered', _m_new.{_KEY}, $3,"
+            f"INSERT INTO store.ledger.changes SELECT $1, now(), $2, 'entered', _m_new.{KEY}, $3,"
             f" CAST(_m_old.{name} AS VARCHAR), CAST(_m_new.{name} AS VARCHAR), $4"
-            f" FROM {_GIVEN} AS _m_new LEFT JOIN {ledger.contents(grid.name)} AS _m_old"
-            f" ON {key_text(grid.keys, '_m_old')} = _m_new.{_KEY}"
+            f" FROM {GIVEN} AS _m_new LEFT JOIN {ledger.contents(grid.name)} AS _m_old"
+            f" ON {key_text(grid.keys, '_m_old')} = _m_new.{KEY}"
             f" WHERE _m_old.{name} IS DISTINCT FROM _m_new.{name}",
             [stamp, grid.name, column.name, note],
         ).fetchall()
         cells += int(rows[0][0])
-    if cells == 0:
-        ledger.log(engine, stamp, grid.name, "entered", note=note)
+    engine.execute(
+        f"INSERT INTO store.ledger.changes SELECT $1, now(), $2, 'entered', {KEY}, '', NULL, NULL,"
+        f" $3 FROM {GIVEN} WHERE {KEY} NOT IN (SELECT {key_text(grid.keys)} FROM"
+        f" {ledger.contents(grid.name)}) AND {KEY} NOT IN"
+        " (SELECT key FROM store.ledger.changes WHERE stamp = $1)",
+        [stamp, grid.name, note],
+    )
     return cells
+
+
+def _log_note(engine: duckdb.DuckDBPyConnection, stamp: int, grid: Grid, note: str) -> None:
+    """Note what was written beside values that were there already."""
+    engine.execute(
+        f"INSERT INTO store.ledger.changes SELECT $1, now(), $2, 'noted', {KEY}, '', NULL, NULL, $3"
+        f" FROM {GIVEN}",
+        [stamp, grid.name, note],
+    )
 
 
 def _write_entries(
@@ -354,12 +266,12 @@ def _write_entries(
             continue
         engine.execute(
             "DELETE FROM store.ledger.entries WHERE lower(grid) = lower($1)"
-            f" AND lower(name) = lower($2) AND key IN (SELECT {_KEY} FROM {_GIVEN})",
+            f" AND lower(name) = lower($2) AND key IN (SELECT {KEY} FROM {GIVEN})",
             [grid.name, column.name],
         )
         engine.execute(
-            f"INSERT INTO store.ledger.entries SELECT $1, {_KEY}, $2,"
-            f" CAST({quoted(column.name)} AS VARCHAR), $3, now() FROM {_GIVEN}"
+            f"INSERT INTO store.ledger.entries SELECT $1, {KEY}, $2,"
+            f" CAST({quoted(column.name)} AS VARCHAR), $3, now() FROM {GIVEN}"
             f" WHERE {quoted(column.name)} IS NOT NULL",
             [grid.name, column.name, note],
         )
@@ -371,13 +283,13 @@ def _write_rows(engine: duckdb.DuckDBPyConnection, grid: Grid, columns: Sequence
     if changed:
         settings = ", ".join(f"{quoted(c.name)} = _m_new.{quoted(c.name)}" for c in changed)
         engine.execute(
-            f"UPDATE {table} AS _m_row SET {settings} FROM {_GIVEN} AS _m_new"
-            f" WHERE {key_text(grid.keys, '_m_row')} = _m_new.{_KEY}"
+            f"UPDATE {table} AS _m_row SET {settings} FROM {GIVEN} AS _m_new"
+            f" WHERE {key_text(grid.keys, '_m_row')} = _m_new.{KEY}"
         )
     if grid.kind is GridKind.ENTERED:
         names = ", ".join(quoted(column.name) for column in columns)
         engine.execute(
-            f"INSERT INTO {table} ({names}) SELECT {names} FROM {_GIVEN} WHERE {_KEY} NOT IN"
+            f"INSERT INTO {table} ({names}) SELECT {names} FROM {GIVEN} WHERE {KEY} NOT IN"
             f" (SELECT {key_text(grid.keys)} FROM {table})"
         )
 
@@ -385,26 +297,4 @@ def _write_rows(engine: duckdb.DuckDBPyConnection, grid: Grid, columns: Sequence
 def _compute(engine: duckdb.DuckDBPyConnection, grid: Grid) -> None:
     """Compute the rows' other columns again, each after those it rests on."""
     for step in computing_steps(engine, grid):
-        engine.execute(f"{step} WHERE {key_text(grid.keys)} IN (SELECT {_KEY} FROM {_GIVEN})")
-
-
-def computing_steps(engine: duckdb.DuckDBPyConnection, grid: Grid) -> list[str]:
-    """Statements that compute the computed columns of all rows; a WHERE may follow."""
-    ordered = computed_in_order(grid)
-    if ordered:
-        equip(engine, grid)
-    return [
-        f"UPDATE {ledger.contents(grid.name)} SET {quoted(column.name)} = ({column.expression})"
-        for column in ordered
-    ]
-
-
-def equip(engine: duckdb.DuckDBPyConnection, grid: Grid) -> None:
-    """Register our functions where a computed column of a grid calls one."""
-    from midspread.udfs import functions
-
-    text = " ".join(column.expression for column in grid.columns).lower()
-    if any(name in text for name in functions()):
-        from midspread.udfs import register
-
-        register(engine)
+        engine.execute(f"{step} WHERE {key_text(grid.keys)} IN (SELECT {KEY} FROM {GIVEN})")

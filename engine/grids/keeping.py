@@ -11,7 +11,7 @@ from midspread.engine.grids import ledger
 from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind, checked_name
 from midspread.engine.grids.publishing import publish
 from midspread.engine.grids.restoring import note_undo
-from midspread.engine.grids.sources import check_no_source
+from midspread.engine.grids.sources import check_free
 from midspread.engine.store.store import Store
 
 if TYPE_CHECKING:
@@ -76,7 +76,7 @@ def keep(
     store = Store.open(store_path)
     with store.reading() as engine:
         before = ledger.grids(engine)
-        check_no_source("keep", engine, name)
+        check_free("keep", engine, name)
     old = before.get(name.casefold())
     _check_replacing(name, old, replacing)
     if later:
@@ -109,12 +109,10 @@ def keep(
                     f"keep: {name} was changed by another command meanwhile; look at it with "
                     f"midspread show {name}, then keep again."
                 )
-            note_undo(engine, grid.name, now)
             if old:
                 grid = replace(grid, columns=_with_derived(old, grid))
-            written, _ = publish(
-                engine, "keep", grid, computed, "query replaced" if old else "first kept"
-            )
+            cause = "query replaced" if old else "first kept"
+            written, _ = publish(engine, "keep", now, grid, computed, cause)
     finally:
         store.close()
     return Kept(written, is_inferred, old is None)
@@ -204,8 +202,8 @@ def _keep_for_later(
     )
     try:
         with store.writing() as engine:
-            note_undo(engine, grid.name, old)
             stamp = ledger.next_stamp(engine)
+            note_undo(engine, stamp, grid.name, old)
             ledger.write_grid(engine, grid)
             ledger.log(engine, stamp, grid.name, "keep", note="kept for later")
     finally:

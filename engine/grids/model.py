@@ -65,6 +65,8 @@ class Record:
         Stamps of the grids it reads, by name.
     functions : dict
         Versions of our functions it calls.
+    seeds : dict
+        For each function that draws at random, the seed it uses where the query gives none.
     duckdb, midspread : str
         Versions of the engine and of this package.
     computed : str
@@ -79,6 +81,7 @@ class Record:
     definitions: dict[str, str] = field(default_factory=dict)
     grids: dict[str, int] = field(default_factory=dict)
     functions: dict[str, int] = field(default_factory=dict)
+    seeds: dict[str, float] = field(default_factory=dict)
     duckdb: str = ""
     midspread: str = ""
     computed: str = ""

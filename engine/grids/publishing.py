@@ -2,6 +2,7 @@
 
 from dataclasses import replace
 from datetime import UTC, datetime
+from pathlib import Path
 from typing import Final
 
 import duckdb
@@ -10,8 +11,10 @@ from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
 from midspread.engine.grids.computing import Computed
 from midspread.engine.grids.model import RESULT, Column, ColumnKind, Grid
+from midspread.engine.grids.restoring import note_undo
 from midspread.engine.grids.tables import contents_query, key_text
 from midspread.engine.store.quoting import literal, quoted
+from midspread.engine.store.store import Store
 
 VERSIONS_SETTING: Final = "versions_kept"
 DEFAULT_VERSIONS: Final = 10
@@ -19,7 +22,12 @@ _SCRATCH: Final = "_midspread_result"
 
 
 def publish(
-    engine: duckdb.DuckDBPyConnection, command: str, grid: Grid, computed: Computed, cause: str
+    engine: duckdb.DuckDBPyConnection,
+    command: str,
+    before: Grid | None,
+    grid: Grid,
+    computed: Computed,
+    cause: str,
 ) -> tuple[Grid, bool]:
     """Put what was computed in the place of a grid's contents.
 
@@ -29,6 +37,8 @@ def publish(
         Of the store, within `Store.writing`.
     command : str
         Who does it, for messages.
+    before : Grid or None
+        As it is, noted for `undo`; None when it is new.
     grid : Grid
         As it shall be, but for its derived columns, stamp, version, rows and record.
     computed : Computed
@@ -49,6 +59,7 @@ def publish(
     grid = replace(grid, columns=(*derived, *added))
     _check_keys(engine, command, grid, base)
     changed = grid.version == 0 or _differs(engine, grid, base)
+    is_other_query = before is None or (before.sql, before.keys) != (grid.sql, grid.keys)
     now = datetime.now(UTC)
     written = replace(
         grid,
@@ -57,12 +68,15 @@ def publish(
         record=computed.record,
         failure="",
     )
+    if changed or is_other_query:
+        stamp = ledger.next_stamp(engine)
+        note_undo(engine, stamp, grid.name, before)
+        if not changed:
+            ledger.log(engine, stamp, grid.name, command, note=f"{cause}, with the same result")
     if changed:
         if grid.version > 0:
             _set_aside(engine, grid)
-        written = replace(
-            written, stamp=ledger.next_stamp(engine), version=grid.version + 1, changed=now
-        )
+        written = replace(written, stamp=stamp, version=grid.version + 1, changed=now)
         engine.execute(
             f"CREATE OR REPLACE TABLE {ledger.contents(grid.name)} AS {contents_query(grid, base)}"
         )
@@ -78,7 +92,7 @@ def publish(
                 computed.record.to_json(),
             ],
         )
-        ledger.log(engine, written.stamp, grid.name, command, new=str(written.version), note=cause)
+        ledger.log(engine, stamp, grid.name, command, new=str(written.version), note=cause)
     ledger.write_grid(engine, written)
     return written, changed
 
@@ -141,17 +155,41 @@ def _set_aside(engine: duckdb.DuckDBPyConnection, grid: Grid) -> None:
         f"CREATE OR REPLACE TABLE {ledger.earlier(grid.name, grid.version)} AS "
         f"FROM {ledger.contents(grid.name)}"
     )
-    for (version,) in engine.execute(
+    _let_go(engine, grid.name, grid.version - versions_kept(engine))
+
+
+def _let_go(engine: duckdb.DuckDBPyConnection, name: str, last: int) -> int:
+    """Drop the versions of a grid up to one; how many there were."""
+    versions = engine.execute(
         "SELECT version FROM store.ledger.versions WHERE lower(grid) = lower($1) AND is_kept"
         " AND version <= $2",
-        [grid.name, grid.version - versions_kept(engine)],
-    ).fetchall():
-        engine.execute(f"DROP TABLE IF EXISTS {ledger.earlier(grid.name, version)}")
+        [name, last],
+    ).fetchall()
+    for (version,) in versions:
+        engine.execute(f"DROP TABLE IF EXISTS {ledger.earlier(name, version)}")
         engine.execute(
             "UPDATE store.ledger.versions SET is_kept = false"
             " WHERE lower(grid) = lower($1) AND version = $2",
-            [grid.name, version],
+            [name, version],
         )
+    return len(versions)
+
+
+def keep_versions(store_path: Path, count: int) -> int:
+    """Set how many earlier versions of each grid a store keeps; how many it lets go of for that."""
+    store = Store.open(store_path, create=False)
+    try:
+        with store.writing() as engine:
+            engine.execute("DELETE FROM store.ledger.about WHERE name = $1", [VERSIONS_SETTING])
+            engine.execute(
+                "INSERT INTO store.ledger.about VALUES ($1, $2)", [VERSIONS_SETTING, str(count)]
+            )
+            return sum(
+                _let_go(engine, grid.name, grid.version - 1 - count)
+                for grid in ledger.grids(engine).values()
+            )
+    finally:
+        store.close()
 
 
 def versions_kept(engine: duckdb.DuckDBPyConnection) -> int:

@@ -18,7 +18,6 @@ from midspread.engine.grids.freshness import (
 )
 from midspread.engine.grids.model import Grid
 from midspread.engine.grids.publishing import publish
-from midspread.engine.grids.restoring import note_undo
 from midspread.engine.store.store import Store
 from midspread.udfs import functions
 
@@ -159,22 +158,21 @@ def _refresh_one(
                 return None
             computed = session.materialise("refresh", grid.sql)
             with store.writing() as engine:
-                now = ledger.grids(engine).get(grid.folded)
-                if now is None or now.sql != grid.sql:
+                before = ledger.grids(engine).get(grid.folded)
+                if before is None or before.sql != grid.sql:
                     return Refreshed(grid, why, failure="its query was changed meanwhile")
-                if not now.keys and not now.version and computed.grouped_by:
-                    now = replace(now, keys=computed.grouped_by)
-                note_undo(engine, now.name, now)
-                written, is_changed = publish(
-                    engine, "refresh", now, computed, "; ".join(why) or "tried again"
-                )
+                wished = before
+                if not before.keys and not before.version and computed.grouped_by:
+                    wished = replace(before, keys=computed.grouped_by)
+                cause = "; ".join(why) or "tried again"
+                written, is_changed = publish(engine, "refresh", before, wished, computed, cause)
             return Refreshed(written, why, is_changed)
     except Interrupted:
         raise
     except (MidspreadError, OSError) as error:
-        reason = str(error)
+        reason = str(error).removeprefix("query: ").removeprefix("refresh: ").rstrip(".")
         if isinstance(error, OSError):
-            reason = f"refresh: the folder {folder} is gone; bring it back or keep the grid anew."
+            reason = f"the folder {folder} is gone; bring it back or keep the grid anew"
         _mark_failed(store, grid, reason)
         return Refreshed(grid, why, failure=reason)
     finally:

@@ -15,14 +15,23 @@ _LEDGER_TABLES: Final = ("grids", "columns", "entries", "versions")
 CHANGES_KEPT: Final = 50
 
 
-def note_undo(engine: duckdb.DuckDBPyConnection, name: str, before: Grid | None) -> None:
+def note_undo(
+    engine: duckdb.DuckDBPyConnection, stamp: int, name: str, before: Grid | None
+) -> None:
     """Note the state of a grid before a change, within the change's own transaction.
 
-    Call it before anything is written and before the change takes its stamp: the note is for the
-    next stamp. What the ledger says of the grid is noted whole, its rows are copied aside.
+    Call it before anything of the grid is written. What the ledger says of it is noted whole, its
+    rows are copied aside.
+
+    Parameters
+    ----------
+    stamp : int
+        Of the change.
+    name : str
+        Of the grid.
+    before : Grid or None
+        The grid as it is; None where the change makes it.
     """
-    rows = engine.execute("SELECT value::BIGINT FROM store.ledger.about WHERE name = 'changes'")
-    stamp = int(rows.fetchall()[0][0]) + 1
     steps = [f"DROP TABLE IF EXISTS {ledger.contents(name)}"]
     for table in _LEDGER_TABLES:
         steps.append(
@@ -37,11 +46,15 @@ def note_undo(engine: duckdb.DuckDBPyConnection, name: str, before: Grid | None)
     write_steps(engine, stamp, name, steps)
 
 
-def note_rows(engine: duckdb.DuckDBPyConnection, grid: Grid, given: str, key: str) -> int:
-    """Note the present rows of some keys before they are changed, and take the change's stamp.
+def note_rows(
+    engine: duckdb.DuckDBPyConnection, stamp: int, grid: Grid, given: str, key: str
+) -> None:
+    """Note the present rows of some keys before they are changed.
 
     Parameters
     ----------
+    stamp : int
+        Of the change.
     grid : Grid
         As it is.
     given : str
@@ -49,7 +62,6 @@ def note_rows(engine: duckdb.DuckDBPyConnection, grid: Grid, given: str, key: st
     key : str
         Its column that holds them.
     """
-    stamp = ledger.next_stamp(engine)
     rows = f"store.aside.{quoted(f'{stamp} {grid.name}')}"
     keys = f"store.aside.{quoted(f'{stamp} {grid.name} keys')}"
     entries = f"store.aside.{quoted(f'{stamp} {grid.name} entries')}"
@@ -63,12 +75,11 @@ def note_rows(engine: duckdb.DuckDBPyConnection, grid: Grid, given: str, key: st
         f"INSERT INTO {table} FROM {rows}",
         f"DELETE FROM store.ledger.entries WHERE {own}",
         f"INSERT INTO store.ledger.entries FROM {entries}",
-        f"UPDATE store.ledger.grids SET row_count = (SELECT count(*) FROM {table})"
+        f"UPDATE store.ledger.grids SET row_count = {grid.rows}, stamp = {grid.stamp}"
         f" WHERE lower(grid) = {literal(grid.name.lower())}",
         *(f"DROP TABLE {one}" for one in (rows, keys, entries)),
     ]
     write_steps(engine, stamp, grid.name, steps)
-    return stamp
 
 
 def write_steps(engine: duckdb.DuckDBPyConnection, stamp: int, name: str, steps: list[str]) -> None:
@@ -119,6 +130,9 @@ def _forget_old(engine: duckdb.DuckDBPyConnection, stamp: int) -> None:
 def undo(engine: duckdb.DuckDBPyConnection, name: str | None = None) -> tuple[str, str]:
     """Take the last change back.
 
+    The grids have the stamps that they had before, for so have their contents: what was computed
+    from them then is fresh again.
+
     Parameters
     ----------
     engine : duckdb.DuckDBPyConnection
@@ -145,20 +159,54 @@ def undo(engine: duckdb.DuckDBPyConnection, name: str | None = None) -> tuple[st
     steps = engine.execute(
         "SELECT grid, step FROM store.ledger.undo WHERE stamp = $1 ORDER BY grid, place", [stamp]
     ).fetchall()
-    for _, step in steps:
-        engine.execute(step)
-    engine.execute("DELETE FROM store.ledger.undo WHERE stamp = $1", [stamp])
     what = engine.execute(
         "SELECT action, name, key FROM store.ledger.changes WHERE stamp = $1 LIMIT 1", [stamp]
     ).fetchall()
-    action = " ".join(part for part in what[0] if part) if what else "change"
-    now = ledger.next_stamp(engine)
+    action = _told(*what[0]) if what else "change"
     names = sorted({name for name, _ in steps})
+    if action == "discard":
+        _check_absent(engine, names)
+    for _, step in steps:
+        engine.execute(step)
+    engine.execute("DELETE FROM store.ledger.undo WHERE stamp = $1", [stamp])
+    now = ledger.next_stamp(engine)
     for grid in names:
         engine.execute(
-            "UPDATE store.ledger.grids SET stamp = $1, changed = now()"
-            " WHERE lower(grid) = lower($2) AND version > 0",
-            [now, grid],
+            "UPDATE store.ledger.grids SET changed = now()"
+            " WHERE lower(grid) = lower($1) AND version > 0",
+            [grid],
         )
+        _mark_lost_versions(engine, grid)
         ledger.log(engine, now, grid, "undo", note=f"took back: {action}")
     return ", ".join(names), action
+
+
+def _told(action: str, column: str, key: str) -> str:
+    """A change in words."""
+    whose = ", ".join(json.loads(key)) if key else ""
+    if column and whose:
+        return f"{action} {column} of {whose}"
+    return " ".join(part for part in (action, column, whose) if part)
+
+
+def _check_absent(engine: duckdb.DuckDBPyConnection, names: list[str]) -> None:
+    """Raise where a discarded grid would come back in the place of one that was made since."""
+    there = ledger.grids(engine)
+    for name in names:
+        if name.casefold() in there:
+            raise MidspreadError(
+                f"undo: the discarded grid {name} cannot come back, as another of its name was "
+                f"made since; discard that one first."
+            )
+
+
+def _mark_lost_versions(engine: duckdb.DuckDBPyConnection, name: str) -> None:
+    """Note which earlier versions were dropped since the state that has come back."""
+    engine.execute(
+        "UPDATE store.ledger.versions AS v SET is_kept = false WHERE lower(v.grid) = lower($1)"
+        " AND v.version < (SELECT g.version FROM store.ledger.grids AS g"
+        " WHERE lower(g.grid) = lower($1))"
+        " AND v.grid || ' ' || v.version NOT IN (SELECT table_name FROM duckdb_tables()"
+        " WHERE database_name = 'store' AND schema_name = 'earlier')",
+        [name],
+    )

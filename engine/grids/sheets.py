@@ -1,14 +1,17 @@
 """Rows of text from a CSV or xlsx file, for `enter --from`."""
 
+import csv
+import re
 from datetime import date, datetime, time
 from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 import duckdb
 
 from midspread.engine.errors import MidspreadError, UsageError
 
 Texts = list[list[str | None]]
+_SEPARATORS: Final = (",", ";", "\t")
 
 
 def read_sheet(path: Path) -> tuple[list[str], Texts]:
@@ -38,20 +41,37 @@ def read_sheet(path: Path) -> tuple[list[str], Texts]:
 
 
 def _csv(path: Path) -> tuple[list[str], Texts]:
+    """Read with the header's own separator: the engine would guess one anew from odd rows."""
+    try:
+        with path.open(encoding="utf-8-sig", newline="") as file:
+            first = file.readline()
+    except (OSError, UnicodeDecodeError) as error:
+        raise _unreadable(path, str(error)) from None
+    separator = max(_SEPARATORS, key=first.count)
+    names = [name.strip() for name in next(csv.reader([first], delimiter=separator), [])]
     with duckdb.connect() as engine:
         try:
-            relation = engine.execute(
-                "FROM read_csv($1, header = true, all_varchar = true, nullstr = '',"
-                " allow_quoted_nulls = false)",
-                [str(path)],
-            )
-            names = [str(column[0]) for column in relation.description or ()]
-            return names, [list(row) for row in relation.fetchall()]
+            rows = engine.execute(
+                "FROM read_csv($1, header = true, auto_detect = false, columns = $2, delim = $3,"
+                " quote = '\"', escape = '\"', nullstr = '', allow_quoted_nulls = false)",
+                [str(path), {f"c{i}": "VARCHAR" for i in range(len(names))}, separator],
+            ).fetchall()
         except duckdb.Error as error:
-            reason = str(error).split("\n", 1)[0].rstrip(".")
-            raise MidspreadError(
-                f"enter: {path} cannot be read as CSV ({reason}); correct the file."
-            ) from None
+            raise _unreadable(path, _reason(str(error))) from None
+    return names, [list(row) for row in rows]
+
+
+def _reason(text: str) -> str:
+    """The engine's complaint about a CSV file, shortened."""
+    line = re.search(r"CSV Error on Line: (\d+)", text)
+    counts = re.search(r"Expected Number of Columns: (\d+) Found: (\d+)", text)
+    if line and counts:
+        return f"line {line[1]} has {counts[2]} values where the header names {counts[1]}"
+    return text.split("\n", 1)[0].rstrip(".")
+
+
+def _unreadable(path: Path, reason: str) -> MidspreadError:
+    return MidspreadError(f"enter: {path} cannot be read as CSV ({reason}); correct the file.")
 
 
 def _xlsx(path: Path) -> tuple[list[str], Texts]:

@@ -199,8 +199,18 @@ def mentioned(store_path: Path, scripts: Iterable[str]) -> dict[str, Path]:
     }
 
 
-def check_no_source(command: str, engine: duckdb.DuckDBPyConnection, name: str) -> None:
-    """Raise when a new grid would have the name of a source, within `Store.reading`."""
+def check_free(command: str, engine: duckdb.DuckDBPyConnection, name: str) -> None:
+    """Raise when a new grid's name is that of a source or a word of SQL; within `Store.reading`."""
+    is_word = engine.execute(
+        "SELECT 1 FROM duckdb_keywords() WHERE keyword_name = lower($1)"
+        " AND keyword_category IN ('reserved', 'type_function')",
+        [name],
+    ).fetchall()
+    if is_word:
+        raise UsageError(
+            f"{command}: {name} is a word of SQL, so that FROM {name} would not be understood; "
+            f"choose another, for example {name}_grid."
+        )
     source = sources(engine).get(name.casefold())
     if source is not None:
         raise UsageError(

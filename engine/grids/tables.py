@@ -3,7 +3,10 @@
 from collections.abc import Sequence
 from graphlib import CycleError, TopologicalSorter
 
+import duckdb
+
 from midspread.engine.errors import MidspreadError
+from midspread.engine.grids import ledger
 from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind
 from midspread.engine.inputs.scanning import mentions_of
 from midspread.engine.store.quoting import literal, quoted
@@ -80,3 +83,25 @@ def computed_in_order(grid: Grid) -> list[Column]:
             f"write one of them without the other."
         ) from None
     return [computed[name] for name in order]
+
+
+def computing_steps(engine: duckdb.DuckDBPyConnection, grid: Grid) -> list[str]:
+    """Statements that compute the computed columns of all rows; a WHERE may follow."""
+    ordered = computed_in_order(grid)
+    if ordered:
+        equip(engine, grid)
+    return [
+        f"UPDATE {ledger.contents(grid.name)} SET {quoted(column.name)} = ({column.expression})"
+        for column in ordered
+    ]
+
+
+def equip(engine: duckdb.DuckDBPyConnection, grid: Grid) -> None:
+    """Register our functions where a computed column of a grid calls one."""
+    from midspread.udfs import functions
+
+    text = " ".join(column.expression for column in grid.columns).lower()
+    if any(name in text for name in functions()):
+        from midspread.udfs import register
+
+        register(engine)

@@ -88,7 +88,12 @@ class _Work:
 
 
 def push(
-    store_path: Path, wish: Wish, *, memory: str | None = None, threads: int | None = None
+    store_path: Path,
+    wish: Wish,
+    *,
+    memory: str | None = None,
+    threads: int | None = None,
+    on_progress: Callable[[float | None], None] | None = None,
 ) -> Pushed:
     """Write a grid to a table of a remembered database.
 
@@ -100,6 +105,9 @@ def push(
         What is wanted.
     memory, threads : optional
         Limits of the engine.
+    on_progress : callable, optional
+        Told several times a second what share of the rows is handed over; None once all are, and
+        where the target fetches them by itself.
 
     Raises
     ------
@@ -129,7 +137,11 @@ def push(
             record = as_text(document, wish.mode, datetime.now(UTC))
             work = _Work(store, wish, grid, place, source, record, rows)
             try:
-                return run_interruptibly(partial(_push, work), work.stop)
+                return run_interruptibly(
+                    partial(_push, work),
+                    work.stop,
+                    None if on_progress is None else lambda: on_progress(rows.share_sent),
+                )
             except Interrupted:
                 if work.done:
                     raise Interrupted(

@@ -1,5 +1,6 @@
 """A grid's rows, copied out of the store so that nobody waits for a push."""
 
+from collections.abc import Iterator
 from pathlib import Path
 from types import TracebackType
 from typing import TYPE_CHECKING, Final, Self
@@ -47,6 +48,7 @@ class GridRows:
         self.connection.execute("SET TimeZone = 'UTC'")
         self.fields: tuple[Field, ...] = ()
         self.count = 0
+        self._sent = 0
 
     def __enter__(self) -> Self:
         return self
@@ -112,5 +114,21 @@ class GridRows:
 
     def batches(self, expressions: list[str]) -> "pa.RecordBatchReader":
         """All rows, some at a time, each column as an expression gives it."""
+        import pyarrow as pa
+
         listed = ", ".join(expressions)
-        return self.connection.sql(f"SELECT {listed} FROM {_TABLE}").to_arrow_reader(_ROWS_IN_BATCH)
+        reader = self.connection.sql(f"SELECT {listed} FROM {_TABLE}").to_arrow_reader(
+            _ROWS_IN_BATCH
+        )
+        return pa.RecordBatchReader.from_batches(reader.schema, self._counted(reader))
+
+    def _counted(self, reader: "pa.RecordBatchReader") -> Iterator["pa.RecordBatch"]:
+        self._sent = 0
+        for batch in reader:
+            self._sent += batch.num_rows
+            yield batch
+
+    @property
+    def share_sent(self) -> float | None:
+        """What share of the rows has been handed over; None before the first and after the last."""
+        return self._sent / self.count if 0 < self._sent < self.count else None

@@ -10,6 +10,7 @@ from pathlib import Path
 import duckdb
 
 from midspread.engine.errors import StoreError
+from midspread.engine.grids.publishing import versions_kept
 from midspread.engine.grids.upkeep import faults_of_grids, let_go
 from midspread.engine.store.answers import EPOCH, Answers
 from midspread.engine.store.layout import ALIAS, STORAGE_VERSION, shelf_table
@@ -38,6 +39,8 @@ class StoreReport:
         When the first and the last of them were kept, in UTC.
     made : str
         When the store was made.
+    versions : int
+        How many earlier versions of each grid it keeps.
     """
 
     path: Path
@@ -48,6 +51,7 @@ class StoreReport:
     oldest: datetime | None
     newest: datetime | None
     made: str
+    versions: int
 
 
 def report(store: Store) -> StoreReport:
@@ -70,6 +74,7 @@ def report(store: Store) -> StoreReport:
         made = engine.execute(
             "SELECT max(value) FROM store.ledger.about WHERE name = 'made'"
         ).fetchall()[0][0]
+        versions = versions_kept(engine)
     return StoreReport(
         path=store.path,
         file_bytes=_file_bytes(store.path),
@@ -79,6 +84,7 @@ def report(store: Store) -> StoreReport:
         oldest=None if oldest is None else EPOCH + timedelta(microseconds=oldest),
         newest=None if newest is None else EPOCH + timedelta(microseconds=newest),
         made=made or "",
+        versions=versions,
     )
 
 

@@ -17,6 +17,7 @@ from pathlib import Path
 
 import duckdb
 
+LIMIT = "500MB"
 COMMAND = (sys.executable, "-m", "midspread.cli.main")
 
 
@@ -26,6 +27,11 @@ def run(*arguments: str, check: bool = True) -> str:
     if check and done.returncode != 0:
         raise SystemExit(f"{' '.join(arguments)} failed: {done.stderr}")
     return done.stdout
+
+
+def numbers(sql: str) -> set[int]:
+    """The whole numbers that a query gives."""
+    return set(map(int, run("query", "--recompute", sql).split()[1:]))
 
 
 def prepared(folder: Path) -> None:
@@ -39,6 +45,7 @@ def prepared(folder: Path) -> None:
         made.execute("CREATE TABLE routes AS SELECT 1 AS route")
     run("keep", "dwell", "SELECT route, count(*) AS n FROM '*.parquet' GROUP BY route")
     run("enter", "limits", "--columns", "k INTEGER, v INTEGER", "--key", "k")
+    run("keep", "total", "SELECT count(*) AS n, sum(v)::BIGINT AS v FROM limits")
     run("attach", "wh=warehouse.duckdb")
     run("push", "dwell", "wh.main.dwell")
 
@@ -48,7 +55,7 @@ def kills(count: int) -> None:
     chance = random.Random(20310101)
     with tempfile.TemporaryDirectory() as scratch:
         prepared(Path(scratch))
-        confirmed = 0
+        confirmed: set[int] = set()
         months = 1
         killed = 0
         for attempt in range(count):
@@ -77,14 +84,14 @@ def kills(count: int) -> None:
                 process.send_signal(signal.SIGKILL)
                 killed += 1
             if process.wait() == 0 and kind == "enter":
-                confirmed += 1
+                confirmed.add(attempt)
             _look(attempt)
-        entered = int(run("query", "SELECT count(*) FROM limits").split()[-1])
-        if entered < confirmed:
-            raise SystemExit(f"{confirmed} values were confirmed, and {entered} are there")
+        entered = numbers("SELECT k FROM limits WHERE v = k")
+        if not confirmed <= entered:
+            raise SystemExit(f"confirmed, and not there: {sorted(confirmed - entered)}")
         print(
-            f"{count} commands, {killed} killed: every store opened, {entered} values of "
-            f"{confirmed} confirmed ones are there, and each grid is whole"
+            f"{count} commands, {killed} killed: every store opened, all {len(confirmed)} confirmed"
+            f" values are there ({len(entered)} values in all), and each grid is whole"
         )
 
 
@@ -94,10 +101,12 @@ def _look(attempt: int) -> None:
     )
     if checked.returncode != 0:
         raise SystemExit(f"after command {attempt}: {checked.stdout}{checked.stderr}")
-    with duckdb.connect("warehouse.duckdb", read_only=True) as warehouse:
-        rows = warehouse.execute("SELECT count(*) FROM dwell").fetchall()[0][0]
-    if rows != 50:
-        raise SystemExit(f"after command {attempt}: the pushed table has {rows} rows")
+    # Every route has as many visits as the others: rows of two results would not agree.
+    for database in ("warehouse.duckdb", "midspread.duckdb"):
+        with duckdb.connect(database, read_only=True) as opened:
+            found = opened.execute("SELECT count(*), count(DISTINCT n) FROM dwell").fetchall()
+        if found != [(50, 1)]:
+            raise SystemExit(f"after command {attempt}: dwell in {database} is {found}")
 
 
 def together(seconds: float) -> None:
@@ -115,7 +124,7 @@ def together(seconds: float) -> None:
             "while time.time() < until:\n"
             "    if me < 4: run('enter', 'limits', f'k={me * 100000 + n}', f'v={n}')\n"
             "    elif me == 4: run('refresh')\n"
-            "    else: run('query', '--recompute', 'SELECT count(*) FROM limits, dwell')\n"
+            "    else: run('query', '--recompute', 'SELECT count(*) FROM limits, dwell, total')\n"
             "    n += 1\n"
             "print(n)\n"
         )
@@ -133,9 +142,13 @@ def together(seconds: float) -> None:
             if process.returncode != 0:
                 raise SystemExit(f"an error reached a user: {words}")
         counts = [int(printed) for printed, _ in done]
-        entered = int(run("query", "SELECT count(*) FROM limits").split()[-1])
-        if entered != sum(counts[:4]):
-            raise SystemExit(f"{sum(counts[:4])} values were entered, and {entered} are there")
+        expected = {me * 100000 + n for me in range(4) for n in range(counts[me])}
+        if numbers("SELECT k FROM limits WHERE v = k % 100000") != expected:
+            raise SystemExit("the values that are there are not those that were entered")
+        entered = len(expected)
+        run("refresh")
+        if numbers("SELECT n FROM total") != {entered}:
+            raise SystemExit("refresh did not count every value")
         print(
             f"{seconds:.0f} s, 8 processes: {entered} values entered, {counts[4]} refreshes, "
             f"{sum(counts[5:])} queries, no error, none lost"
@@ -173,12 +186,32 @@ def scale() -> None:
         began = time.perf_counter()
         run("refresh")
         print(f"refresh after a touched file: {time.perf_counter() - began:.1f} s")
-        query = "SELECT i AS k, i * {} AS v, 'text ' || i AS t FROM range(5000000) AS rows(i)"
-        began = time.perf_counter()
-        run("--help")
-        run("keep", "large", query.format(1), "--key", "k", "--memory", "1GB")
-        run("keep", "large", query.format(2), "--key", "k", "--memory", "1GB", "--replace")
-        print(f"5 M rows kept twice under 1 GB: {time.perf_counter() - began:.1f} s")
+        large()
+
+
+def large() -> None:
+    """A grid of 5 million rows: kept, refreshed and compared, with the most memory each took."""
+    rows = "SELECT i AS k, i * {} AS v, 'text ' || i AS t FROM range(5000000) AS rows(i)"
+    duckdb.sql(f"COPY ({rows.format(1)}) TO 'large.parquet'")
+    _measured("keep", "large", "FROM 'large.parquet'", "--key", "k", "--memory", LIMIT)
+    duckdb.sql(f"COPY ({rows.format('(1 + (i % 100 = 0)::INT)')}) TO 'large.parquet'")
+    _measured("refresh", "large", "--memory", LIMIT)
+    _measured("changes", "large", "--memory", LIMIT)
+
+
+def _measured(*arguments: str) -> None:
+    """Run a command and print how long it took and the most memory it had."""
+    began = time.perf_counter()
+    with tempfile.TemporaryFile() as words:
+        process = subprocess.Popen([*COMMAND, *arguments], stdout=words, stderr=words)
+        _, status, used = os.wait4(process.pid, 0)
+        if status:
+            words.seek(0)
+            raise SystemExit(f"{arguments[0]} failed: {words.read().decode()}")
+    print(
+        f"{arguments[0]} with 5 M rows and --memory {LIMIT}: {time.perf_counter() - began:.1f} s, "
+        f"{used.ru_maxrss / 1e6:.2f} GB at most"
+    )
 
 
 def main() -> None:

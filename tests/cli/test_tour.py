@@ -55,7 +55,8 @@ def test_a_whole_tour(run: Run, tmp_path: Path, monkeypatch: pytest.MonkeyPatch)
     assert "route_dwell: 12 rows, version 1" in kept
     assert "stale: months/2031-07.parquet is new" in kept
     assert "route_dwell: version 2, 12 rows" in kept
-    assert "layovers booked as dwell" in kept.partition("midspread push")[2]
+    assert "over_limit: 1 row, version 1" in kept
+    assert "its clock drifts" in kept.partition("midspread push")[2]
     assert "rows, answered from the store, " in shown.partition("Asked again")[2]
     for line in ("cd town", *NEXT):
         assert f"  {line}\n" in shown
@@ -81,6 +82,8 @@ def test_it_keeps_off_what_is_not_its_own(run: Run, tmp_path: Path) -> None:
 
 
 def test_the_queries_fit_a_narrow_terminal() -> None:
+    typed = [line for chapter in CHAPTERS for one in chapter.commands for line in one.split("\n")]
+    assert max(map(len, typed)) <= 80 - 6
     assert max(len(line) for step in STEPS for line in step.sql.splitlines()) <= 80 - 4
 
 

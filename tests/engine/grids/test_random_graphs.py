@@ -102,9 +102,11 @@ def test_refresh_computes_exactly_what_is_stale(
             model.values[ENTERED + place] = model.computed(place)
         for kind, which, value in changes:
             if kind == "enter":
-                enter(store, f"g{which}", ["k", "v"], [["1", str(value)]])
-                model.entered[which] = value
-                model.stale |= model.users(which)
+                done = enter(store, f"g{which}", ["k", "v"], [["1", str(value)]])
+                assert done.cells == (model.entered[which] != value)
+                if done.cells:
+                    model.entered[which] = value
+                    model.stale |= model.users(which)
             else:
                 place = which % len(graph)
                 model.graph[place] = (model.graph[place][0], value)

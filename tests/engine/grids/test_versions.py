@@ -71,18 +71,18 @@ def test_a_record_is_computed_again_to_the_last_digit(
     add_column(store, "by_route", "remark TEXT")
     enter(store, "by_route", ["route", "remark"], [["R1", "seen"]])
     kept(
-        "both",
+        "joined",
         "SELECT route, total - limit_s AS left_s, remark FROM by_route JOIN limits USING (route)",
         key=["route"],
     )
     path = folder / "record.json"
-    path.write_text(json.dumps(record_of(store, "both")), encoding="utf-8")
+    path.write_text(json.dumps(record_of(store, "joined")), encoding="utf-8")
 
     def again() -> list[tuple[str, bool]]:
         found = verify(lambda place: Session(threads=1, store=place), read_record(path))
         return [(one.grid, one.agrees) for one in found]
 
-    assert sorted(again()) == [("both", True), ("by_route", True), ("limits", True)]
+    assert sorted(again()) == [("by_route", True), ("joined", True), ("limits", True)]
     write_month(folder, "2031-01", 61)
     assert ("by_route", False) in again()
 
@@ -103,7 +103,7 @@ def test_discard_is_refused_while_others_rest_on_it(kept: Keep, store: Path) -> 
     kept("by_route", BY_ROUTE)
     kept("most", "SELECT max(total) AS most FROM by_route")
     before = rows("SELECT * FROM by_route ORDER BY ALL")
-    with pytest.raises(MidspreadError, match="most rest on by_route"):
+    with pytest.raises(MidspreadError, match="most rests on by_route"):
         discard(store, "by_route")
     assert discard(store, "by_route", with_dependents=True) == ["by_route", "most"]
     assert states(store) == {}
