@@ -32,13 +32,12 @@ def covered(
     group = np.broadcast_to(np.arange(sets)[:, np.newaxis, np.newaxis], x.shape)
     table = pa.table({"g": group.ravel(), "unit": owner.ravel(), "x": x.ravel()})
     connection.register("sets", table)
-    row = connection.execute(
+    ((share,),) = connection.execute(
         "SELECT avg(CAST(r.lower <= 0 AND r.upper >= 0 AS INTEGER)) FROM (SELECT "
         f"bootstrap_units(x, unit, 'mean', method := '{method}') AS r FROM sets GROUP BY g)"
-    ).fetchone()
+    ).fetchall()
     connection.unregister("sets")
-    assert row is not None
-    return float(row[0])
+    return float(share)
 
 
 def main() -> None:

@@ -14,7 +14,7 @@ from midspread.udfs.grouped import Groups
 from midspread.udfs.resampling.draws import Drawn, draw_all
 from midspread.udfs.resampling.randomness import stream
 from midspread.udfs.resampling.statistics import read_statistic
-from midspread.udfs.resampling.variates import binomial, uniform_rank
+from midspread.udfs.resampling.variates import binomial, hypergeometric, uniform_rank
 from tests.udfs.test_bootstrap import one
 
 Draw = Callable[..., Any]
@@ -153,6 +153,35 @@ def test_binomial(n: int, p: float) -> None:
             scipy.stats.chisquare(cells[keep], 6000 * chances[keep] / chances[keep].sum()).pvalue
             > 1e-3
         )
+
+
+@pytest.mark.parametrize(
+    ("members", "size", "drawn"),
+    [
+        (1, 65, 32),
+        (64, 65, 32),
+        (30, 65, 32),
+        (100, 999, 499),
+        (9000, 10_000, 5000),
+        (37, 10**7, 5 * 10**6),
+    ],
+)
+def test_hypergeometric(members: int, size: int, drawn: int) -> None:
+    found = []
+    with np.errstate(over="ignore"):
+        state = stream(np.uint64(size), members)
+        for _ in range(4000):
+            k, state = hypergeometric(state, members, size, drawn)
+            found.append(k)
+    law = scipy.stats.hypergeom(size, members, drawn)
+    edges = np.unique(law.ppf(np.linspace(0.04, 0.96, 24)))
+    chances = np.diff(np.concatenate(([0.0], law.cdf(edges), [1.0])))
+    cells = np.bincount(np.searchsorted(edges, found), minlength=chances.size)
+    keep = chances > 1e-9
+    assert cells[~keep].sum() == 0
+    assert scipy.stats.chisquare(cells[keep], 4000 * chances[keep] / chances[keep].sum()).pvalue > (
+        1e-3
+    )
 
 
 @pytest.mark.parametrize(("k", "n"), [(1, 1), (1, 8), (8, 8), (2, 3), (3, 20), (500, 1000)])

@@ -60,9 +60,11 @@ _BREAKDOWN: Final = "that of the statistic"
     source=f"{_SOURCE}; Janssen 1997, Statist. Probab. Lett. 36, 9–21",
     breakdown=_BREAKDOWN,
     cost=(
-        "O(resamples · n) time, for the mean about 1/60 of a random number a value; "
+        "O(resamples · n) time, for the mean about 1/60 of a random number a value, for medians "
+        "and quantiles O(n log n + resamples · log n); "
         "O(n + resamples) memory"
     ),
+    version=2,
     smallest_n=2,
     example="permutation_test(dwell_s, payment, statistic := 'trimmed_mean(0.2)')",
 )
@@ -117,8 +119,11 @@ def permutation_test(batch: "Batch") -> dict[str, Any]:
     one found after a search through many groups is too small.
 
     For the mean each arrangement is a random set of values of the right size; its sum comes
-    from tables of the sums of eight values each. Other statistics are computed anew on the
-    values of each label.
+    from tables of the sums of eight values each. For medians, quantiles and what is made of a
+    few of them, without stratum, only the values that the statistic reads are drawn: 9,999
+    arrangements take about a second, whatever the number of rows. Other statistics are computed
+    anew on the values of each label: 9,999 arrangements of a million rows take minutes, so
+    start with resamples := 199.
 
     References
     ----------

@@ -122,6 +122,49 @@ def _binomial_below_half(state: np.uint64, n: int, p: float) -> tuple[int, np.ui
 
 
 @compiled
+def hypergeometric(state: np.uint64, members: int, size: int, drawn: int) -> tuple[int, np.uint64]:
+    """How many of so many members are among half, or less, of size values drawn without return.
+
+    By rejection from the binomial count: with members no more than half of all, more than two of
+    three are kept.
+    """
+    if 2 * members > size:
+        others, state = _hypergeometric_of_few(state, size - members, size, drawn)
+        return drawn - others, state
+    return _hypergeometric_of_few(state, members, size, drawn)
+
+
+@compiled
+def _hypergeometric_of_few(
+    state: np.uint64, members: int, size: int, drawn: int
+) -> tuple[int, np.uint64]:
+    if members == 0:
+        return 0, state
+    p = drawn / size
+    logit = math.log(drawn / (size - drawn))
+    # The ratio of both chances is largest here.
+    best = -(-(drawn * (members - 1)) // size)
+    rest = size - drawn - members
+    while True:
+        k, state = binomial(state, members, p)
+        u, state = next_uniform(state)
+        if k > drawn or rest + k < 0:
+            continue
+        fits = _log_factorials_apart(drawn - best, drawn - k)
+        fits += _log_factorials_apart(rest + best, rest + k) - (k - best) * logit
+        if math.log(u) <= fits:
+            return k, state
+
+
+@compiled
+def _log_factorials_apart(a: int, b: int) -> float:
+    """ln a! − ln b!."""
+    away = float(a - b)
+    apart = (a + 0.5) * math.log1p(away / (b + 1.0)) + away * (math.log(b + 1.0) - 1.0)
+    return apart + _stirling(float(a)) - _stirling(float(b))
+
+
+@compiled
 def uniform_rank(state: np.uint64, k: int, n: int) -> tuple[float, np.uint64]:
     """The k-th smallest of n uniform numbers, 1 ≤ k ≤ n: beta with k and n − k + 1.
 

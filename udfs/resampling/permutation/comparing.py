@@ -11,8 +11,10 @@ from midspread.udfs.declaring import NULL, Values, null_mask
 from midspread.udfs.drivers import Indices
 from midspread.udfs.grouped import Groups, row_numbers
 from midspread.udfs.parameters import ParameterError
+from midspread.udfs.resampling.draws import ranks_read, reads_few_ranks
 from midspread.udfs.resampling.evaluating import evaluate
 from midspread.udfs.resampling.permutation.cells import cells_of, sort_parts
+from midspread.udfs.resampling.permutation.chosen_ranks import over_chosen_ranks
 from midspread.udfs.resampling.permutation.drawing import (
     ROUNDING,
     Outcome,
@@ -40,6 +42,8 @@ _SHIFT_FREE: Final = ("location", "scale", "shape")
 _HUGE: Final = 1e300
 _LEAST_TABULATED: Final = 1024
 """With fewer arrangements to a job the tables of subset sums would not pay."""
+_LEAST_OF_RANKS: Final = 256
+"""Arrangements take the same time whatever the number of values."""
 _LARGE_ENOUGH: Final = 1000
 """Values from which on studentized means come from sums of squares, which cancel a little."""
 
@@ -148,8 +152,13 @@ class _Comparison:
         by_sums = asked & self._fits_sums() & ~exact
         if by_sums.any():
             self._answer_by_sums(np.flatnonzero(by_sums), question, groups, found)
-        if (asked & ~by_sums).any():
-            self._answer_by_kernel(np.flatnonzero(asked & ~by_sums), question, groups, found)
+        by_ranks = asked & ~exact & (np.diff(data.first_stratum) == 1)
+        by_ranks &= self._two_labels and reads_few_ranks(self._statistic)
+        if by_ranks.any():
+            self._answer_by_ranks(np.flatnonzero(by_ranks), question, groups, found)
+        rest = asked & ~by_sums & ~by_ranks
+        if rest.any():
+            self._answer_by_kernel(np.flatnonzero(rest), question, groups, found)
 
     def _observed(self) -> tuple[Values, Values, Values]:
         """For each group the estimate, T, and how far rounding may take equal T apart."""
@@ -228,6 +237,31 @@ class _Comparison:
                 asked, observed=asked.observed * scales, rounding=asked.rounding * scales
             )
         found.enter(groups[some], asked, p_values(draw, asked, self._work, _LEAST_TABULATED))
+
+    def _answer_by_ranks(
+        self, some: Indices, question: Question, groups: Indices, found: Outcome
+    ) -> None:
+        data = self._data
+        values, _ = self._sorted_values(some)
+        ranks, first_rank = ranks_read(self._statistic, data.sizes)
+        loop = over_chosen_ranks(self._statistic.function.name)
+
+        def draw(group: Indices, *jobs: Any) -> None:
+            loop(
+                values,
+                data.starts,
+                data.sizes,
+                ranks,
+                first_rank,
+                np.array(self._statistic.parameters, dtype=np.float64),
+                question.keys,
+                some[group],
+                *jobs,
+                self._work.control.cells,
+            )
+
+        asked = question.of(some)
+        found.enter(groups[some], asked, p_values(draw, asked, self._work, _LEAST_OF_RANKS))
 
     def _answer_by_kernel(
         self, some: Indices, question: Question, groups: Indices, found: Outcome
