@@ -13,7 +13,7 @@ from midspread.udfs.declaring import Values, compiled
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.location.quantiles import harrell_davis
 from midspread.udfs.resampling.randomness import content_key, stream
-from midspread.udfs.resampling.resamples import BLOCK, SPARE, resample_into
+from midspread.udfs.resampling.resamples import BLOCK, SPARE, WORDS, resample_into
 
 DECILES: Final = 9
 
@@ -90,11 +90,12 @@ def resample(
     for k in range(DECILES):
         at_rest[k] = _weighted(away, weights[k], bounds[k, 0], bounds[k, 1])
     counts = np.empty(min(n, BLOCK), np.int32)
+    words = np.empty(WORDS, np.uint64)
     drawn = np.empty(n + SPARE)
     for r in range(first, last):
         if control[STOP] != 0:
             return
-        resample_into(stream(key, r), counts, away, drawn)
+        resample_into(stream(key, r), counts, words, away, drawn)
         for k in range(DECILES):
             moved = _weighted(drawn, weights[k], bounds[k, 0], bounds[k, 1])
             moves[r, k] = moved - at_rest[k]
