@@ -162,3 +162,30 @@ def test_readers_save_time_on_most_routes_but_not_on_one(ask: Ask) -> None:
 def test_each_route_has_its_own_limit(ask: Ask) -> None:
     shares = {row["name"]: number(row, "share") for row in ask("Each route")}
     assert shares == {"Harbour Loop": 0.05, "Ferry Steps Shuttle": 0.25, "Mill Lane": 0.1}
+
+
+def test_on_the_logarithm_or_next_to_it_both_sides_are_alike(ask: Ask) -> None:
+    rungs = {number(row, "power"): row for row in ask("The scale on which")}
+    (best,) = [power for power, row in rungs.items() if row["best"]]
+    assert best in (-0.5, 0.0, 0.5)
+    assert abs(number(rungs[best], "medcouple")) < 0.06 < number(rungs[1.0], "medcouple") / 3
+    assert abs(number(rungs[best], "skewness")) < number(rungs[1.0], "skewness") / 5
+    assert rungs[0.0]["expression"] == 'ln("dwell_s")'
+
+
+def test_one_stop_rounds_and_one_vehicle_moves_its_routes(ask: Ask) -> None:
+    rounded, moving = ask("Which stop rounds")
+    assert rounded == {"what": "a grid of 5.0 s", "found": "L6-08"}
+    assert moving == {"what": "moves 4 routes most", "found": "V158"}
+
+
+def test_the_saving_holds_but_on_one_route(ask: Ask) -> None:
+    rows = {str(row["route"]): row for row in ask("Does the readers")}
+    flat = rows.pop("L9")
+    assert number(flat, "excluding_zero") < number(flat, "by_chance") + 0.1
+    assert set(rows) == {"L2", "L10"}
+    for row in (flat, *rows.values()):
+        assert row["choices"] == 36  # as its words say: none is left out
+    for row in rows.values():
+        assert number(row, "same_sign") == 1.0
+        assert number(row, "excluding_zero") > 0.9 > 5 * number(row, "by_chance")

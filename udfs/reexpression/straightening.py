@@ -9,6 +9,7 @@ import math
 from typing import Final
 
 import numpy as np
+import numpy.typing as npt
 
 from midspread.udfs.arithmetic.order_statistics import median_sorted, midpoint
 from midspread.udfs.arithmetic.sums import compensated_mean
@@ -20,6 +21,8 @@ FIGURES: Final = ("n", "n_lost", "half_slope_ratio", "winsorized_corr")
 """What `straightening` writes for each pair of powers, those of x running faster."""
 
 SHARE: Final = 0.2
+
+Flags = npt.NDArray[np.bool_]
 
 _WIDTH: Final = len(FIGURES)
 _BLOCK: Final = 64
@@ -33,33 +36,57 @@ def straightening(y: Values, x: Values, powers: Values, out: Values, control: In
     spoilt = math.isnan(y[n - 1])
     for i in range(n):
         spoilt = spoilt or math.isnan(x[i])
+    y_kinds, x_kinds = _kinds(y, powers, spoilt), _kinds(x, powers, spoilt)
     for y_kind in range(3):
         for x_kind in range(3):
             wanted = False
-            for power in powers:
-                wanted = wanted or _kind(power) == y_kind
+            for kind in y_kinds:
+                wanted = wanted or kind == y_kind
             other = False
-            for power in powers:
-                other = other or _kind(power) == x_kind
+            for kind in x_kinds:
+                other = other or kind == x_kind
             if not (wanted and other):
                 continue
+            if control[STOP] != 0:
+                return
             rows = np.empty(n, np.int64)
             kept = 0
             for i in range(n):
-                if spoilt or (_fits(y[i], y_kind) and _fits(x[i], x_kind)):
+                if _fits(y[i], y_kind) and _fits(x[i], x_kind):
                     rows[kept] = i
                     kept += 1
+            some = rows[:kept]
             _one_kind(
-                y[rows[:kept]], x[rows[:kept]], powers, y_kind, x_kind, n, spoilt, out, control
+                y[some],
+                x[some],
+                powers,
+                y_kinds == y_kind,
+                x_kinds == x_kind,
+                n,
+                spoilt,
+                out,
+                control,
             )
 
 
 @compiled
-def _kind(power: float) -> int:
-    """Which values a power takes: 0 all, 1 those from 0 up, 2 those above 0."""
-    if power == 1.0:
-        return 0
-    return 1 if power > 0.0 else 2
+def _kinds(values: Values, powers: Values, spoilt: bool) -> Indices:
+    """Which values each power takes: 0 all, 1 those from 0 up, 2 those above 0.
+
+    Powers that take the same values are of one kind, whatever they would take of others.
+    """
+    lost, lost_with_zeros = 0, 0
+    if not spoilt:
+        for value in values:
+            lost += int(value < 0.0)
+            lost_with_zeros += int(value <= 0.0)
+    kinds = np.zeros(powers.size, np.int64)
+    for place in range(powers.size):
+        if powers[place] <= 0.0 and lost_with_zeros > lost:
+            kinds[place] = 2
+        elif powers[place] != 1.0 and lost > 0:
+            kinds[place] = 1
+    return kinds
 
 
 @compiled
@@ -72,8 +99,8 @@ def _one_kind(
     y: Values,
     x: Values,
     powers: Values,
-    y_kind: int,
-    x_kind: int,
+    is_y_power: Flags,
+    is_x_power: Flags,
     rows: int,
     spoilt: bool,
     out: Values,
@@ -92,9 +119,9 @@ def _one_kind(
         for place in range(count):
             if control[STOP] != 0:
                 return
-            if _kind(powers[place]) == y_kind:
+            if is_y_power[place]:
                 _winsorized_unit(y, powers[place], room, unit_y[place])
-            if _kind(powers[place]) == x_kind:
+            if is_x_power[place]:
                 _winsorized_unit(sorted_x, powers[place], room, unit_x[place])
                 for i in range(n):
                     room[order[i]] = unit_x[place, i]
@@ -102,7 +129,7 @@ def _one_kind(
                     unit_x[place, i] = room[i]
     for i in range(count):
         for j in range(count):
-            if _kind(powers[i]) != y_kind or _kind(powers[j]) != x_kind:
+            if not (is_y_power[i] and is_x_power[j]):
                 continue
             if control[STOP] != 0:
                 return
