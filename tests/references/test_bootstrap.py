@@ -14,7 +14,8 @@ import scipy.stats
 from midspread.udfs import Control
 from midspread.udfs.binding.computing import Work
 from midspread.udfs.grouped import Groups
-from midspread.udfs.resampling.draws import group_draws, left_out_figures
+from midspread.udfs.resampling.draws import group_draws
+from midspread.udfs.resampling.left_out_figures import left_out_figures
 from midspread.udfs.resampling.samples import samples_of
 from midspread.udfs.resampling.statistics import Statistic, read_statistic
 from tests.conftest import Estimate

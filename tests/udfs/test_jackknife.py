@@ -9,7 +9,7 @@ import pytest
 from midspread.udfs import Control
 from midspread.udfs.binding.computing import Work
 from midspread.udfs.grouped import Groups
-from midspread.udfs.resampling.draws import left_out_figures
+from midspread.udfs.resampling.left_out_figures import left_out_figures
 from midspread.udfs.resampling.samples import samples_of
 from midspread.udfs.resampling.statistics import read_statistic
 from tests.conftest import Estimate

@@ -109,9 +109,15 @@ def counted_value(
         is_mean = p[0] != 0.5 and 2 * g < total
         low = g if is_mean else (total - 1) // 2
         high = total - 1 - low
-    first, before_first = _row_of(low, unit, counts, 0, 0, step, below)
-    near = high <= low + 1
-    last, before_last = _row_of(high, unit, counts, first, before_first, 0 if near else step, below)
+    first = last = before_first = before_last = 0
+    for end in range(2):  # one call of two takes half as long to compile
+        near = end == 1 and high <= low + 1
+        rank = low if end == 0 else high
+        last, before_last = _row_of(
+            rank, unit, counts, last, before_last, 0 if near else step, below
+        )
+        if end == 0:
+            first, before_first = last, before_last
     low_value, high_value = x[first], x[last]
     if low_value == high_value or part == 0.0:
         return low_value

@@ -100,7 +100,9 @@ def sums_of_units(x: Values, unit: Small, units: int, origin: float) -> Values:
     for j in range(x.size):
         u = unit[j]
         sums[u], lost[u] = add(sums[u], lost[u], x[j] - origin)
-    return sums + lost
+    for u in range(units):
+        sums[u] += lost[u]
+    return sums
 
 
 @compiled

@@ -29,7 +29,8 @@ EXACT_FOR_JACKKNIFE: Final = 1000
 
 def interval_batch(batch: "Batch") -> dict[str, Values]:
     """The fields of a bootstrap interval for every group of a batch."""
-    from midspread.udfs.resampling.draws import draw_all, left_out_work
+    from midspread.udfs.resampling.draws import draw_all
+    from midspread.udfs.resampling.left_out_figures import left_out_work
 
     groups = _groups(batch)
     out = {name: np.full(batch.size, NULL) for name in INTERVAL_FIELDS}
@@ -75,7 +76,7 @@ def _groups(batch: "Batch") -> Groups:
 
 
 def _refuse_without_error(caller: str, statistic: Statistic) -> None:
-    from midspread.udfs.resampling.draws import has_error
+    from midspread.udfs.resampling.ways_of_drawing import has_error
 
     if not has_error(statistic):
         raise ParameterError(
@@ -96,7 +97,8 @@ def _keep_intervals(
     out: dict[str, Values],
 ) -> None:
     """Turn a portion's draws into the fields of its groups."""
-    from midspread.udfs.resampling.draws import errors_of, left_out_figures
+    from midspread.udfs.resampling.draws import errors_of
+    from midspread.udfs.resampling.left_out_figures import left_out_figures
 
     samples = drawn.samples
     accelerations = errors = None
@@ -125,7 +127,8 @@ def _keep_intervals(
 
 def jackknife_batch(batch: "Batch") -> dict[str, Values]:
     """The fields of a jackknife for every group of a batch."""
-    from midspread.udfs.resampling.draws import in_portions, left_out_figures
+    from midspread.udfs.resampling.draws import in_portions
+    from midspread.udfs.resampling.left_out_figures import left_out_figures
 
     groups = _groups(batch)
     out = {name: np.full(batch.size, NULL) for name in JACKKNIFE_FIELDS}

@@ -5,7 +5,7 @@ import numpy.typing as npt
 
 from midspread.udfs.declaring import NULL, Values
 from midspread.udfs.drivers import Indices
-from midspread.udfs.resampling.drawing_loops import DEVIATION, ERROR, WINSORIZED_MEAN
+from midspread.udfs.resampling.middles import DEVIATION, ERROR, WINSORIZED_MEAN
 
 
 def middles_left_out(
@@ -22,7 +22,7 @@ def middles_left_out(
     share : float
         Share cut from each tail.
     figure : int
-        What is computed of the values, as for `drawing_loops.of_middles`.
+        What is computed of the values, as for `middles.of_middles`.
 
     Notes
     -----

@@ -63,16 +63,23 @@ def _fill(state: np.uint64, words: Words, size: int) -> np.uint64:
 def count_draws(state: np.uint64, counts: Counts, draws: int, words: Words) -> np.uint64:
     """Draw so many times from as many values as there are counts, and count."""
     size = counts.size
-    if size >= SMALLEST and size & (size - 1) == 0:
-        numbers = words.view(np.uint16)
-        left = draws
-        while left > 0:
-            now = min(left, numbers.size)
-            state = _fill(state, words[: (now + 3) // 4], size)
-            for k in range(np.uint64(now)):
-                counts[numbers[k]] += 1
-            left -= now
-        return state
+    if size < SMALLEST or size & (size - 1) != 0:
+        return count_few_draws(state, counts, draws)
+    numbers = words.view(np.uint16)
+    left = draws
+    while left > 0:
+        now = min(left, numbers.size)
+        state = _fill(state, words[: (now + 3) // 4], size)
+        for k in range(np.uint64(now)):
+            counts[numbers[k]] += 1
+        left -= now
+    return state
+
+
+@compiled
+def count_few_draws(state: np.uint64, counts: Counts, draws: int) -> np.uint64:
+    """As `count_draws`, from any number of values."""
+    size = counts.size
     if size == 1:
         counts[0] += draws
         return state

@@ -67,10 +67,8 @@ def binomial(state: np.uint64, n: int, p: float) -> tuple[int, np.uint64]:
         return 0, state
     if p >= 1.0:
         return n, state
-    if p > 0.5:
-        k, state = _binomial_below_half(state, n, 1.0 - p)
-        return n - k, state
-    return _binomial_below_half(state, n, p)
+    k, state = _binomial_below_half(state, n, min(p, 1.0 - p))
+    return (n - k if p > 0.5 else k), state
 
 
 @compiled
@@ -128,10 +126,8 @@ def hypergeometric(state: np.uint64, members: int, size: int, drawn: int) -> tup
     By rejection from the binomial count: with members no more than half of all, more than two of
     three are kept.
     """
-    if 2 * members > size:
-        others, state = _hypergeometric_of_few(state, size - members, size, drawn)
-        return drawn - others, state
-    return _hypergeometric_of_few(state, members, size, drawn)
+    k, state = _hypergeometric_of_few(state, min(members, size - members), size, drawn)
+    return (drawn - k if 2 * members > size else k), state
 
 
 @compiled

@@ -12,9 +12,9 @@ from midspread.udfs.compiling import compile_driver
 from midspread.udfs.declaring import NULL, Values, declared, helper, null_mask
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.grouped import Groups
-from midspread.udfs.resampling.draws import reads_few_ranks
 from midspread.udfs.resampling.evaluating import evaluate
 from midspread.udfs.resampling.statistics import Statistic, compiled_for, read_statistic
+from midspread.udfs.resampling.ways_of_drawing import reads_few_ranks
 from midspread.udfs.sensitivity.kept_windows import SIGNATURE, means_without
 from midspread.udfs.sensitivity.remainders import (
     MIDDLES,

@@ -21,9 +21,9 @@ from midspread.udfs.declaring import (
 )
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.grouped import Stopped
-from midspread.udfs.resampling.draws import FEW_RANKS, ranks_read, reads_few_ranks
 from midspread.udfs.resampling.evaluating import evaluate
 from midspread.udfs.resampling.statistics import Statistic, compiled_for, read_statistic
+from midspread.udfs.resampling.ways_of_drawing import FEW_RANKS, ranks_read, reads_few_ranks
 from midspread.udfs.sensitivity.kept_windows import TOTAL_SIGNATURE, cut_of, scale_down, total_of
 from midspread.udfs.sensitivity.remainders import (
     MIDDLES,

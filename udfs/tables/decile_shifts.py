@@ -63,7 +63,7 @@ _FIELDS: Final = (
     cost="O(n) time a resample, about 10 ns a value: 10 s of a core for a million values and 1,000 "
     "resamples; O(n) memory",
     example="SELECT * FROM decile_shifts('visits', 'dwell_s', 'payment', resamples := 200)",
-    version=2,
+    version=3,
 )
 def decile_shifts(
     *,

@@ -11,7 +11,6 @@ from midspread.udfs.declaring import NULL, Values, null_mask
 from midspread.udfs.drivers import Indices
 from midspread.udfs.grouped import Groups, row_numbers
 from midspread.udfs.parameters import ParameterError
-from midspread.udfs.resampling.draws import ranks_read, reads_few_ranks
 from midspread.udfs.resampling.evaluating import evaluate
 from midspread.udfs.resampling.permutation.cells import cells_of, sort_parts
 from midspread.udfs.resampling.permutation.chosen_ranks import over_chosen_ranks
@@ -36,6 +35,7 @@ from midspread.udfs.resampling.permutation.subset_sums import (
     mean_differences,
 )
 from midspread.udfs.resampling.statistics import Statistic, read_statistic
+from midspread.udfs.resampling.ways_of_drawing import ranks_read, reads_few_ranks
 
 _SHIFT_FREE: Final = ("location", "scale", "shape")
 """Families whose figures move along with a shift of the values, or not at all."""

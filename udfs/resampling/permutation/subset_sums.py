@@ -297,8 +297,7 @@ def _mean_differences(
             for r in range(count):
                 own = stream(keys[g], first[job] + r)
                 mine[r] = stream(own, s - first_stratum[g])
-            part[:] = 0.0
-            part_squares[:] = 0.0
+                part[r] = part_squares[r] = 0.0
             _add_members(x, origin, scale, min(m, n - m), mode, mine, part, part_squares, control)
             total = total_squares = 0.0
             for i in range(n):
@@ -307,12 +306,10 @@ def _mean_differences(
                 total_squares += v * v
             all_sum += total
             all_squares += total_squares
-            if 2 * m <= n or mode == SIGNS:
-                sums += part
-                squares += part_squares
-            else:
-                sums += total - part
-                squares += total_squares - part_squares
+            rest_is_drawn = 2 * m > n and mode != SIGNS
+            for r in range(count):  # array expressions take a second more to compile
+                sums[r] += total - part[r] if rest_is_drawn else part[r]
+                squares[r] += total_squares - part_squares[r] if rest_is_drawn else part_squares[r]
         n1 = float(ones)
         size = float(starts[g + 1] - starts[g])
         n0 = size - n1
