@@ -6,7 +6,7 @@ distribution. With 2,000 sets a share of 95 % is good to ± 1 %.
 """
 
 import argparse
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from typing import Final
 
 import duckdb
@@ -55,13 +55,17 @@ def target(statistic: str, distribution: str) -> float:
 
 
 def shares(
-    connection: duckdb.DuckDBPyConnection, x: np.ndarray, statistic: str, resamples: int
+    connection: duckdb.DuckDBPyConnection,
+    x: np.ndarray,
+    statistic: str,
+    resamples: int,
+    methods: Sequence[str] = METHODS,
 ) -> dict[str, float]:
     """Share of intervals, by method, that cover; x holds a data set a row."""
     sets, n = x.shape
     table = pa.table({"g": np.repeat(np.arange(sets), n), "x": x.reshape(-1)})
     connection.register("sets", table)
-    methods = METHODS if statistic in WITH_ERROR else METHODS[:-1]
+    methods = [m for m in methods if m != METHODS[-1] or statistic in WITH_ERROR]
     calls = ", ".join(
         f"bootstrap_interval(x, '{statistic}', method := '{method}', resamples := {resamples})"
         for method in methods

@@ -100,10 +100,17 @@ def bootstrap_interval(batch: "Batch") -> dict[str, Values]:
     √(m / 200) standard deviations from their mean. The limits then differ from single draws' by a
     few thousandths of a standard error, of whole numbers by the gaps between possible means.
 
-    Coverage falls short of what is asked for in small groups, for the mean of skewed data, and
-    with 'basic' for medians; below 10 values no method keeps its promise. For rows that are not
-    independent (visits of one vehicle, successive days) the interval is too narrow. It describes
-    what was measured: where a figure steers safety, local rules and licensed practice decide.
+    Coverage, measured on 2,000 data sets each (a 95 % interval, normal, log-normal, t with 3
+    degrees of freedom and 10 % contaminated data): the 20 % trimmed mean 94 to 95 % from 50 values
+    on by bca and studentized, 94 to 96 % with 10; the median 93 to 96 % by percentile and bca.
+    Short of it fall the mean of skewed data (log-normal: 10, 50 and 200 values 83, 90 and 93 % by
+    bca, 91, 93 and 94 % studentized); bca for the mean of data with wild values (81 to 86 % of 20
+    to 50 values); 'basic' for the median (79 to 91 %); and groups of 5, where most methods cover
+    70 to 90 %. DEVELOPERS.md has the whole table.
+
+    For rows that are not independent (visits of one vehicle, successive days) the interval is too
+    narrow: see `bootstrap_units` and `bootstrap_blocks`. It describes what was measured: where a
+    figure steers safety, local rules and licensed practice decide.
 
     References
     ----------
