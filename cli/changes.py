@@ -1,13 +1,13 @@
 """``midspread changes``: how two versions of a grid differ."""
 
-from pathlib import Path
 from typing import TYPE_CHECKING
 
 import click
 
+from midspread.cli.cells import columns_of
 from midspread.cli.help import HelpfulCommand
 from midspread.cli.numbers import count_text, single_text
-from midspread.cli.options import Count, Settings, names_in, store_option
+from midspread.cli.options import Count, Settings, engine_options, names_in
 from midspread.cli.screen import Screen, result_console
 
 if TYPE_CHECKING:
@@ -27,9 +27,9 @@ if TYPE_CHECKING:
 @click.option(
     "--columns", metavar="NAMES", help="Only these columns, with commas between them.  [all]"
 )
-@store_option
+@engine_options
 def changes(
-    name: str, before: int | None, after: int | None, columns: str | None, store: Path | None
+    name: str, before: int | None, after: int | None, columns: str | None, settings: Settings
 ) -> None:
     """How two versions of a grid differ, row by row and cell by cell.
 
@@ -37,17 +37,39 @@ def changes(
     standard errors of the difference of two independent estimates, where the grid has a column of
     the same name with _se, or one called se right after it.
     """
-    from midspread.cli.tables import print_table
+    from rich.text import Text
+
+    from midspread.cli import tables
     from midspread.engine.grids.comparing import changes as changes_of
 
     only = () if columns is None else names_in("--columns", columns)
-    table, first, last = changes_of(Settings(store=store).store_path(), name, before, after, only)
+    found = changes_of(
+        settings.store_path(),
+        name,
+        before,
+        after,
+        columns=only,
+        ends=(tables.MOST_ROWS - tables.LAST_ROWS, tables.LAST_ROWS),
+        memory=settings.memory,
+    )
     with Screen() as screen:
-        screen.notice(f"{name}, version {first} to {last}")
-    if not table.num_rows:
+        screen.notice(f"{name}, version {found.first} to {found.last}")
+    if not found.count:
         click.echo("no row differs")
         return
-    print_table(result_console(), _readable(table), note=count_text(table.num_rows, "difference"))
+    shown = found.table.num_rows
+    part = tables.Excerpt(
+        columns_of(_readable(found.table)),
+        found.count,
+        shown,
+        gap_after=tables.MOST_ROWS - tables.LAST_ROWS if shown < found.count else 0,
+    )
+    console = result_console()
+    tables.print_lines(console, tables.laid_out(part, console.width))
+    note = count_text(found.count, "difference")
+    if shown < found.count:
+        note += f", {found.count - shown:,} in between not shown"
+    tables.print_lines(console, [Text(note, style=tables.FAINT)])
 
 
 def _readable(table: "pa.Table") -> "pa.Table":

@@ -29,11 +29,11 @@ def column(name: str, definition: str, drop: bool, settings: Settings) -> None:
 
     place = settings.store_path()
     if drop:
-        grid = drop_column(place, name, definition.strip())
+        grid = drop_column(place, name, definition.strip(), settings.memory)
         click.echo(
             f"{grid.name}: column {definition.strip()} dropped; midspread undo brings it back"
         )
         return
-    grid, made = add_column(place, name, definition)
+    grid, made = add_column(place, name, definition, settings.memory)
     how = f"computed as ({made.expression})" if made.expression else "to be typed in"
     click.echo(f"{grid.name}: column {made.name} {made.type}, {how}")

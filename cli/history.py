@@ -25,7 +25,7 @@ def history(name: str, store: Path | None) -> None:
     Versions with what caused each, and typed-in cells with the value before and after.
     """
     from midspread.cli.tables import print_table
-    from midspread.engine.grids.comparing import history as history_of
+    from midspread.engine.grids.versions import history as history_of
 
     done = history_of(Settings(store=store).store_path(), name)
     print_table(

@@ -150,8 +150,8 @@ def _print_earlier(console: "Console", grid: "Grid", settings: Settings, version
     from rich.text import Text
 
     from midspread.cli.tables import FAINT, HEAD, print_lines, print_table
-    from midspread.engine.grids.comparing import earlier_version
     from midspread.engine.grids.freshness import clock
+    from midspread.engine.grids.versions import earlier_version
 
     found = earlier_version(settings.store_path(), grid, version, FIRST_ROWS)
     head = Text(visible(grid.name), style=HEAD)
@@ -166,8 +166,8 @@ def _print_earlier(console: "Console", grid: "Grid", settings: Settings, version
 
 def _print_rows(console: "Console", grid: "Grid", settings: Settings) -> None:
     from midspread.cli.tables import print_table
-    from midspread.engine.grids.comparing import first_rows, version_table
     from midspread.engine.grids.entries import set_aside
+    from midspread.engine.grids.versions import first_rows, version_table
     from midspread.engine.store.store import Store
 
     if grid.version == 0:

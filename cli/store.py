@@ -110,9 +110,9 @@ def _when(moment: datetime) -> str:
 def _check(opened: "Store") -> None:
     from midspread.engine.errors import StoreDamaged
     from midspread.engine.grids import ledger
+    from midspread.engine.grids.upkeep import remarks_on_grids
     from midspread.engine.pushing.intents import unconfirmed_in
-    from midspread.engine.store.answers import Answers
-    from midspread.engine.store.housekeeping import check
+    from midspread.engine.store.housekeeping import check, report
 
     faults = check(opened)
     for fault in faults:
@@ -124,14 +124,21 @@ def _check(opened: "Store") -> None:
         )
     for sentence in unconfirmed_in(opened):
         click.echo(visible(sentence))
-    answers = count_text(Answers(opened).count(), "kept answer")
     with opened.reading() as engine:
-        grids = count_text(len(ledger.grids(engine)), "grid")
-    click.echo(f"{visible(str(opened.path))} is sound: {grids} and {answers} read.")
+        grids = ledger.grids(engine).values()
+        remarks = remarks_on_grids(engine)
+    found = report(opened)
+    for remark in remarks:
+        click.echo(visible(remark))
+    click.echo(
+        f"{visible(str(found.path))} is sound: {count_text(len(grids), 'grid')} with "
+        f"{count_text(sum(grid.rows for grid in grids), 'row')} and "
+        f"{count_text(found.answers, 'kept answer')} read, {size_text(found.file_bytes)}."
+    )
 
 
 def _keep_versions(path: Path, count: int) -> None:
-    from midspread.engine.grids.publishing import keep_versions
+    from midspread.engine.grids.keeping_versions import keep_versions
 
     gone = keep_versions(path, count)
     let_go = f"; {count_text(gone, 'older one')} let go" if gone else ""

@@ -9,8 +9,8 @@ import duckdb
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
-from midspread.engine.grids.comparing import found_grid
 from midspread.engine.grids.definitions import one_column
+from midspread.engine.grids.ledger import found_grid
 from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind
 from midspread.engine.grids.restoring import note_undo
 from midspread.engine.grids.tables import computed_in_order, contents_query, equip
@@ -20,7 +20,9 @@ from midspread.engine.store.quoting import literal, quoted
 from midspread.engine.store.store import Store
 
 
-def add_column(store_path: Path, name: str, text: str) -> tuple[Grid, Column]:
+def add_column(
+    store_path: Path, name: str, text: str, memory: str | None = None
+) -> tuple[Grid, Column]:
     """Add a column to a grid.
 
     Parameters
@@ -31,6 +33,8 @@ def add_column(store_path: Path, name: str, text: str) -> tuple[Grid, Column]:
         Of the grid.
     text : str
         ``remark TEXT``, to be typed in, or ``allowance_s AS (limit_s + 5)``, computed.
+    memory : str, optional
+        Most memory to take.
 
     Returns
     -------
@@ -59,11 +63,11 @@ def add_column(store_path: Path, name: str, text: str) -> tuple[Grid, Column]:
             column = _typed(engine, grid, column)
         return replace(grid, columns=(*grid.columns, column))
 
-    grid = _change(store_path, name, "column added", change)
+    grid = _change(store_path, name, "column added", change, memory)
     return grid, grid.columns[-1]
 
 
-def drop_column(store_path: Path, name: str, column_name: str) -> Grid:
+def drop_column(store_path: Path, name: str, column_name: str, memory: str | None = None) -> Grid:
     """Take a column out of a grid; its typed-in values come back with `undo` only."""
 
     def change(engine: duckdb.DuckDBPyConnection, grid: Grid) -> Grid:
@@ -94,7 +98,7 @@ def drop_column(store_path: Path, name: str, column_name: str) -> Grid:
         )
         return replace(grid, columns=tuple(one for one in grid.columns if one is not column))
 
-    return _change(store_path, name, "column dropped", change)
+    return _change(store_path, name, "column dropped", change, memory)
 
 
 def _change(
@@ -102,9 +106,10 @@ def _change(
     name: str,
     action: str,
     change: Callable[[duckdb.DuckDBPyConnection, Grid], Grid],
+    memory: str | None,
 ) -> Grid:
     """Change a grid's columns and write its table anew, in one transaction."""
-    store = Store.open(store_path, create=False)
+    store = Store.open(store_path, create=False, memory=memory)
     try:
         with store.writing() as engine:
             before = found_grid(engine, "column", name)

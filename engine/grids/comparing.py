@@ -1,16 +1,16 @@
-"""`history` and `changes`: what was done to a grid, and how two of its versions differ."""
+"""`changes`: how two versions of a grid differ."""
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from datetime import datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Final
 
 import duckdb
 
 from midspread.engine.errors import MidspreadError, UsageError
-from midspread.engine.grids import ledger
+from midspread.engine.grids.ledger import found_grid
 from midspread.engine.grids.model import Grid, GridKind
+from midspread.engine.grids.versions import version_table
 from midspread.engine.nearest import nearest
 from midspread.engine.store.quoting import literal, quoted
 from midspread.engine.store.store import Store
@@ -18,126 +18,33 @@ from midspread.engine.store.store import Store
 if TYPE_CHECKING:
     import pyarrow as pa
 
+_CELL: Final = (
+    "STRUCT(place INTEGER, name VARCHAR, before VARCHAR, after VARCHAR,"
+    " change DOUBLE, in_se DOUBLE)"
+)
 _FRACTIONAL: Final = ("DOUBLE", "FLOAT", "DECIMAL")
 
 
-def found_grid(engine: duckdb.DuckDBPyConnection, command: str, name: str) -> Grid:
-    """The grid of a name.
-
-    Raises
-    ------
-    MidspreadError
-        When there is none, with the nearest name.
-    """
-    grids = ledger.grids(engine)
-    grid = grids.get(name.casefold())
-    if grid is None:
-        meant = nearest(name, [one.name for one in grids.values()])
-        hint = f"did you mean {meant}?" if meant else "midspread show lists those there are."
-        raise MidspreadError(f"{command}: there is no grid {name}; {hint}")
-    return grid
-
-
-def history(store_path: Path, name: str) -> "pa.Table":
-    """What was done to a grid, the latest first: when, what, which cell, and why."""
-    store = Store.open(store_path, create=False)
-    with store.reading() as engine:
-        known = engine.execute(
-            "SELECT 1 FROM store.ledger.changes WHERE lower(grid) = lower($1) LIMIT 1", [name]
-        ).fetchall()
-        if not known:
-            found_grid(engine, "history", name)
-        table = engine.sql(
-            "SELECT c.moment::TIMESTAMP(0) AS moment, c.action, v.version, v.row_count AS rows,"
-            " nullif(c.key, '') AS key, nullif(c.name, '') AS column, c.old,"
-            " CASE WHEN c.action IN ('keep', 'refresh') THEN NULL ELSE c.new END AS new,"
-            " nullif(c.note, '') AS note"
-            " FROM store.ledger.changes AS c LEFT JOIN store.ledger.versions AS v"
-            " ON lower(v.grid) = lower(c.grid) AND c.action IN ('keep', 'refresh')"
-            " AND v.version = TRY_CAST(c.new AS INTEGER)"
-            f" WHERE lower(c.grid) = {literal(name.lower())}"
-            # A push that was begun and then confirmed or refused is one line, not two.
-            " AND NOT (c.action = 'push begun' AND EXISTS (FROM store.ledger.changes AS d WHERE"
-            " d.stamp = c.stamp AND d.action IN ('pushed', 'push failed')))"
-            " ORDER BY c.stamp DESC, c.key, c.name"
-        ).to_arrow_table()
-    store.close()
-    return table
-
-
-def version_table(engine: duckdb.DuckDBPyConnection, command: str, grid: Grid, version: int) -> str:
-    """The table that holds a version's rows, as SQL.
-
-    Raises
-    ------
-    MidspreadError
-        When that version is not kept.
-    """
-    if version == grid.version and version > 0:
-        return ledger.contents(grid.name)
-    kept = [
-        number
-        for (number,) in engine.execute(
-            "SELECT version FROM store.ledger.versions WHERE lower(grid) = lower($1)"
-            " AND is_kept ORDER BY version",
-            [grid.name],
-        ).fetchall()
-    ]
-    if grid.kind is GridKind.ENTERED:
-        raise MidspreadError(
-            f"{command}: {grid.name} is a grid of typed-in values, which has no versions; "
-            f"midspread history {grid.name} lists every change."
-        )
-    if version not in kept:
-        listed = ", ".join(map(str, kept)) or "none"
-        raise MidspreadError(
-            f"{command}: version {version} of {grid.name} is not kept; those kept are {listed}."
-        )
-    return ledger.earlier(grid.name, version)
-
-
 @dataclass(frozen=True)
-class EarlierVersion:
-    """What is known of an earlier version: when and why it was made, its query, its rows."""
+class Changes:
+    """How two versions of a grid differ.
 
-    made: datetime | None
-    cause: str
-    rows: int
-    sql: str
-    first: "pa.Table"
-
-
-def earlier_version(store_path: Path, grid: Grid, version: int, most_rows: int) -> EarlierVersion:
-    """An earlier version of a grid with its first rows.
-
-    Raises
-    ------
-    MidspreadError
-        When that version is not kept.
+    Attributes
+    ----------
+    table : pyarrow.Table
+        One row a cell: the key, what happened (added, gone, changed), the column, the value before
+        and after, the change, and the change in standard errors where the grid carries one: in a
+        column of the same name with _se, or in one called se that follows it.
+    first, last : int
+        The two versions.
+    count : int
+        How many differences there are; the table may hold only the first and the last of them.
     """
-    store = Store.open(store_path, create=False)
-    try:
-        with store.reading() as engine:
-            table = version_table(engine, "show", grid, version)
-            (made, cause, rows, sql) = engine.execute(
-                "SELECT epoch_us(made), cause, row_count, sql FROM store.ledger.versions"
-                " WHERE lower(grid) = lower($1) AND version = $2",
-                [grid.name, version],
-            ).fetchall()[0]
-            first = first_rows(engine, grid, table, most_rows)
-    finally:
-        store.close()
-    return EarlierVersion(ledger.moment(made), cause, rows, sql, first)
 
-
-def first_rows(
-    engine: duckdb.DuckDBPyConnection, grid: Grid, table: str, most_rows: int
-) -> "pa.Table":
-    """The first rows of a grid's table in the order of its key, where that version has one."""
-    there = {str(row[0]) for row in engine.execute(f"DESCRIBE {table}").fetchall()}
-    order = ", ".join(quoted(key) for key in grid.keys if key in there)
-    by_key = f" ORDER BY {order}" if order else ""
-    return engine.sql(f"FROM {table}{by_key} LIMIT {most_rows}").to_arrow_table()
+    table: "pa.Table"
+    first: int
+    last: int
+    count: int
 
 
 def changes(
@@ -145,8 +52,11 @@ def changes(
     name: str,
     before: int | None = None,
     after: int | None = None,
+    *,
     columns: Sequence[str] = (),
-) -> tuple["pa.Table", int, int]:
+    ends: tuple[int, int] | None = None,
+    memory: str | None = None,
+) -> Changes:
     """How two versions of a grid differ, by key.
 
     Parameters
@@ -159,15 +69,12 @@ def changes(
         The versions; by default the last one before the present, and the present.
     columns : sequence of str
         Only changes of these columns; of all when empty. Rows added and gone are always told.
-
-    Returns
-    -------
-    tuple of (pyarrow.Table, int, int)
-        One row a cell: the key, what happened (added, gone, changed), the column, the value before
-        and after, the change, and the change in standard errors where the grid carries one: in a
-        column of the same name with _se, or in one called se. The two versions.
+    ends : tuple of (int, int), optional
+        How many of the first and of the last differences are wanted, where there are more.
+    memory : str, optional
+        Most memory to take.
     """
-    store = Store.open(store_path, create=False)
+    store = Store.open(store_path, create=False, memory=memory)
     try:
         with store.reading() as engine:
             grid = found_grid(engine, "changes", name)
@@ -187,11 +94,16 @@ def changes(
                 )
             old = version_table(engine, "changes", grid, first)
             new = version_table(engine, "changes", grid, last)
-            only = _of_grid(grid, columns)
-            table = engine.sql(_changes_query(engine, grid, old, new, only)).to_arrow_table()
+            query = _changes_query(engine, grid, old, new, _of_grid(grid, columns))
+            engine.execute(f"CREATE OR REPLACE TEMP TABLE _m_changes AS {query}")
+            count = engine.execute("SELECT count(*) FROM temp.main._m_changes").fetchall()[0][0]
+            some = ""
+            if ends is not None and count > sum(ends):
+                some = f" WHERE rowid < {ends[0]} OR rowid >= {count - ends[1]}"
+            table = engine.sql(f"FROM temp.main._m_changes{some} ORDER BY rowid").to_arrow_table()
     finally:
         store.close()
-    return table, first, last
+    return Changes(table, first, last, count)
 
 
 def _of_grid(grid: Grid, names: Sequence[str]) -> frozenset[str]:
@@ -211,43 +123,48 @@ def _of_grid(grid: Grid, names: Sequence[str]) -> frozenset[str]:
 def _changes_query(
     engine: duckdb.DuckDBPyConnection, grid: Grid, old: str, new: str, only: frozenset[str]
 ) -> str:
+    """One join of the two versions; a row of it becomes one for each of its cells that differ."""
     kinds = {str(row[0]): str(row[1]) for row in engine.execute(f"DESCRIBE {new}").fetchall()}
     before = {str(row[0]) for row in engine.execute(f"DESCRIBE {old}").fetchall()}
-    shared = [name for name in kinds if name in before and name not in grid.keys]
-    on = " AND ".join(f"o.{quoted(k)} IS NOT DISTINCT FROM n.{quoted(k)}" for k in grid.keys)
-    keys = ", ".join(f"coalesce(n.{quoted(k)}, o.{quoted(k)}) AS {quoted(k)}" for k in grid.keys)
-    there = "n._m_there", "o._m_there"
-    joined = (
-        f"(SELECT *, true AS _m_there FROM {old}) AS o FULL JOIN"
-        f" (SELECT *, true AS _m_there FROM {new}) AS n ON {on}"
-    )
-    nothing = (
-        'CAST(NULL AS VARCHAR) AS "column", CAST(NULL AS VARCHAR) AS before,'
-        " CAST(NULL AS VARCHAR) AS after, CAST(NULL AS DOUBLE) AS change,"
-        " CAST(NULL AS DOUBLE) AS in_se"
-    )
-    parts = [
-        f"SELECT {keys}, 'added' AS what, {nothing} FROM {joined} WHERE {there[1]} IS NULL",
-        f"SELECT {keys}, 'gone' AS what, {nothing} FROM {joined} WHERE {there[0]} IS NULL",
+    shared = {
+        name: kind for name, kind in kinds.items() if name in before and name not in grid.keys
+    }
+    on = " AND ".join(f"_o.{quoted(k)} IS NOT DISTINCT FROM _n.{quoted(k)}" for k in grid.keys)
+    keys = ", ".join(f"coalesce(_n.{quoted(k)}, _o.{quoted(k)}) AS {quoted(k)}" for k in grid.keys)
+    listed = ", ".join(quoted(key) for key in grid.keys)
+    cells = [_cell(place, name, shared) for place, name in enumerate(shared) if name in only] or [
+        "NULL"
     ]
-    for name in [one for one in shared if one in only]:
-        column = quoted(name)
-        change = in_se = "CAST(NULL AS DOUBLE)"
-        if _is_number(kinds[name]):
-            change = f"CAST(n.{column} AS DOUBLE) - CAST(o.{column} AS DOUBLE)"
-            se = _standard_error(name, {one: kinds[one] for one in shared})
-            if se:
-                squares = " + ".join(f"CAST({v}.{quoted(se)} AS DOUBLE) ** 2" for v in "on")
-                spread = f"sqrt({squares})"
-                in_se = f"({change}) / nullif({spread}, 0)"
-        parts.append(
-            f"SELECT {keys}, 'changed' AS what, {literal(name)} AS \"column\","
-            f" CAST(o.{column} AS VARCHAR) AS before, CAST(n.{column} AS VARCHAR) AS after,"
-            f" {change} AS change, {in_se} AS in_se FROM {joined}"
-            f" WHERE {there[0]} AND {there[1]} AND o.{column} IS DISTINCT FROM n.{column}"
-        )
-    order = ", ".join(quoted(key) for key in grid.keys)
-    return f'FROM ({" UNION ALL ".join(parts)}) ORDER BY {order}, what, "column"'
+    return (
+        f'SELECT {listed}, _m_what AS what, _m_cell.name AS "column", _m_cell.before,'
+        f" _m_cell.after, _m_cell.change, _m_cell.in_se FROM (SELECT {listed}, _m_what,"
+        f" unnest(CASE WHEN _m_what = 'changed' THEN _m_cells ELSE [NULL] END) AS _m_cell FROM"
+        f" (SELECT {keys}, CASE WHEN _o._m_there IS NULL THEN 'added' WHEN _n._m_there IS NULL"
+        f" THEN 'gone' ELSE 'changed' END AS _m_what,"
+        f" CAST([{', '.join(cells)}] AS {_CELL}[]) AS _m_cells"
+        f" FROM (SELECT *, true AS _m_there FROM {old}) AS _o"
+        f" FULL JOIN (SELECT *, true AS _m_there FROM {new}) AS _n ON {on}))"
+        f" WHERE _m_what <> 'changed' OR _m_cell IS NOT NULL"
+        f" ORDER BY {listed}, _m_what, _m_cell.place"
+    )
+
+
+def _cell(place: int, name: str, kinds: Mapping[str, str]) -> str:
+    """What is told of a column where it differs; NULL where it does not."""
+    column = quoted(name)
+    change = in_se = "NULL"
+    if _is_number(kinds[name]):
+        change = f"CAST(_n.{column} AS DOUBLE) - CAST(_o.{column} AS DOUBLE)"
+        se = _standard_error(name, kinds)
+        if se:
+            squares = " + ".join(f"CAST({v}.{quoted(se)} AS DOUBLE) ** 2" for v in ("_o", "_n"))
+            in_se = f"({change}) / nullif(sqrt({squares}), 0)"
+    return (
+        f"CASE WHEN _o.{column} IS DISTINCT FROM _n.{column} THEN {{'place': {place},"
+        f" 'name': {literal(name)}, 'before': CAST(_o.{column} AS VARCHAR),"
+        f" 'after': CAST(_n.{column} AS VARCHAR), 'change': CAST({change} AS DOUBLE),"
+        f" 'in_se': CAST({in_se} AS DOUBLE)}} END"
+    )
 
 
 def _is_number(kind: str) -> bool:

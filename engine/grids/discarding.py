@@ -4,7 +4,7 @@ from pathlib import Path
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
-from midspread.engine.grids.comparing import found_grid
+from midspread.engine.grids.ledger import found_grid
 from midspread.engine.grids.restoring import note_undo
 from midspread.engine.store.store import Store
 

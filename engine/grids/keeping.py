@@ -12,6 +12,7 @@ from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind, che
 from midspread.engine.grids.publishing import publish
 from midspread.engine.grids.restoring import note_undo
 from midspread.engine.grids.sources import check_free
+from midspread.engine.parsing import one_value
 from midspread.engine.store.store import Store
 
 if TYPE_CHECKING:
@@ -73,7 +74,7 @@ def keep(
         With one sentence; the store is as it was.
     """
     checked_name("keep", name)
-    store = Store.open(store_path)
+    store = Store.open(store_path, memory=memory_of(session))
     with store.reading() as engine:
         before = ledger.grids(engine)
         check_free("keep", engine, name)
@@ -116,6 +117,12 @@ def keep(
     finally:
         store.close()
     return Kept(written, is_inferred, old is None)
+
+
+def memory_of(session: "Session") -> str:
+    """The most memory that a session takes, for the store that its result goes to."""
+    with session.cursor() as connection:
+        return str(one_value(connection, "SELECT current_setting('memory_limit')"))
 
 
 def folder_of(store: Path) -> str:

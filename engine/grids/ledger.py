@@ -5,13 +5,15 @@ in one such block is one transaction.
 """
 
 import json
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from datetime import datetime, timedelta
 from typing import Any, Final
 
 import duckdb
 
+from midspread.engine.errors import MidspreadError
 from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind, Record
+from midspread.engine.nearest import nearest
 from midspread.engine.store.answers import EPOCH
 from midspread.engine.store.quoting import quoted
 
@@ -33,6 +35,27 @@ def grids(engine: duckdb.DuckDBPyConnection) -> dict[str, Grid]:
         columns.setdefault(grid, []).append(Column(name, sql_type, ColumnKind(kind), expression))
     made = [_grid(row, tuple(columns.get(row[0], ()))) for row in rows]
     return {grid.folded: grid for grid in made}
+
+
+def found_grid(engine: duckdb.DuckDBPyConnection, command: str, name: str) -> Grid:
+    """The grid of a name.
+
+    Raises
+    ------
+    MidspreadError
+        When there is none, with the nearest name.
+    """
+    return named(grids(engine), command, name)
+
+
+def named(known: Mapping[str, Grid], command: str, name: str) -> Grid:
+    """The grid of a name among those known, by folded name; raises as `found_grid` does."""
+    grid = known.get(name.casefold())
+    if grid is None:
+        meant = nearest(name, [one.name for one in known.values()])
+        hint = f"did you mean {meant}?" if meant else "midspread show lists those there are."
+        raise MidspreadError(f"{command}: there is no grid {name}; {hint}")
+    return grid
 
 
 def stamps(engine: duckdb.DuckDBPyConnection) -> dict[str, tuple[str, int]]:

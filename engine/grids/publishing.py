@@ -2,7 +2,6 @@
 
 from dataclasses import replace
 from datetime import UTC, datetime
-from pathlib import Path
 from typing import Final
 
 import duckdb
@@ -10,14 +9,12 @@ import duckdb
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
 from midspread.engine.grids.computing import Computed
+from midspread.engine.grids.keeping_versions import drop_versions, versions_kept
 from midspread.engine.grids.model import RESULT, Column, ColumnKind, Grid
 from midspread.engine.grids.restoring import note_undo
 from midspread.engine.grids.tables import contents_query, key_text
 from midspread.engine.store.quoting import literal, quoted
-from midspread.engine.store.store import Store
 
-VERSIONS_SETTING: Final = "versions_kept"
-DEFAULT_VERSIONS: Final = 10
 _SCRATCH: Final = "_midspread_result"
 
 
@@ -120,9 +117,10 @@ def _check_keys(engine: duckdb.DuckDBPyConnection, command: str, grid: Grid, bas
         )
     if not grid.keys:
         return
+    listed = ", ".join(quoted(key) for key in grid.keys)
     twice = engine.execute(
-        f"SELECT {key_text(grid.keys)} AS key, count(*) AS n FROM {base}"
-        " GROUP BY key HAVING n > 1 ORDER BY key LIMIT 1"
+        f"SELECT {key_text(grid.keys)} AS _m_key, _m_count FROM (SELECT {listed}, count(*) AS"
+        f" _m_count FROM {base} GROUP BY {listed} HAVING count(*) > 1) ORDER BY _m_key LIMIT 1"
     ).fetchall()
     if twice:
         raise MidspreadError(
@@ -143,10 +141,29 @@ def _differs(engine: duckdb.DuckDBPyConnection, grid: Grid, base: str) -> bool:
         return True
     listed = ", ".join(quoted(column.name) for column in derived)
     new, old = f"SELECT {listed} FROM {base}", f"SELECT {listed} FROM {ledger.contents(grid.name)}"
+    if _gist(engine, new) != _gist(engine, old):
+        return True
+    # The same hashes in all likelihood mean the same rows, which is then made sure of.
+    if grid.keys:
+        on = " AND ".join(f"_o.{quoted(k)} IS NOT DISTINCT FROM _n.{quoted(k)}" for k in grid.keys)
+        rest = [quoted(column.name) for column in derived if column.name not in grid.keys]
+        differing = " OR ".join(f"_o.{name} IS DISTINCT FROM _n.{name}" for name in rest)
+        query = (
+            f"SELECT EXISTS (FROM (SELECT *, true AS _m_there FROM ({old})) AS _o FULL JOIN"
+            f" (SELECT *, true AS _m_there FROM ({new})) AS _n ON {on} WHERE _o._m_there IS NULL"
+            f" OR _n._m_there IS NULL{' OR ' if rest else ''}{differing})"
+        )
+    else:
+        query = f"SELECT EXISTS (({new}) EXCEPT ALL ({old})) OR EXISTS (({old}) EXCEPT ALL ({new}))"
+    return bool(engine.execute(query).fetchall()[0][0])
+
+
+def _gist(engine: duckdb.DuckDBPyConnection, query: str) -> tuple[int, int]:
+    """How many rows there are and the sum of their hashes: two passes tell most changes apart."""
     rows = engine.execute(
-        f"SELECT EXISTS (({new}) EXCEPT ALL ({old})) OR EXISTS (({old}) EXCEPT ALL ({new}))"
+        f"SELECT count(*), coalesce(sum(hash(_r)::HUGEINT), 0) FROM ({query}) AS _r"
     ).fetchall()
-    return bool(rows[0][0])
+    return int(rows[0][0]), int(rows[0][1])
 
 
 def _set_aside(engine: duckdb.DuckDBPyConnection, grid: Grid) -> None:
@@ -155,46 +172,4 @@ def _set_aside(engine: duckdb.DuckDBPyConnection, grid: Grid) -> None:
         f"CREATE OR REPLACE TABLE {ledger.earlier(grid.name, grid.version)} AS "
         f"FROM {ledger.contents(grid.name)}"
     )
-    _let_go(engine, grid.name, grid.version - versions_kept(engine))
-
-
-def _let_go(engine: duckdb.DuckDBPyConnection, name: str, last: int) -> int:
-    """Drop the versions of a grid up to one; how many there were."""
-    versions = engine.execute(
-        "SELECT version FROM store.ledger.versions WHERE lower(grid) = lower($1) AND is_kept"
-        " AND version <= $2",
-        [name, last],
-    ).fetchall()
-    for (version,) in versions:
-        engine.execute(f"DROP TABLE IF EXISTS {ledger.earlier(name, version)}")
-        engine.execute(
-            "UPDATE store.ledger.versions SET is_kept = false"
-            " WHERE lower(grid) = lower($1) AND version = $2",
-            [name, version],
-        )
-    return len(versions)
-
-
-def keep_versions(store_path: Path, count: int) -> int:
-    """Set how many earlier versions of each grid a store keeps; how many it lets go of for that."""
-    store = Store.open(store_path, create=False)
-    try:
-        with store.writing() as engine:
-            engine.execute("DELETE FROM store.ledger.about WHERE name = $1", [VERSIONS_SETTING])
-            engine.execute(
-                "INSERT INTO store.ledger.about VALUES ($1, $2)", [VERSIONS_SETTING, str(count)]
-            )
-            return sum(
-                _let_go(engine, grid.name, grid.version - 1 - count)
-                for grid in ledger.grids(engine).values()
-            )
-    finally:
-        store.close()
-
-
-def versions_kept(engine: duckdb.DuckDBPyConnection) -> int:
-    """How many earlier versions of each grid the store keeps."""
-    rows = engine.execute(
-        "SELECT value FROM store.ledger.about WHERE name = $1", [VERSIONS_SETTING]
-    ).fetchall()
-    return int(rows[0][0]) if rows else DEFAULT_VERSIONS
+    drop_versions(engine, grid.name, grid.version - versions_kept(engine))

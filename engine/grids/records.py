@@ -14,10 +14,10 @@ import duckdb
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
 from midspread.engine.grids.columns import add_column
-from midspread.engine.grids.comparing import found_grid
 from midspread.engine.grids.entering import create, enter
 from midspread.engine.grids.freshness import in_order
 from midspread.engine.grids.keeping import keep
+from midspread.engine.grids.ledger import found_grid
 from midspread.engine.grids.model import ColumnKind, Grid, GridKind
 from midspread.engine.store.quoting import quoted
 from midspread.engine.store.store import Store

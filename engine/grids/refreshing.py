@@ -16,6 +16,7 @@ from midspread.engine.grids.freshness import (
     in_order,
     reasons,
 )
+from midspread.engine.grids.keeping import memory_of
 from midspread.engine.grids.model import Grid
 from midspread.engine.grids.publishing import publish
 from midspread.engine.store.store import Store
@@ -67,19 +68,10 @@ def plan(
     MidspreadError
         When there is no grid of a name.
     """
-    wanted = _checked(grids, names) if names else None
+    wanted = [ledger.named(grids, "refresh", name).folded for name in names] or None
     return [
         grids[name] for name in in_order(grids, wanted) if states[name].state is not State.FRESH
     ]
-
-
-def _checked(grids: Mapping[str, Grid], names: Sequence[str]) -> list[str]:
-    for name in names:
-        if name.casefold() not in grids:
-            raise MidspreadError(
-                f"refresh: there is no grid {name}; midspread show lists those there are."
-            )
-    return [name.casefold() for name in names]
 
 
 def look(session: "Session", store_path: Path) -> tuple[dict[str, Grid], dict[str, Freshness]]:
@@ -122,6 +114,7 @@ def refresh(
     """
     with open_session() as session:
         grids, states = look(session, store_path)
+        memory = memory_of(session)
     listed = plan(grids, states, names)
     failed: set[str] = set()
     for place, grid in enumerate(listed, start=1):
@@ -132,7 +125,7 @@ def refresh(
             failed.add(grid.folded)
             yield Refreshed(grid, states[grid.folded].why, is_skipped=True, failure=broken[0])
             continue
-        made = _refresh_one(open_session, store_path, grid, bool(grid.failure))
+        made = _refresh_one(open_session, store_path, grid, bool(grid.failure), memory)
         if made is None:
             continue
         if made.failure:
@@ -141,10 +134,14 @@ def refresh(
 
 
 def _refresh_one(
-    open_session: Callable[[], "Session"], store_path: Path, grid: Grid, is_failed: bool
+    open_session: Callable[[], "Session"],
+    store_path: Path,
+    grid: Grid,
+    is_failed: bool,
+    memory: str,
 ) -> Refreshed | None:
     """Compute one grid; None when it is fresh after all, as what it reads came out the same."""
-    store = Store(store_path)
+    store = Store(store_path, memory)
     folder = Path(os.path.normpath(store.path.parent / grid.folder))
     why: tuple[str, ...] = ()
     try:

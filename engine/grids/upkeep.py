@@ -36,19 +36,36 @@ def faults_of_grids(engine: duckdb.DuckDBPyConnection) -> list[str]:
     return faults
 
 
+def remarks_on_grids(engine: duckdb.DuckDBPyConnection) -> list[str]:
+    """What else lies in the store beside its grids, one sentence each; within `Store.reading`."""
+    own = {grid.name for grid in ledger.grids(engine).values()}
+    remarks = [
+        f"The table {name} was made by another program and is left alone."
+        for name in sorted(_tables(engine, "main") - own)
+    ]
+    spare = len(_tables(engine, "aside")) + len(_orphans(engine))
+    if spare:
+        remarks.append(
+            f"{spare} tables are kept for midspread undo; midspread store pack lets go of them."
+            if spare > 1
+            else "1 table is kept for midspread undo; midspread store pack lets go of it."
+        )
+    return remarks
+
+
 def let_go(engine: duckdb.DuckDBPyConnection) -> None:
     """Drop what `undo` could bring back, and versions of grids that are gone; within `writing`."""
     for name in _tables(engine, "aside"):
         engine.execute(f"DROP TABLE store.aside.{quoted(name)}")
     engine.execute("DELETE FROM store.ledger.undo")
-    kept = {
-        f"{name} {version}"
-        for name, version in engine.execute(
-            "SELECT grid, version FROM store.ledger.versions WHERE is_kept"
-        ).fetchall()
-    }
-    for name in _tables(engine, "earlier") - kept:
+    for name in _orphans(engine):
         engine.execute(f"DROP TABLE store.earlier.{quoted(name)}")
+
+
+def _orphans(engine: duckdb.DuckDBPyConnection) -> set[str]:
+    """Tables of earlier versions that no grid has at present."""
+    kept = engine.execute("SELECT grid, version FROM store.ledger.versions WHERE is_kept")
+    return _tables(engine, "earlier") - {f"{name} {version}" for name, version in kept.fetchall()}
 
 
 def _tables(engine: duckdb.DuckDBPyConnection, schema: str) -> set[str]:

@@ -10,8 +10,8 @@ from pathlib import Path
 
 from midspread.engine.errors import Interrupted, MidspreadError, StoreError, UsageError
 from midspread.engine.grids import ledger
-from midspread.engine.grids.comparing import found_grid
 from midspread.engine.grids.freshness import State, freshness_of_all
+from midspread.engine.grids.ledger import found_grid
 from midspread.engine.grids.model import Grid
 from midspread.engine.grids.records import record_of
 from midspread.engine.grids.sources import Source, SourceKind, found_source, gone, sources

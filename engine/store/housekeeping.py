@@ -10,7 +10,7 @@ from pathlib import Path
 import duckdb
 
 from midspread.engine.errors import StoreError
-from midspread.engine.grids.publishing import versions_kept
+from midspread.engine.grids.keeping_versions import versions_kept
 from midspread.engine.grids.upkeep import faults_of_grids, let_go
 from midspread.engine.store.answers import EPOCH, Answers
 from midspread.engine.store.layout import ALIAS, STORAGE_VERSION, shelf_table

@@ -4,17 +4,19 @@ import contextlib
 import os
 import secrets
 import shutil
+import tempfile
 import time
 from collections.abc import Iterator
 from pathlib import Path
 
 import duckdb
 
-from midspread.engine.errors import NotAStore, StoreDamaged, StoreError, StoreTooNew
+from midspread.engine.errors import StoreError, StoreTooNew, UsageError
 from midspread.engine.publishing import publish
 from midspread.engine.store.layout import ALIAS, FORMAT, PROGRAM, STORAGE_VERSION, creating
 from midspread.engine.store.locking import busy, lock_path, locked, not_writable, retry
 from midspread.engine.store.quoting import literal, quoted
+from midspread.engine.store.trouble import as_store_error, damaged, is_held, not_a_store
 from midspread.engine.store.upgrading import copy_beside, upgrade
 
 # Our own commands hold the store for moments; another program may hold it for hours.
@@ -23,14 +25,13 @@ WAIT_FOR_OTHERS_S = 3.0
 _MAGIC = b"DUCK"
 _CONFIG: dict[str, str | bool | int | float | list[str]] = {
     "threads": 1,
-    "temp_directory": "",
     "autoinstall_known_extensions": False,
     "autoload_known_extensions": False,
 }
-_FULL = ("no space left", "file too large", "disk quota", "disk full", "not enough space")
-_FORBIDDEN = ("permission denied", "read-only file system", "access is denied")
-_BROKEN = ("corrupt", "checksum", "could not read", "deserializ", "invalidated", "replay")
-_HELD = ("set lock on file", "already attached", "already open", "used by another process")
+
+# Stores that this process has looked at, and in which state of the file: one command asks several
+# times, and to attach a store with many grids takes a while.
+_sound: dict[Path, tuple[int, ...]] = {}
 
 
 class Store:
@@ -38,19 +39,28 @@ class Store:
 
     Make one with :meth:`open`. Threads may share it. It holds no file open between uses.
 
+    Parameters
+    ----------
+    path : Path
+        The database file.
+    memory : str, optional
+        Most memory that its engine takes; beyond, it writes to a scratch folder.
+
     Attributes
     ----------
     path : Path
         The database file, absolute, links resolved.
     """
 
-    def __init__(self, path: Path) -> None:
+    def __init__(self, path: Path, memory: str | None = None) -> None:
         self.path = Path(os.path.realpath(path))
+        self._memory = memory
+        self._scratch: tempfile.TemporaryDirectory[str] | None = None
         self._engine: duckdb.DuckDBPyConnection | None = None
         self._format = FORMAT
 
     @classmethod
-    def open(cls, path: Path, *, create: bool = True) -> "Store":
+    def open(cls, path: Path, *, create: bool = True, memory: str | None = None) -> "Store":
         """Open a store, making it when it is missing.
 
         Parameters
@@ -59,6 +69,8 @@ class Store:
             The database file.
         create : bool
             Whether to make it when it is missing.
+        memory : str, optional
+            Most memory that its engine takes.
 
         Returns
         -------
@@ -75,7 +87,7 @@ class Store:
         StoreError
             It is missing and `create` is False, or the disk is full.
         """
-        store = cls(path)
+        store = cls(path, memory)
         if not store.path.exists():
             if not create:
                 raise StoreError(
@@ -83,12 +95,17 @@ class Store:
                     "--store."
                 )
             store._create()
+        found = _state_of(store.path)
+        if found is not None and _sound.get(store.path) == found:
+            return store
         had_lock = lock_path(store.path).exists()
         try:
             with store.reading():
                 pass
             if store._format < FORMAT:
                 store._upgrade()
+            elif found is not None:
+                _sound[store.path] = found
         except StoreError:
             if not had_lock:
                 lock_path(store.path).unlink(missing_ok=True)
@@ -145,6 +162,9 @@ class Store:
         if self._engine is not None:
             self._engine.close()
             self._engine = None
+        if self._scratch is not None:
+            self._scratch.cleanup()
+            self._scratch = None
 
     @contextlib.contextmanager
     def exclusively(self, wait_s: float = WAIT_FOR_OURS_S) -> Iterator[duckdb.DuckDBPyConnection]:
@@ -182,7 +202,21 @@ class Store:
 
     def _private_engine(self) -> duckdb.DuckDBPyConnection:
         if self._engine is None:
-            self._engine = duckdb.connect(config=_CONFIG)
+            self._scratch = tempfile.TemporaryDirectory(
+                prefix="midspread-", ignore_cleanup_errors=True
+            )
+            config = {**_CONFIG, "temp_directory": self._scratch.name}
+            if self._memory is not None:
+                config["memory_limit"] = self._memory
+            try:
+                self._engine = duckdb.connect(config=config)
+            except duckdb.Error:
+                if self._memory is None:
+                    raise
+                raise UsageError(
+                    f"--memory must be an amount of memory, got {self._memory}; write for example "
+                    "4GB."
+                ) from None
         return self._engine
 
     @contextlib.contextmanager
@@ -209,7 +243,7 @@ class Store:
             try:
                 engine.execute(sql)
             except duckdb.Error as error:
-                if _is_held(error):
+                if is_held(error):
                     return False
                 raise
             return True
@@ -237,16 +271,16 @@ class Store:
                 "with --store."
             ) from None
         except IsADirectoryError:
-            raise self._not_a_store("is a folder") from None
+            raise not_a_store(self.path, "is a folder") from None
         except OSError as error:
             if self.path.is_dir():
-                raise self._not_a_store("is a folder") from None
+                raise not_a_store(self.path, "is a folder") from None
             raise StoreError(
                 f"The store {self.path} cannot be read ({error.strerror}); allow reading it, or "
                 "name another store with --store."
             ) from error
         if beginning[8:12] != _MAGIC:
-            raise self._not_a_store("is some other file")
+            raise not_a_store(self.path, "is some other file")
 
     def _check_format(self, engine: duckdb.DuckDBPyConnection) -> None:
         try:
@@ -256,10 +290,10 @@ class Store:
         except (duckdb.CatalogException, duckdb.BinderException):
             about = {}
         if about.get("program") != PROGRAM:
-            raise self._not_a_store("is a database of another program")
+            raise not_a_store(self.path, "is a database of another program")
         found = about.get("format") or ""
         if not found.isdigit():
-            raise self._damaged("it does not say its format")
+            raise damaged(self.path, "it does not say its format")
         if int(found) > FORMAT:
             raise StoreTooNew(
                 f"The store {self.path} was written by a newer Midspread (format {found}, this one "
@@ -326,51 +360,22 @@ class Store:
 
     def error_of(self, error: Exception) -> StoreError:
         """Turn an error of the engine or the system about this store into ours."""
-        if isinstance(error, StoreError):
-            return error
-        text = str(error)
-        lower = text.casefold()
-        if any(words in lower for words in _FULL):
-            return StoreError(
-                f"The disk is too full for the store {self.path}, which is as it was; make room, "
-                "or name a store on another disk with --store."
-            )
-        if any(words in lower for words in _FORBIDDEN):
-            return not_writable(self.path)
-        if _is_held(error):
-            return busy(self.path)
-        if "version number" in lower or "newer version" in lower:
-            return StoreTooNew(
-                f"The store {self.path} was written by a newer database engine; update DuckDB "
-                "(pip install --upgrade duckdb), or name another store with --store."
-            )
-        if "not a valid duckdb database" in lower:
-            return self._not_a_store("is some other file")
-        if isinstance(error, OSError):
-            return StoreError(f"The store {self.path} could not be written: {error.strerror}.")
-        first_line = text.splitlines()[0].rstrip(".") if text else type(error).__name__
-        broken = isinstance(error, duckdb.InternalException | duckdb.FatalException)
-        if broken or any(words in lower for words in _BROKEN):
-            return self._damaged(first_line)
-        return StoreError(f"The store {self.path} could not be used: {first_line}.")
-
-    def _damaged(self, why: str) -> StoreDamaged:
-        return StoreDamaged(
-            f"The store {self.path} is damaged and was left as it is ({why}); restore a copy, or "
-            "move it away and the next query makes a new one."
-        )
-
-    def _not_a_store(self, why: str) -> NotAStore:
-        return NotAStore(
-            f"{self.path} {why}, not a store of Midspread, and was left as it is; name another "
-            "path with --store or MIDSPREAD_STORE."
-        )
+        return as_store_error(self.path, error)
 
 
 def remove_database(path: Path) -> None:
     """Remove a database of ours with what may stand beside it."""
     for name in (path.name, path.name + ".wal"):
         path.with_name(name).unlink(missing_ok=True)
+
+
+def _state_of(path: Path) -> tuple[int, ...] | None:
+    """What changes whenever a file does; None where it cannot be looked at."""
+    try:
+        state = path.stat()
+    except OSError:
+        return None
+    return state.st_dev, state.st_ino, state.st_size, state.st_mtime_ns, state.st_ctime_ns
 
 
 def _detach(engine: duckdb.DuckDBPyConnection) -> bool:
@@ -386,7 +391,3 @@ def _detach(engine: duckdb.DuckDBPyConnection) -> bool:
             return False
         raise
     return True
-
-
-def _is_held(error: Exception) -> bool:
-    return any(words in str(error).casefold() for words in _HELD)

@@ -191,6 +191,7 @@ def scale() -> None:
 
 def large() -> None:
     """A grid of 5 million rows: kept, refreshed and compared, with the most memory each took."""
+    duckdb.execute("SET enable_progress_bar = false")
     rows = "SELECT i AS k, i * {} AS v, 'text ' || i AS t FROM range(5000000) AS rows(i)"
     duckdb.sql(f"COPY ({rows.format(1)}) TO 'large.parquet'")
     _measured("keep", "large", "FROM 'large.parquet'", "--key", "k", "--memory", LIMIT)

@@ -110,6 +110,18 @@ def test_a_long_query_shows_how_far_it_is_and_can_be_interrupted() -> None:
 
 
 @pytest.mark.usefixtures("here")
+def test_refresh_shows_which_grid_it_is_at_and_can_be_interrupted(spawn: Spawn) -> None:
+    assert spawn("keep", "slow", SLOW, "--later").returncode == 0
+    child = terminal("refresh")
+    child.expect("slow, 1 of 1")
+    child.sendintr()
+    rest = seen(child)
+    assert child.exitstatus == 130
+    assert rest.strip().splitlines()[-1] == "midspread refresh: interrupted; nothing was changed."
+    assert "stale: it has not been computed yet" in spawn("show").stdout
+
+
+@pytest.mark.usefixtures("here")
 def test_compiling_is_shown_as_it_goes(tmp_path: Path) -> None:
     sql = "SELECT trimean(i) AS t FROM range(101) t(i)"
     child = terminal("query", sql, XDG_CACHE_HOME=str(tmp_path / "cache"))

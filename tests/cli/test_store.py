@@ -35,7 +35,7 @@ def test_what_it_holds(run: Run, kept: Path) -> None:
     assert shown["place"] == str(kept)
     assert shown["answers"] == "1 kept answer"
     assert shown["room"].endswith("of at most 1.07 GB")
-    assert "is sound: 0 grids and 1 kept answer read" in run("store", "check").stdout
+    assert "is sound: 0 grids with 0 rows and 1 kept answer read, " in run("store", "check").stdout
 
 
 @pytest.mark.usefixtures("kept")

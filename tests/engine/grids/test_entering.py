@@ -7,12 +7,12 @@ import pytest
 
 from midspread.engine.errors import MidspreadError, UsageError
 from midspread.engine.grids.columns import add_column, drop_column
-from midspread.engine.grids.comparing import history
 from midspread.engine.grids.entering import create, delete, enter
 from midspread.engine.grids.entries import set_aside
 from midspread.engine.grids.refreshing import refresh
 from midspread.engine.grids.restoring import undo
 from midspread.engine.grids.sheets import read_sheet
+from midspread.engine.grids.versions import history
 from midspread.engine.session import Session
 from midspread.engine.store.store import Store
 from tests.engine.grids.conftest import Keep, write_month

@@ -6,12 +6,13 @@ import pytest
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids.columns import add_column
-from midspread.engine.grids.comparing import changes, history
+from midspread.engine.grids.comparing import changes
 from midspread.engine.grids.discarding import discard
 from midspread.engine.grids.entering import create, enter
-from midspread.engine.grids.publishing import keep_versions
+from midspread.engine.grids.keeping_versions import keep_versions
 from midspread.engine.grids.refreshing import refresh
 from midspread.engine.grids.restoring import undo
+from midspread.engine.grids.versions import history
 from midspread.engine.session import Session
 from midspread.engine.store.housekeeping import check
 from midspread.engine.store.store import Store

@@ -7,14 +7,15 @@ import pytest
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids.columns import add_column
-from midspread.engine.grids.comparing import changes, history
+from midspread.engine.grids.comparing import changes
 from midspread.engine.grids.discarding import discard
 from midspread.engine.grids.entering import create, enter
-from midspread.engine.grids.publishing import VERSIONS_SETTING
+from midspread.engine.grids.keeping_versions import VERSIONS_SETTING
 from midspread.engine.grids.records import read_record, record_of, verify
 from midspread.engine.grids.refreshing import look, refresh
 from midspread.engine.grids.resting import tree_above, tree_below
 from midspread.engine.grids.restoring import undo
+from midspread.engine.grids.versions import history
 from midspread.engine.session import Session
 from midspread.engine.store.housekeeping import check, pack
 from midspread.engine.store.store import Store
@@ -33,16 +34,23 @@ def test_what_changed_by_key_and_in_standard_errors(kept: Keep, store: Path, fol
     write_month(folder, "2031-03", 30, 100.0)
     list(refresh(lambda: Session(threads=1), store))
     new = dict(rows("SELECT route, dwell FROM by_route"))
-    table, first, last = changes(store, "by_route")
-    assert (first, last) == (1, 2)
-    lines = table.to_pylist()
+    found = changes(store, "by_route")
+    assert (found.first, found.last) == (1, 2)
+    lines = found.table.to_pylist()
+    assert found.count == len(lines)
     assert [line["route"] for line in lines if line["what"] == "gone"] == ["R2"]
     dwell = {line["route"]: line for line in lines if line["column"] == "dwell"}
     for route in ("R0", "R1"):
         change = new[route] - old[route]
         assert dwell[route]["change"] == pytest.approx(change)
         assert dwell[route]["in_se"] == pytest.approx(change / (0.3 * 2**0.5))
-    assert changes(store, "by_route", 2, 1)[0].num_rows == table.num_rows
+    assert changes(store, "by_route", 2, 1).count == found.count
+    ends = changes(store, "by_route", ends=(1, 1), memory="100MB").table.to_pylist()
+    assert ends == [lines[0], lines[-1]]
+    only = changes(store, "by_route", columns=["N"]).table.to_pylist()
+    assert {line["column"] for line in only} == {"n", None}
+    with pytest.raises(MidspreadError, match="no column dwel; did you mean dwell"):
+        changes(store, "by_route", columns=["dwel"])
 
 
 def test_only_so_many_versions_are_kept(kept: Keep, store: Path, folder: Path) -> None:
@@ -54,7 +62,7 @@ def test_only_so_many_versions_are_kept(kept: Keep, store: Path, folder: Path) -
     for month in range(3, 7):
         write_month(folder, f"2031-0{month}", 30)
         list(refresh(lambda: Session(threads=1), store))
-    assert changes(store, "by_route", 4, 5)[0].num_rows
+    assert changes(store, "by_route", 4, 5).count
     with pytest.raises(MidspreadError, match="not kept; those kept are 3, 4, 5"):
         changes(store, "by_route", 1, 5)
     log = history(store, "by_route").to_pylist()

@@ -1,5 +1,6 @@
 """A store with grids, and three databases to push to: a DuckDB file, a SQLite file, a server."""
 
+import contextlib
 import importlib.util
 import os
 import secrets
@@ -91,17 +92,24 @@ def server() -> Iterator[Server]:
     data = folder / "data"
 
     def run(program: str, *arguments: str) -> None:
-        done = subprocess.run(
-            [str(programs / program), "-D", str(data), *arguments],
-            stdin=subprocess.DEVNULL,
-            stdout=subprocess.DEVNULL,
-            stderr=subprocess.PIPE if program == "initdb" else subprocess.DEVNULL,
-            cwd=folder,
-            text=True,
-            timeout=120,
-            **owner,
-        )
-        assert done.returncode == 0, done.stderr
+        try:
+            done = subprocess.run(
+                [str(programs / program), "-D", str(data), *arguments],
+                stdin=subprocess.DEVNULL,
+                stdout=subprocess.DEVNULL,
+                stderr=subprocess.PIPE if program == "initdb" else subprocess.DEVNULL,
+                cwd=folder,
+                text=True,
+                timeout=120,
+                **owner,
+            )
+        except (OSError, subprocess.SubprocessError) as error:
+            shutil.rmtree(folder, ignore_errors=True)
+            pytest.skip(f"the PostgreSQL server cannot be started here: {error}")
+        if done.returncode != 0:
+            reason = done.stderr or f"{program} gave the exit code {done.returncode}"
+            shutil.rmtree(folder, ignore_errors=True)
+            pytest.skip(f"the PostgreSQL server cannot be started here: {reason}")
 
     with socket.socket() as free:
         free.bind(("127.0.0.1", 0))
@@ -112,7 +120,8 @@ def server() -> Iterator[Server]:
     try:
         yield Server("127.0.0.1", port, password)
     finally:
-        run("pg_ctl", "-w", "-m", "immediate", "stop")
+        with contextlib.suppress(pytest.skip.Exception):
+            run("pg_ctl", "-w", "-m", "immediate", "stop")
         shutil.rmtree(folder, ignore_errors=True)
 
 
@@ -122,7 +131,10 @@ def _not_an_administrator(folder: Path) -> dict[str, Any]:
         return {}
     import pwd
 
-    nobody = pwd.getpwnam("nobody")
+    try:
+        nobody = pwd.getpwnam("nobody")
+    except KeyError:
+        pytest.skip("the PostgreSQL server refuses to run as root, and there is no user nobody")
     os.chown(folder, nobody.pw_uid, nobody.pw_gid)
     return {"user": nobody.pw_uid, "group": nobody.pw_gid, "extra_groups": []}
 
