@@ -67,8 +67,9 @@ def trimmed_anova(batch: "Batch") -> dict[str, Values]:
     Levels of which fewer than two values are kept are left out. The fields are NULL where fewer
     than two levels are left or where a level has no spread left after trimming, as its weight
     would have no bound. With two levels f is the square of Yuen's t. At millions of rows every
-    test rejects: look at the differences themselves with group_differences. A p after a search
-    is optimistic.
+    test rejects: look at the differences themselves with group_differences. Rows must be
+    independent: visits of one vehicle or one day are not, and p is then too small. A p after a
+    search is optimistic.
 
     References
     ----------

@@ -85,9 +85,10 @@ def row_flags(*, tbl: object, value: object, by: object, rule: object, k: object
     Notes
     -----
     Flagged does not mean wrong: a limit says where to look. Nor does unflagged mean right: a
-    clock stuck at a usual value lies inside. Where the fourths are equal, or mad_scale is 0 under
-    median_mad, the limits have no width and every other value is outside. A NaN makes the limits
-    of its group NaN, and then nothing there is flagged: leave NaN out first.
+    clock stuck at a usual value lies inside, and where a quarter of a group or more is wild on one
+    side (half of it under median_mad) outliers mask each other. Where the fourths are equal, or
+    mad_scale is 0 under median_mad, the limits have no width and every other value is outside. A
+    NaN makes the limits of its group NaN, and then nothing there is flagged: leave NaN out first.
 
     False alarms on clean data, as per cent of values flagged / per cent of groups with a flag
     (tests/bench/false_alarms.py; median_mad with k = 3)::
