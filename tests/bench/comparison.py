@@ -31,6 +31,11 @@ def measure(rows: int) -> list[Figure]:
             lambda: session.query(f"FROM decile_shifts('{tenth}', 'x', 'payment', by := 'few')")
         )
         figures.append(
-            Figure(f"decile_shifts, {rows // 10:,} rows, 1,000 groups, 1,000 resamples", taken, "s")
+            Figure(
+                f"decile_shifts, {rows // 10:,} rows, 1,000 groups, 1,000 resamples",
+                taken,
+                "s",
+                "tens of s",
+            )
         )
     return figures

@@ -52,12 +52,12 @@ def measure(rows: int) -> list[Figure]:
             others = {
                 name: asked(FLAGGED.format(key=key, more=more)) for name, more in RULES.items()
             }
-            for name, ratio in in_turn(asked(JOINED_BACK.format(key=key)), others, 3).items():
+            for name, ratio in in_turn(asked(JOINED_BACK.format(key=key)), others, 2).items():
                 what = f"{name} / median joined back, {words}"
                 figures.append(Figure(what, ratio, "×", PROMISED.get(key, "")))
             others = {"heaping": asked(f"SELECT sum(step) FROM heaping('t', 'x', by := '{key}')")}
             reference = asked(f"SELECT sum(m) FROM (SELECT median(x) AS m FROM t GROUP BY {key})")
-            for name, ratio in in_turn(reference, others, 3).items():
+            for name, ratio in in_turn(reference, others, 2).items():
                 figures.append(Figure(f"{name} / median, {words}", ratio))
         for half_width in HALF_WIDTHS:
             reference = asked(WINDOWED.format(key="few", half_width=half_width))
