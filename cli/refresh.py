@@ -51,7 +51,8 @@ def refresh(names: tuple[str, ...], dry_run: bool, settings: Settings) -> None:
                 click.echo(f"{made.grid.name}: left as it is, because {made.failure} failed")
             elif made.failure:
                 failures += 1
-                click.echo(f"{made.grid.name}: failed, its last good contents stay: {made.failure}")
+                stays = ", its last good contents stay" if made.grid.version else ""
+                click.echo(f"{made.grid.name}: failed{stays}: {made.failure}")
             elif made.is_changed:
                 click.echo(
                     f"{made.grid.name}: version {made.grid.version}, "

@@ -168,19 +168,15 @@ def _print_rows(console: "Console", grid: "Grid", settings: Settings) -> None:
     from midspread.cli.tables import print_table
     from midspread.engine.grids.entries import set_aside
     from midspread.engine.grids.versions import first_rows, version_table
-    from midspread.engine.store.store import Store
+    from midspread.engine.store.store import reading
 
     if grid.version == 0:
         click.echo(f"not computed yet; midspread refresh {grid.name}")
         return
-    store = Store.open(settings.store_path(), create=False)
-    try:
-        with store.reading() as engine:
-            table = version_table(engine, "show", grid, grid.version)
-            rows = first_rows(engine, grid, table, FIRST_ROWS)
-            aside = set_aside(engine, grid)
-    finally:
-        store.close()
+    with reading(settings.store_path()) as engine:
+        table = version_table(engine, "show", grid, grid.version)
+        rows = first_rows(engine, grid, table, FIRST_ROWS)
+        aside = set_aside(engine, grid)
     print_table(console, rows, note=f"the first {count_text(rows.num_rows, 'row')}")
     if aside:
         click.echo()

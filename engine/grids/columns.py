@@ -17,7 +17,7 @@ from midspread.engine.grids.tables import computed_in_order, contents_query, equ
 from midspread.engine.inputs.scanning import mentions_of
 from midspread.engine.nearest import nearest
 from midspread.engine.store.quoting import literal, quoted
-from midspread.engine.store.store import Store
+from midspread.engine.store.store import writing
 
 
 def add_column(
@@ -109,44 +109,38 @@ def _change(
     memory: str | None,
 ) -> Grid:
     """Change a grid's columns and write its table anew, in one transaction."""
-    store = Store.open(store_path, create=False, memory=memory)
-    try:
-        with store.writing() as engine:
-            before = found_grid(engine, "column", name)
-            if before.version == 0:
-                raise MidspreadError(
-                    f"column: {before.name} has not been computed yet; run midspread refresh "
-                    f"{before.name} first."
-                )
-            stamp = ledger.next_stamp(engine)
-            note_undo(engine, stamp, before.name, before)
-            after = change(engine, before)
-            computed_in_order(after)  # refuses a circle
-            equip(engine, after)
-            table = ledger.contents(before.name)
-            kinds = (
-                (ColumnKind.DERIVED,) if before.kind is GridKind.DERIVED else (ColumnKind.ENTERED,)
+    with writing(store_path, memory=memory) as engine:
+        before = found_grid(engine, "column", name)
+        if before.version == 0:
+            raise MidspreadError(
+                f"column: {before.name} has not been computed yet; run midspread refresh "
+                f"{before.name} first."
             )
-            kept = [column.name for column in before.of_kind(*kinds)]
-            listed = ", ".join(quoted(one) for one in kept)
-            fresh = [
-                column
-                for column in after.of_kind(ColumnKind.ENTERED)
-                if before.kind is GridKind.ENTERED and column.name not in kept
-            ]
-            empty = "".join(f", CAST(NULL AS {c.type}) AS {quoted(c.name)}" for c in fresh)
-            query = contents_query(after, f"(SELECT {listed}{empty} FROM {table})")
-            try:
-                engine.execute(f"CREATE OR REPLACE TABLE {table} AS {query}")
-            except duckdb.Error as error:
-                raise _not_computed(after, error) from None
-            written = replace(after, stamp=stamp, changed=datetime.now(UTC))
-            ledger.write_grid(engine, written)
-            gone = {c.name for c in before.columns} - {c.name for c in after.columns}
-            new = {c.name for c in after.columns} - {c.name for c in before.columns}
-            ledger.log(engine, written.stamp, written.name, action, column=(gone | new).pop())
-    finally:
-        store.close()
+        stamp = ledger.next_stamp(engine)
+        note_undo(engine, stamp, before.name, before)
+        after = change(engine, before)
+        computed_in_order(after)  # refuses a circle
+        equip(engine, after)
+        table = ledger.contents(before.name)
+        kinds = (ColumnKind.DERIVED,) if before.kind is GridKind.DERIVED else (ColumnKind.ENTERED,)
+        kept = [column.name for column in before.of_kind(*kinds)]
+        listed = ", ".join(quoted(one) for one in kept)
+        fresh = [
+            column
+            for column in after.of_kind(ColumnKind.ENTERED)
+            if before.kind is GridKind.ENTERED and column.name not in kept
+        ]
+        empty = "".join(f", CAST(NULL AS {c.type}) AS {quoted(c.name)}" for c in fresh)
+        query = contents_query(after, f"(SELECT {listed}{empty} FROM {table})")
+        try:
+            engine.execute(f"CREATE OR REPLACE TABLE {table} AS {query}")
+        except duckdb.Error as error:
+            raise _not_computed(after, error) from None
+        written = replace(after, stamp=stamp, changed=datetime.now(UTC))
+        ledger.write_grid(engine, written)
+        gone = {c.name for c in before.columns} - {c.name for c in after.columns}
+        new = {c.name for c in after.columns} - {c.name for c in before.columns}
+        ledger.log(engine, written.stamp, written.name, action, column=(gone | new).pop())
     return written
 
 

@@ -13,7 +13,7 @@ from midspread.engine.grids.model import Grid, GridKind
 from midspread.engine.grids.versions import version_table
 from midspread.engine.nearest import nearest
 from midspread.engine.store.quoting import literal, quoted
-from midspread.engine.store.store import Store
+from midspread.engine.store.store import reading
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -74,35 +74,31 @@ def changes(
     memory : str, optional
         Most memory to take.
     """
-    store = Store.open(store_path, create=False, memory=memory)
-    try:
-        with store.reading() as engine:
-            grid = found_grid(engine, "changes", name)
-            if grid.kind is GridKind.ENTERED:
-                version_table(engine, "changes", grid, 0)
-            if not grid.keys:
-                raise MidspreadError(
-                    f"changes: {grid.name} has no key, so its rows cannot be told apart; name one "
-                    f"with midspread keep {grid.name} --replace --key."
-                )
-            last = grid.version if after is None else after
-            first = last - 1 if before is None else before
-            if first < 1 or last < 1:
-                raise UsageError(
-                    f"changes: {grid.name} has only version {grid.version}; there is something to "
-                    f"compare once a refresh has changed it."
-                )
-            old = version_table(engine, "changes", grid, first)
-            new = version_table(engine, "changes", grid, last)
-            query = _changes_query(engine, grid, old, new, _of_grid(grid, columns))
-            engine.execute(f"CREATE OR REPLACE TEMP TABLE _m_changes AS {query}")
-            count = engine.execute("SELECT count(*) FROM temp.main._m_changes").fetchall()[0][0]
-            some = ""
-            if ends is not None and count > sum(ends):
-                some = f" WHERE rowid < {ends[0]} OR rowid >= {count - ends[1]}"
-            table = engine.sql(f"FROM temp.main._m_changes{some} ORDER BY rowid").to_arrow_table()
-    finally:
-        store.close()
+    with reading(store_path, memory=memory) as engine:
+        grid = found_grid(engine, "changes", name)
+        if grid.kind is GridKind.ENTERED:
+            version_table(engine, "changes", grid, 0)
+        if not grid.keys:
+            raise MidspreadError(
+                f"changes: {grid.name} has no key, so its rows cannot be told apart; name one "
+                f"with midspread keep {grid.name} --replace --key."
+            )
+        last = grid.version if after is None else after
+        first = last - 1 if before is None else before
+        if first < 1 or last < 1:
+            raise UsageError(
+                f"changes: {grid.name} has only version {grid.version}; there is something to "
+                f"compare once a refresh has changed it."
+            )
+        old = version_table(engine, "changes", grid, first)
+        new = version_table(engine, "changes", grid, last)
+        query = _changes_query(engine, grid, old, new, _of_grid(grid, columns))
+        engine.execute(f"CREATE OR REPLACE TEMP TABLE _m_changes AS {query}")
+        count = engine.execute("SELECT count(*) FROM temp.main._m_changes").fetchall()[0][0]
+        some = ""
+        if ends is not None and count > sum(ends):
+            some = f" WHERE rowid < {ends[0]} OR rowid >= {count - ends[1]}"
+        table = engine.sql(f"FROM temp.main._m_changes{some} ORDER BY rowid").to_arrow_table()
     return Changes(table, first, last, count)
 
 

@@ -124,7 +124,7 @@ class Inquiry:
             },
             functions={name: function.version for name, function in called.items()},
             seeds={
-                name: float(str(parameter.default))
+                name: int(float(str(parameter.default)))
                 for name, function in called.items()
                 for parameter in function.parameters
                 if parameter.name == "seed"

@@ -18,7 +18,7 @@ from midspread.engine.grids.sources import check_free
 from midspread.engine.grids.tables import computing_steps, key_text
 from midspread.engine.nearest import nearest
 from midspread.engine.store.quoting import quoted
-from midspread.engine.store.store import Store
+from midspread.engine.store.store import Store, writing
 
 
 @dataclass(frozen=True)
@@ -120,30 +120,26 @@ def enter(
     MidspreadError
         With one sentence; nothing is changed then.
     """
-    store = Store.open(store_path, create=False)
-    try:
-        with store.writing() as engine:
-            grid = grid_to_enter(engine, name)
-            chosen = columns_given(grid, columns)
-            load(engine, grid, chosen, rows)
-            new = count_new(engine, grid)
-            if grid.kind is GridKind.DERIVED and new:
-                raise no_such_row(engine, grid)
-            stamp = ledger.next_stamp(engine)
-            cells = _log_cells(engine, stamp, grid, chosen, note)
-            if not (new or cells):  # what rests on the grid stays fresh
-                if note:
-                    _log_note(engine, stamp, grid, note)
-                return Entered(grid, 0, 0)
-            note_rows(engine, stamp, grid, GIVEN, KEY)
-            if grid.kind is GridKind.DERIVED:
-                _write_entries(engine, grid, chosen, note)
-            _write_rows(engine, grid, chosen)
-            _compute(engine, grid)
-            written = replace(grid, stamp=stamp, changed=datetime.now(UTC), rows=grid.rows + new)
-            ledger.write_grid(engine, written)
-    finally:
-        store.close()
+    with writing(store_path) as engine:
+        grid = grid_to_enter(engine, name)
+        chosen = columns_given(grid, columns)
+        load(engine, grid, chosen, rows)
+        new = count_new(engine, grid)
+        if grid.kind is GridKind.DERIVED and new:
+            raise no_such_row(engine, grid)
+        stamp = ledger.next_stamp(engine)
+        cells = _log_cells(engine, stamp, grid, chosen, note)
+        if not (new or cells):  # what rests on the grid stays fresh
+            if note:
+                _log_note(engine, stamp, grid, note)
+            return Entered(grid, 0, 0)
+        note_rows(engine, stamp, grid, GIVEN, KEY)
+        if grid.kind is GridKind.DERIVED:
+            _write_entries(engine, grid, chosen, note)
+        _write_rows(engine, grid, chosen)
+        _compute(engine, grid)
+        written = replace(grid, stamp=stamp, changed=datetime.now(UTC), rows=grid.rows + new)
+        ledger.write_grid(engine, written)
     return Entered(written, new, cells)
 
 
@@ -155,41 +151,37 @@ def delete(
     note: str = "",
 ) -> Grid:
     """Remove the row of a key from an entered grid."""
-    store = Store.open(store_path, create=False)
-    try:
-        with store.writing() as engine:
-            grid = grid_to_enter(engine, name)
-            if grid.kind is GridKind.DERIVED:
-                raise MidspreadError(
-                    f"enter: the rows of {grid.name} come from its query; change that with "
-                    f"midspread keep {grid.name} --replace."
-                )
-            chosen = columns_given(grid, columns)
-            if {c.name for c in chosen} != set(grid.keys):
-                raise UsageError(
-                    f"enter: --delete takes the key and nothing else; write "
-                    f"{' '.join(f'{key}=…' for key in grid.keys)}."
-                )
-            load(engine, grid, chosen, [values])
-            if count_new(engine, grid):
-                raise no_such_row(engine, grid)
-            stamp = ledger.next_stamp(engine)
-            note_rows(engine, stamp, grid, GIVEN, KEY)
-            table = ledger.contents(grid.name)
-            engine.execute(
-                f"INSERT INTO store.ledger.changes SELECT $1, now(), $2, 'deleted',"
-                f" {key_text(grid.keys, '_m_row')}, '', to_json(_m_row)::VARCHAR, NULL, $3"
-                f" FROM {table} AS _m_row WHERE {key_text(grid.keys, '_m_row')}"
-                f" IN (SELECT {KEY} FROM {GIVEN})",
-                [stamp, grid.name, note],
+    with writing(store_path) as engine:
+        grid = grid_to_enter(engine, name)
+        if grid.kind is GridKind.DERIVED:
+            raise MidspreadError(
+                f"enter: the rows of {grid.name} come from its query; change that with "
+                f"midspread keep {grid.name} --replace."
             )
-            engine.execute(
-                f"DELETE FROM {table} WHERE {key_text(grid.keys)} IN (SELECT {KEY} FROM {GIVEN})"
+        chosen = columns_given(grid, columns)
+        if {c.name for c in chosen} != set(grid.keys):
+            raise UsageError(
+                f"enter: --delete takes the key and nothing else; write "
+                f"{' '.join(f'{key}=…' for key in grid.keys)}."
             )
-            written = replace(grid, stamp=stamp, changed=datetime.now(UTC), rows=grid.rows - 1)
-            ledger.write_grid(engine, written)
-    finally:
-        store.close()
+        load(engine, grid, chosen, [values])
+        if count_new(engine, grid):
+            raise no_such_row(engine, grid)
+        stamp = ledger.next_stamp(engine)
+        note_rows(engine, stamp, grid, GIVEN, KEY)
+        table = ledger.contents(grid.name)
+        engine.execute(
+            f"INSERT INTO store.ledger.changes SELECT $1, now(), $2, 'deleted',"
+            f" {key_text(grid.keys, '_m_row')}, '', to_json(_m_row)::VARCHAR, NULL, $3"
+            f" FROM {table} AS _m_row WHERE {key_text(grid.keys, '_m_row')}"
+            f" IN (SELECT {KEY} FROM {GIVEN})",
+            [stamp, grid.name, note],
+        )
+        engine.execute(
+            f"DELETE FROM {table} WHERE {key_text(grid.keys)} IN (SELECT {KEY} FROM {GIVEN})"
+        )
+        written = replace(grid, stamp=stamp, changed=datetime.now(UTC), rows=grid.rows - 1)
+        ledger.write_grid(engine, written)
     return written
 
 

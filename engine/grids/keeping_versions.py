@@ -6,7 +6,7 @@ from typing import Final
 import duckdb
 
 from midspread.engine.grids import ledger
-from midspread.engine.store.store import Store
+from midspread.engine.store.store import writing
 
 VERSIONS_SETTING: Final = "versions_kept"
 DEFAULT_VERSIONS: Final = 10
@@ -31,19 +31,15 @@ def drop_versions(engine: duckdb.DuckDBPyConnection, name: str, last: int) -> in
 
 def keep_versions(store_path: Path, count: int) -> int:
     """Set how many earlier versions of each grid a store keeps; how many it lets go of for that."""
-    store = Store.open(store_path, create=False)
-    try:
-        with store.writing() as engine:
-            engine.execute("DELETE FROM store.ledger.about WHERE name = $1", [VERSIONS_SETTING])
-            engine.execute(
-                "INSERT INTO store.ledger.about VALUES ($1, $2)", [VERSIONS_SETTING, str(count)]
-            )
-            return sum(
-                drop_versions(engine, grid.name, grid.version - 1 - count)
-                for grid in ledger.grids(engine).values()
-            )
-    finally:
-        store.close()
+    with writing(store_path) as engine:
+        engine.execute("DELETE FROM store.ledger.about WHERE name = $1", [VERSIONS_SETTING])
+        engine.execute(
+            "INSERT INTO store.ledger.about VALUES ($1, $2)", [VERSIONS_SETTING, str(count)]
+        )
+        return sum(
+            drop_versions(engine, grid.name, grid.version - 1 - count)
+            for grid in ledger.grids(engine).values()
+        )
 
 
 def versions_kept(engine: duckdb.DuckDBPyConnection) -> int:

@@ -81,7 +81,7 @@ class Record:
     definitions: dict[str, str] = field(default_factory=dict)
     grids: dict[str, int] = field(default_factory=dict)
     functions: dict[str, int] = field(default_factory=dict)
-    seeds: dict[str, float] = field(default_factory=dict)
+    seeds: dict[str, int] = field(default_factory=dict)
     duckdb: str = ""
     midspread: str = ""
     computed: str = ""

@@ -20,7 +20,7 @@ from midspread.engine.grids.keeping import keep
 from midspread.engine.grids.ledger import found_grid
 from midspread.engine.grids.model import ColumnKind, Grid, GridKind
 from midspread.engine.store.quoting import quoted
-from midspread.engine.store.store import Store
+from midspread.engine.store.store import Store, reading
 
 if TYPE_CHECKING:
     from midspread.engine.session import Session
@@ -54,14 +54,10 @@ class Verdict:
 
 def record_of(store_path: Path, name: str) -> dict[str, Any]:
     """Everything needed to compute a grid again, as a tree that JSON can hold."""
-    store = Store.open(store_path, create=False)
-    try:
-        with store.reading() as engine:
-            grid = found_grid(engine, "show", name)
-            grids = ledger.grids(engine)
-            steps = [_step(engine, grids[folded]) for folded in in_order(grids, [grid.folded])]
-    finally:
-        store.close()
+    with reading(store_path) as engine:
+        grid = found_grid(engine, "show", name)
+        grids = ledger.grids(engine)
+        steps = [_step(engine, grids[folded]) for folded in in_order(grids, [grid.folded])]
     return {"record": "midspread grid", "format": _FORMAT, "grid": grid.name, "steps": steps}
 
 

@@ -16,7 +16,7 @@ from midspread.engine.grids import ledger
 from midspread.engine.grids.restoring import write_steps
 from midspread.engine.inputs.scanning import mentions_of
 from midspread.engine.store.quoting import literal
-from midspread.engine.store.store import Store
+from midspread.engine.store.store import Store, reading, writing
 
 _RESERVED: Final = frozenset(
     {"main", "memory", "temp", "system", "store", "pg_catalog", "information_schema", "scratch"}
@@ -95,12 +95,8 @@ def remembered(store_path: Path) -> dict[str, Source]:
     """Every source that a store remembers, by folded name; none when there is no store."""
     if not store_path.exists():
         return {}
-    store = Store.open(store_path, create=False)
-    try:
-        with store.reading() as engine:
-            return sources(engine)
-    finally:
-        store.close()
+    with reading(store_path) as engine:
+        return sources(engine)
 
 
 def attach(store_path: Path, name: str, given: str) -> Attached:
@@ -142,13 +138,9 @@ def attach(store_path: Path, name: str, given: str) -> Attached:
 
 def remove(store_path: Path, name: str) -> Source:
     """Forget a source; the database itself is left as it is."""
-    store = Store.open(store_path, create=False)
-    try:
-        with store.writing() as engine:
-            before = found_source("attach", sources(engine), name)
-            _remember(engine, before.name, before, None)
-    finally:
-        store.close()
+    with writing(store_path) as engine:
+        before = found_source("attach", sources(engine), name)
+        _remember(engine, before.name, before, None)
     return before
 
 

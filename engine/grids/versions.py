@@ -11,7 +11,7 @@ from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
 from midspread.engine.grids.model import Grid, GridKind
 from midspread.engine.store.quoting import literal, quoted
-from midspread.engine.store.store import Store
+from midspread.engine.store.store import Store, reading
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -94,18 +94,14 @@ def earlier_version(store_path: Path, grid: Grid, version: int, most_rows: int) 
     MidspreadError
         When that version is not kept.
     """
-    store = Store.open(store_path, create=False)
-    try:
-        with store.reading() as engine:
-            table = version_table(engine, "show", grid, version)
-            (made, cause, rows, sql) = engine.execute(
-                "SELECT epoch_us(made), cause, row_count, sql FROM store.ledger.versions"
-                " WHERE lower(grid) = lower($1) AND version = $2",
-                [grid.name, version],
-            ).fetchall()[0]
-            first = first_rows(engine, grid, table, most_rows)
-    finally:
-        store.close()
+    with reading(store_path) as engine:
+        table = version_table(engine, "show", grid, version)
+        (made, cause, rows, sql) = engine.execute(
+            "SELECT epoch_us(made), cause, row_count, sql FROM store.ledger.versions"
+            " WHERE lower(grid) = lower($1) AND version = $2",
+            [grid.name, version],
+        ).fetchall()[0]
+        first = first_rows(engine, grid, table, most_rows)
     return EarlierVersion(ledger.moment(made), cause, rows, sql, first)
 
 

@@ -363,6 +363,22 @@ class Store:
         return as_store_error(self.path, error)
 
 
+@contextlib.contextmanager
+def reading(path: Path, memory: str | None = None) -> Iterator[duckdb.DuckDBPyConnection]:
+    """Read the store of a path for the length of a block; as `Store.open` and `Store.reading`."""
+    opened = contextlib.closing(Store.open(path, create=False, memory=memory))
+    with opened as store, store.reading() as engine:
+        yield engine
+
+
+@contextlib.contextmanager
+def writing(path: Path, memory: str | None = None) -> Iterator[duckdb.DuckDBPyConnection]:
+    """Write to the store of a path, in one transaction; as `Store.open` and `Store.writing`."""
+    opened = contextlib.closing(Store.open(path, create=False, memory=memory))
+    with opened as store, store.writing() as engine:
+        yield engine
+
+
 def remove_database(path: Path) -> None:
     """Remove a database of ours with what may stand beside it."""
     for name in (path.name, path.name + ".wal"):

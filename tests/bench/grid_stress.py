@@ -47,7 +47,8 @@ def prepared(folder: Path) -> None:
     run("enter", "limits", "--columns", "k INTEGER, v INTEGER", "--key", "k")
     run("keep", "total", "SELECT count(*) AS n, sum(v)::BIGINT AS v FROM limits")
     run("attach", "wh=warehouse.duckdb")
-    run("push", "dwell", "wh.main.dwell")
+    run("keep", "copied", "SELECT route, n FROM dwell", "--key", "route")
+    run("push", "copied", "wh.main.dwell")
 
 
 def kills(count: int) -> None:
@@ -58,6 +59,11 @@ def kills(count: int) -> None:
         confirmed: set[int] = set()
         months = 1
         killed = 0
+        lasts: dict[str, float] = {}  # so that the kills fall into the work, however slow it is
+        for kind, arguments in _commands(count).items():
+            began = time.perf_counter()
+            run(*arguments)
+            lasts[kind] = time.perf_counter() - began
         for attempt in range(count):
             kind = chance.choice(("enter", "refresh", "keep", "column", "push"))
             if kind == "refresh":
@@ -66,20 +72,12 @@ def kills(count: int) -> None:
                     f"COPY (SELECT i % 50 AS route, i / 8.0 AS dwell_s FROM range({1000 * months})"
                     f" AS rows(i)) TO 'month_{months}.parquet' (FORMAT parquet)"
                 )
-            arguments = {
-                "enter": ("enter", "limits", f"k={attempt}", f"v={attempt}"),
-                "refresh": ("refresh",),
-                "keep": (
-                    *("keep", "dwell", "--replace"),
-                    f"SELECT route, count(*) + {attempt} AS n FROM '*.parquet' GROUP BY route",
-                ),
-                "column": ("column", "dwell", f"c{attempt} AS (n + {attempt})"),
-                "push": ("push", "dwell", "wh.main.dwell", "--mode", "replace", "--stale-ok"),
-            }[kind]
             process = subprocess.Popen(
-                [*COMMAND, *arguments], stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL
+                [*COMMAND, *_commands(attempt)[kind]],
+                stdout=subprocess.DEVNULL,
+                stderr=subprocess.DEVNULL,
             )
-            time.sleep(chance.uniform(0.05, 1.2))
+            time.sleep(chance.uniform(0.3, 1.2) * lasts[kind])
             if process.poll() is None:
                 process.send_signal(signal.SIGKILL)
                 killed += 1
@@ -93,6 +91,20 @@ def kills(count: int) -> None:
             f"{count} commands, {killed} killed: every store opened, all {len(confirmed)} confirmed"
             f" values are there ({len(entered)} values in all), and each grid is whole"
         )
+
+
+def _commands(number: int) -> dict[str, tuple[str, ...]]:
+    """The commands that are killed, each telling by a number when it was run."""
+    return {
+        "enter": ("enter", "limits", f"k={number}", f"v={number}"),
+        "refresh": ("refresh",),
+        "keep": (
+            *("keep", "dwell", "--replace"),
+            f"SELECT route, count(*) + {number} AS n FROM '*.parquet' GROUP BY route",
+        ),
+        "column": ("column", "dwell", f"c{number} AS (n + {number})"),
+        "push": ("push", "copied", "wh.main.dwell", "--mode", "replace", "--stale-ok"),
+    }
 
 
 def _look(attempt: int) -> None:

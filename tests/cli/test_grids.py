@@ -145,6 +145,8 @@ def test_a_failed_grid_says_why_in_one_clause(grids: Path, run: Run) -> None:
     reason = "there is no file visits.parquet; check the path"
     assert failed.stdout == f"by_route: failed, its last good contents stay: {reason}\n"
     assert f"failed: {reason}\n" in run("show").stdout
+    run("keep", "later", "SELECT * FROM 'visits.parquet'", "--later")
+    assert f"later: failed: {reason}\n" in run("refresh").stdout
 
 
 def test_semicolons_between_the_values_of_a_file(grids: Path, run: Run) -> None:

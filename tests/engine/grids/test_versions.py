@@ -95,6 +95,32 @@ def test_a_record_is_computed_again_to_the_last_digit(
     assert ("by_route", False) in again()
 
 
+def test_a_record_names_functions_by_whole_words_and_their_seeds(kept: Keep, store: Path) -> None:
+    kept(
+        "folds",
+        "SELECT route, fold(route, 5) AS held_out, n AS folding FROM (SELECT 'R1' AS"
+        " route, 1 AS n)",
+    )
+    (step,) = record_of(store, "folds")["steps"]
+    assert (step["functions"], step["seeds"]) == ({"fold": 1}, {"fold": 0})
+    kept("words", "SELECT 1 AS trimmed_mean_of_all")
+    (step,) = record_of(store, "words")["steps"]
+    assert step["functions"] == {}
+
+
+def test_a_long_tree_names_each_branch_once(kept: Keep, store: Path) -> None:
+    kept("base", "SELECT 1 AS v")
+    for place in range(3):
+        below = f"pair_{place - 1}" if place else "base"
+        kept(f"left_{place}", f"SELECT v FROM {below}")
+        kept(f"pair_{place}", f"SELECT a.v FROM left_{place} AS a, {below} AS b")
+    with Session(use_store=False) as session:
+        grids, _ = look(session, store)
+    lines = list(tree_below(grids, "pair_2"))
+    assert len(lines) == 9  # and not 2 to the power of the depth
+    assert (0, "pair_1 (derived)") in lines and (1, "pair_1 (derived, as above)") in lines
+
+
 def test_what_rests_on_what(kept: Keep, store: Path) -> None:
     kept("by_route", BY_ROUTE)
     kept("most", "SELECT max(total) AS most FROM by_route")
