@@ -30,8 +30,8 @@ if TYPE_CHECKING:
 _LARGE: Final = 1 << 26
 """A group with so many draws of single values is shared out to the threads."""
 _PIECE: Final = 1 << 25
-_PIECES: Final = 32
-"""Shared out in no more pieces than this: each makes the values ready once."""
+_PIECES: Final = 4
+"""No more pieces for each thread than this: every piece makes the values ready anew."""
 _PORTION_VALUES: Final = 1 << 20
 _PORTION_DRAWS: Final = 1 << 18
 _ERROR_OF: Final = "trimmed_mean_se"
@@ -168,7 +168,7 @@ def draw_all(
         samples = samples_of(groups, chosen, statistic)
         drawn = _prepared(samples, resamples, with_errors)
         keys = keys_of(samples, seeds[chosen])
-        at_once = max(_PIECE // int(samples.lengths[0]), -(-resamples // _PIECES))
+        at_once = max(_PIECE // int(samples.lengths[0]), -(-resamples // (_PIECES * work.threads)))
         shares = (
             functools.partial(
                 _draw, statistic, drawn, keys, first, min(first + at_once, resamples), steps, work
