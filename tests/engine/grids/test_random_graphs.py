@@ -4,6 +4,7 @@ import contextlib
 import tempfile
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import cast
 
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
@@ -88,7 +89,11 @@ def query_of(model: Model, place: int) -> str:
 def test_refresh_computes_exactly_what_is_stale(
     graph: Graph, changes: list[tuple[str, int, int]]
 ) -> None:
-    with tempfile.TemporaryDirectory() as folder, contextlib.chdir(folder):
+    with (
+        tempfile.TemporaryDirectory() as folder,
+        contextlib.chdir(folder),
+        Session(threads=1) as session,  # one for all: to make it takes longer than the rest
+    ):
         store = Path(folder) / "midspread.duckdb"
         model = Model(graph)
         for number in range(ENTERED):
@@ -96,8 +101,7 @@ def test_refresh_computes_exactly_what_is_stale(
             enter(store, f"g{number}", ["k", "v"], [["1", "0"]])
             add_column(store, f"g{number}", "w AS (2 * v)")
         for place in range(len(graph)):
-            with Session(threads=1) as session:
-                keep(session, store, f"g{ENTERED + place}", query_of(model, place), key=["k"])
+            keep(session, store, f"g{ENTERED + place}", query_of(model, place), key=["k"])
             add_column(store, f"g{ENTERED + place}", "w AS (2 * v)")
             model.values[ENTERED + place] = model.computed(place)
         for kind, which, value in changes:
@@ -110,28 +114,21 @@ def test_refresh_computes_exactly_what_is_stale(
             else:
                 place = which % len(graph)
                 model.graph[place] = (model.graph[place][0], value)
-                with Session(threads=1) as session:
-                    keep(
-                        session,
-                        store,
-                        f"g{ENTERED + place}",
-                        query_of(model, place),
-                        key=["k"],
-                        replacing=True,
-                    )
+                name, query = f"g{ENTERED + place}", query_of(model, place)
+                keep(session, store, name, query, key=["k"], replacing=True)
                 new = model.computed(place)
                 model.stale.discard(ENTERED + place)
                 if model.values[ENTERED + place] != new:
                     model.values[ENTERED + place] = new
                     model.stale |= model.users(ENTERED + place)
-        made = list(refresh(lambda: Session(threads=1), store))
+        again = cast("Session", contextlib.nullcontext(session))
+        made = list(refresh(lambda: again, store))
         assert all(not one.failure for one in made)
         assert {int(one.grid.name[1:]) for one in made} == model.refreshed()
-        with Session(threads=1) as session:
-            for number in range(ENTERED + len(graph)):
-                found = session.query(f"SELECT v, w FROM g{number}").rows()
-                assert found == [(model.value(number), 2 * model.value(number))]
-            states = look(session, store)[1]
+        for number in range(ENTERED + len(graph)):
+            found = session.query(f"SELECT v, w FROM g{number}").rows()
+            assert found == [(model.value(number), 2 * model.value(number))]
+        states = look(session, store)[1]
         assert {str(one.state) for one in states.values()} == {"fresh"}
         # Rebuilt from nothing, every derived grid holds the same.
         for place in range(len(graph)):
