@@ -3,6 +3,7 @@
 import contextlib
 import functools
 import hashlib
+import inspect
 import os
 import sys
 import tempfile
@@ -117,8 +118,17 @@ def _bound_dispatcher(function: Any, replacements: dict[str, Callable[..., Any]]
 def _callee(function: Callable[..., Any]) -> Any:
     """A dispatcher for compiled code alone: no way in from Python, so a fifth less to compile."""
     import numba
+    from numba.core.types import unliteral
 
-    return numba.njit(**_CALLEE_OPTIONS)(_with_compiled_callees(function, {}))
+    made = numba.njit(**_CALLEE_OPTIONS)(_with_compiled_callees(function, {}))
+    if "kind" not in inspect.signature(function).parameters:
+        # numba compiles once more for each constant in a call; only a kind is worth that.
+        find = made.get_call_template
+        made.get_call_template = lambda given, named: find(
+            tuple(unliteral(one) for one in given),
+            {name: unliteral(one) for name, one in named.items()},
+        )
+    return made
 
 
 @functools.cache

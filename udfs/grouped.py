@@ -105,6 +105,11 @@ class Task:
     smallest: int
     column: int
 
+    def __post_init__(self) -> None:
+        # An array that may not be written to would have the loop compiled once more.
+        writable = np.require(self.parameters, requirements=("C", "W"))
+        object.__setattr__(self, "parameters", writable)
+
 
 def run(
     groups: Groups,

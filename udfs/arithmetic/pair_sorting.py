@@ -4,6 +4,7 @@ from typing import Final
 
 import numpy as np
 
+from midspread.udfs.arithmetic.copying import copy_into
 from midspread.udfs.declaring import Values, compiled
 
 _RUN: Final = 16
@@ -35,8 +36,8 @@ def sort_with(keys: Values, others: Values) -> int:
         from_others, to_others = to_others, from_others
         width *= 2
     if from_keys is not keys:
-        keys[:] = from_keys
-        others[:] = from_others
+        copy_into(keys, from_keys)
+        copy_into(others, from_others)
     return inversions
 
 

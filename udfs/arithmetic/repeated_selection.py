@@ -13,6 +13,7 @@ from typing import Final
 
 import numpy as np
 
+from midspread.udfs.arithmetic.copying import copy_into
 from midspread.udfs.arithmetic.order_statistics import midpoint
 from midspread.udfs.arithmetic.pair_sorting import end_of_tie
 from midspread.udfs.arithmetic.quickselect import GOLDEN, put_in_place
@@ -120,33 +121,33 @@ def _search(
         if low < first < high:
             half = half_step(first, -math.inf) if tie else 0.0
             strictly = tie and half == 0.0
-            counts[:] = low_counts
+            copy_into(counts, low_counts)
             order_at(y, x, first, half, strictly, low_order, order, counts, control)
             up_to = _up_to(y, x, counts, others, rank, last, first, tie, room, control)
             if up_to < rank:
                 low = np.nextafter(first, -math.inf) if tie else first
-                low_order[:] = order
-                low_counts[:] = counts
+                copy_into(low_order, order)
+                copy_into(low_counts, counts)
                 from_below = True
             elif up_to >= last:
                 high = first
-                high_counts[:] = counts
+                copy_into(high_counts, counts)
             else:
                 return 0.0, 0.0, False
         if low < second < high:
             half = half_step(second, math.inf) if tie else 0.0
-            counts[:] = low_counts
+            copy_into(counts, low_counts)
             order_at(y, x, second, half, False, low_order, order, counts, control)
             up_to = _up_to(y, x, counts, others, rank, last, second, False, room, control)
             if up_to < rank:
                 low = second
-                low_order[:] = order
-                low_counts[:] = counts
+                copy_into(low_order, order)
+                copy_into(low_counts, counts)
             elif up_to >= last:
                 if tie and from_below:
                     return second, second, True
                 high = np.nextafter(second, math.inf) if tie else second
-                high_counts[:] = counts
+                copy_into(high_counts, counts)
             else:
                 return 0.0, 0.0, False
         size = left.size

@@ -15,6 +15,7 @@ from typing import Final
 import numpy as np
 import numpy.typing as npt
 
+from midspread.udfs.arithmetic.copying import copy_into
 from midspread.udfs.declaring import Values, compiled
 
 Order = npt.NDArray[np.int32]
@@ -91,7 +92,7 @@ def order_at(
     highs, lows = np.empty(n), np.empty(n)
     for i in range(n):
         highs[i], lows[i] = _height(y[start[i]], x[start[i]], slope, more)
-    order[:] = start
+    copy_into(order, start)
     # The changes of each point travel with it, which is faster than to look its cell up each time.
     moves = np.zeros(n if counts.size > 0 else 0, np.int64)
     changes = 0
@@ -115,7 +116,7 @@ def order_at(
         moves, to_moves = to_moves, moves
         width *= 2
     if from_order is not order:
-        order[:] = from_order
+        copy_into(order, from_order)
     for i in range(moves.size):
         counts[order[i]] += moves[i]
     return changes

@@ -12,6 +12,7 @@ from typing import Final
 
 import numpy as np
 
+from midspread.udfs.arithmetic.copying import copy_into
 from midspread.udfs.arithmetic.order_statistics import midpoint
 from midspread.udfs.arithmetic.pair_sorting import tied_pairs
 from midspread.udfs.arithmetic.quickselect import GOLDEN, put_in_place
@@ -120,18 +121,18 @@ def _narrow(
         up_to = up_to_low + order_at(y, x, below, 0.0, False, low_order, order, no_counts, control)
         if up_to < rank:
             low, up_to_low = below, up_to
-            low_order[:] = order
+            copy_into(low_order, order)
         elif up_to >= last:
             high, up_to_high = below, up_to
-            high_order[:] = order
+            copy_into(high_order, order)
     if low < above < high and above != below:
         up_to = up_to_low + order_at(y, x, above, 0.0, False, low_order, order, no_counts, control)
         if up_to < rank:
             low, up_to_low = above, up_to
-            low_order[:] = order
+            copy_into(low_order, order)
         elif up_to >= last:
             high, up_to_high = above, up_to
-            high_order[:] = order
+            copy_into(high_order, order)
     return low, high, up_to_low, up_to_high
 
 
