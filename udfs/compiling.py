@@ -118,12 +118,11 @@ def _bound_dispatcher(function: Any, replacements: dict[str, Callable[..., Any]]
 def _callee(function: Callable[..., Any]) -> Any:
     """A dispatcher for compiled code alone: no way in from Python, so a fifth less to compile."""
     import numba
-    from numba.core.types import unliteral
 
     made = numba.njit(**_CALLEE_OPTIONS)(_with_compiled_callees(function, {}))
     if "kind" not in inspect.signature(function).parameters:
         # numba compiles once more for each constant in a call; only a kind is worth that.
-        find = made.get_call_template
+        find, unliteral = made.get_call_template, numba.types.unliteral
         made.get_call_template = lambda given, named: find(
             tuple(unliteral(one) for one in given),
             {name: unliteral(one) for name, one in named.items()},

@@ -13,6 +13,7 @@ from typing import Final
 
 import numpy as np
 
+from midspread.udfs.arithmetic.copying import copy_into
 from midspread.udfs.arithmetic.pair_tables import (
     DIFFERENCES,
     RATIOS,
@@ -267,21 +268,14 @@ def _narrow(
 ) -> tuple[int, int]:
     """Move the staircases around what is left; return how much that is and how much lies before."""
     if last <= up_to_low:
-        _copy(places[2], places[1])
+        copy_into(places[1], places[2])
         return up_to_low - before, before
     if k > up_to_high:
-        _copy(places[3], places[0])
+        copy_into(places[0], places[3])
         return left + before - up_to_high, up_to_high
-    _copy(places[2], places[0])
-    _copy(places[3], places[1])
+    copy_into(places[0], places[2])
+    copy_into(places[1], places[3])
     return up_to_high - up_to_low, up_to_low
-
-
-@compiled
-def _copy(source: Places, target: Places) -> None:
-    """Copy one staircase; numba takes a second to compile an assignment between slices."""
-    for i in range(source.size):
-        target[i] = source[i]
 
 
 @compiled
