@@ -122,7 +122,8 @@ def _callee(function: Callable[..., Any]) -> Any:
     made = numba.njit(**_CALLEE_OPTIONS)(_with_compiled_callees(function, {}))
     if "kind" not in inspect.signature(function).parameters:
         # numba compiles once more for each constant in a call; only a kind is worth that.
-        find, unliteral = made.get_call_template, numba.types.unliteral
+        find = made.get_call_template
+        unliteral: Any = numba.types.unliteral
         made.get_call_template = lambda given, named: find(
             tuple(unliteral(one) for one in given),
             {name: unliteral(one) for name, one in named.items()},
