@@ -46,7 +46,8 @@ def report(error: BaseException, command: str) -> int:
 
 def _explained(error: BaseException, command: str) -> tuple[int, str]:
     if isinstance(error, KeyboardInterrupt | click.Abort):
-        return INTERRUPTED, "interrupted; nothing was changed."
+        start = f"{command}: " if command else ""
+        return INTERRUPTED, f"{start}interrupted; nothing was changed."
     if isinstance(error, click.ClickException):
         return WRONG_USAGE, _usage_sentence(error, command)
     if isinstance(error, MidspreadError):

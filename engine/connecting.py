@@ -1,8 +1,5 @@
 """One in-memory DuckDB connection with its limits, its scratch folder and its read-only sources."""
 
-import shutil
-import tempfile
-import weakref
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Final
@@ -11,6 +8,7 @@ import duckdb
 
 from midspread.engine.errors import MidspreadError, UsageError
 from midspread.engine.parsing import literal, quoted
+from midspread.engine.scratch import scratch_folder
 
 _RESERVED: Final = ("main", "memory", "pg_catalog", "information_schema", "system", "temp")
 
@@ -32,8 +30,7 @@ def connect(*, memory: str | None, threads: int | None, owner: object) -> duckdb
     UsageError
         When a limit is no limit.
     """
-    scratch = Path(tempfile.mkdtemp(prefix="midspread-"))
-    weakref.finalize(owner, shutil.rmtree, scratch, ignore_errors=True)
+    scratch, _ = scratch_folder(owner)
     config: dict[str, str | bool | int | float | list[str]] = {
         "autoinstall_known_extensions": False,
         "autoload_known_extensions": False,

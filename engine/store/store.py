@@ -4,15 +4,15 @@ import contextlib
 import os
 import secrets
 import shutil
-import tempfile
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import duckdb
 
 from midspread.engine.errors import StoreError, StoreTooNew, UsageError
 from midspread.engine.publishing import publish
+from midspread.engine.scratch import scratch_folder
 from midspread.engine.store.layout import ALIAS, FORMAT, PROGRAM, STORAGE_VERSION, creating
 from midspread.engine.store.locking import busy, lock_path, locked, not_writable, retry
 from midspread.engine.store.quoting import literal, quoted
@@ -55,7 +55,7 @@ class Store:
     def __init__(self, path: Path, memory: str | None = None) -> None:
         self.path = Path(os.path.realpath(path))
         self._memory = memory
-        self._scratch: tempfile.TemporaryDirectory[str] | None = None
+        self._remove_scratch: Callable[[], object] | None = None
         self._engine: duckdb.DuckDBPyConnection | None = None
         self._format = FORMAT
 
@@ -162,9 +162,9 @@ class Store:
         if self._engine is not None:
             self._engine.close()
             self._engine = None
-        if self._scratch is not None:
-            self._scratch.cleanup()
-            self._scratch = None
+        if self._remove_scratch is not None:
+            self._remove_scratch()
+            self._remove_scratch = None
 
     @contextlib.contextmanager
     def exclusively(self, wait_s: float = WAIT_FOR_OURS_S) -> Iterator[duckdb.DuckDBPyConnection]:
@@ -202,10 +202,8 @@ class Store:
 
     def _private_engine(self) -> duckdb.DuckDBPyConnection:
         if self._engine is None:
-            self._scratch = tempfile.TemporaryDirectory(
-                prefix="midspread-", ignore_cleanup_errors=True
-            )
-            config = {**_CONFIG, "temp_directory": self._scratch.name}
+            scratch, self._remove_scratch = scratch_folder(self)
+            config = {**_CONFIG, "temp_directory": str(scratch)}
             if self._memory is not None:
                 config["memory_limit"] = self._memory
             try:

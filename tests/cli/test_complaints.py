@@ -21,8 +21,8 @@ Run = Callable[..., Result]
         (UsageError("query: no SQL."), 2, "midspread query: no SQL."),
         (DemoError("The folder is taken."), 1, "midspread: The folder is taken."),
         (Interrupted("query: interrupted."), 130, "midspread query: interrupted."),
-        (KeyboardInterrupt(), 130, "midspread: interrupted; nothing was changed."),
-        (click.Abort(), 130, "midspread: interrupted; nothing was changed."),
+        (KeyboardInterrupt(), 130, "midspread query: interrupted; nothing was changed."),
+        (click.Abort(), 130, "midspread query: interrupted; nothing was changed."),
     ],
 )
 def test_each_kind_of_error(
