@@ -119,7 +119,7 @@ def comparable(value: Any) -> Any:
 
 
 @settings(
-    max_examples=120,
+    max_examples=80,
     deadline=None,
     derandomize=True,
     suppress_health_check=[HealthCheck.function_scoped_fixture],

@@ -109,7 +109,7 @@ NUMBERS = st.one_of(
 SIDES = st.lists(NUMBERS, min_size=1, max_size=25)
 
 
-@settings(max_examples=100, deadline=None)
+@settings(max_examples=50, deadline=None)
 @given(SIDES, SIDES)
 def test_swapped_levels_turn_every_sign(
     connection: duckdb.DuckDBPyConnection, one: list[float], other: list[float]

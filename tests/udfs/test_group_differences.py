@@ -43,7 +43,7 @@ def minus(number: float | None) -> float | None:
     return None if number is None else 0.0 - number
 
 
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(SIDES, SIDES, st.sampled_from([0.0, 0.1, 0.2, 0.4]))
 def test_swapped_levels_turn_every_sign(
     connection: duckdb.DuckDBPyConnection, one: list[float], other: list[float], share: float
@@ -67,7 +67,7 @@ def test_swapped_levels_turn_every_sign(
         assert turned["p_more"] == pytest.approx(1.0 - row["p_more"], abs=1e-15)
 
 
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(SIDES, SIDES)
 def test_ranks_and_shift_are_those_of_all_pairs(
     connection: duckdb.DuckDBPyConnection, one: list[float], other: list[float]

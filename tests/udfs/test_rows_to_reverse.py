@@ -61,7 +61,7 @@ def fewest(baseline: list[int], other: list[int], share: float) -> int | None:
     return best
 
 
-@settings(max_examples=200, deadline=None)
+@settings(max_examples=100, deadline=None)
 @given(TENTHS, TENTHS, SHARES)
 def test_as_brute_force(
     connection: duckdb.DuckDBPyConnection, baseline: list[int], other: list[int], share: float

@@ -74,7 +74,7 @@ def query_of(model: Model, place: int) -> str:
     return f"SELECT 1 AS k, ((sum(s) + {constant}) % {MODULUS})::INTEGER AS v FROM ({parts})"
 
 
-@settings(max_examples=8, deadline=None, suppress_health_check=[HealthCheck.too_slow])
+@settings(max_examples=5, deadline=None, suppress_health_check=[HealthCheck.too_slow])
 @given(
     graphs(),
     st.lists(
