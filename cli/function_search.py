@@ -12,9 +12,9 @@ if TYPE_CHECKING:
 _WORD: Final = re.compile(r"[a-z0-9]+")
 
 # What a hit in each place counts.
+_NAME, _SYNONYM, _FAMILY, _MEANING, _RESULT, _REST = 12.0, 8.0, 9.0, 4.0, 2.0, 1.0
 # A table of many figures is named after what it does, an estimator after what it is.
 _TABLE_NAME = 6.0
-_NAME, _SYNONYM, _FAMILY, _MEANING, _RESULT, _REST = 12.0, 8.0, 9.0, 4.0, 2.0, 1.0
 
 # Words an analyst may think of, and the words by which the catalogue speaks of the same.
 SYNONYMS: Final[Mapping[str, tuple[str, ...]]] = {

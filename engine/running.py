@@ -11,9 +11,11 @@ import duckdb
 
 from midspread.engine.answer import Progress
 from midspread.engine.grids.model import RESULT
+from midspread.engine.inputs.called import named_in
 from midspread.engine.parsing import NotParsed, literal
 from midspread.engine.statements import Kind, Statement
 from midspread.udfs import Function
+from midspread.udfs.catalogue import needed_by
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -140,10 +142,7 @@ class Runner:
 
         To register all of them takes a tenth of a second.
         """
-        lowered = None if text is None else text.lower()
-        wanted = {name for name in self._functions if lowered is None or name in lowered}
-        if any(self._functions[name].kind == "table" for name in wanted):
-            wanted = set(self._functions)
+        wanted = needed_by(self._functions if text is None else named_in(text, self._functions))
         if wanted <= self._equipped:
             return False
         from midspread.udfs import Control, register

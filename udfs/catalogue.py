@@ -3,7 +3,7 @@
 import functools
 import importlib
 import pkgutil
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from types import MappingProxyType
 
 from midspread.udfs.declaring import Function, declared
@@ -32,3 +32,12 @@ def functions() -> Mapping[str, Function]:
         for module in pkgutil.iter_modules(package.__path__):
             importlib.import_module(f"{package.__name__}.{module.name}")
     return MappingProxyType(declared())
+
+
+def needed_by(names: Collection[str]) -> frozenset[str]:
+    """The functions to register so that those of some names work.
+
+    Table functions are written in terms of others, so that one of them needs all.
+    """
+    known = functions()
+    return frozenset(known if any(known[name].kind == "table" for name in names) else names)

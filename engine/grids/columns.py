@@ -15,7 +15,7 @@ from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind
 from midspread.engine.grids.restoring import note_undo
 from midspread.engine.grids.tables import computed_in_order, contents_query, equip
 from midspread.engine.inputs.scanning import mentions_of
-from midspread.engine.nearest import nearest
+from midspread.engine.nearest import did_you_mean, nearest
 from midspread.engine.store.quoting import literal, quoted
 from midspread.engine.store.store import writing
 
@@ -74,7 +74,7 @@ def drop_column(store_path: Path, name: str, column_name: str, memory: str | Non
         column = grid.column(column_name)
         if column is None:
             meant = nearest(column_name, [one.name for one in grid.columns])
-            hint = f"did you mean {meant}?" if meant else f"midspread show {grid.name} lists them."
+            hint = did_you_mean(meant, f"midspread show {grid.name} lists them.")
             raise MidspreadError(f"column: {grid.name} has no column {column_name}; {hint}")
         if column.kind is ColumnKind.DERIVED or column.name in grid.keys:
             what = "comes from its query" if column.kind is ColumnKind.DERIVED else "is its key"

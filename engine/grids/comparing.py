@@ -10,8 +10,9 @@ import duckdb
 from midspread.engine.errors import MidspreadError, UsageError
 from midspread.engine.grids.ledger import found_grid
 from midspread.engine.grids.model import Grid, GridKind
+from midspread.engine.grids.tables import versions_joined
 from midspread.engine.grids.versions import version_table
-from midspread.engine.nearest import nearest
+from midspread.engine.nearest import did_you_mean, nearest
 from midspread.engine.store.quoting import literal, quoted
 from midspread.engine.store.store import reading
 
@@ -107,8 +108,7 @@ def _of_grid(grid: Grid, names: Sequence[str]) -> frozenset[str]:
     for name in names:
         if grid.column(name) is None:
             there = [column.name for column in grid.columns]
-            meant = nearest(name, there)
-            hint = f"did you mean {meant}?" if meant else f"it has {', '.join(there)}."
+            hint = did_you_mean(nearest(name, there), f"it has {', '.join(there)}.")
             raise UsageError(f"changes: {grid.name} has no column {name}; {hint}")
     wanted = {name.casefold() for name in names}
     return frozenset(
@@ -125,7 +125,6 @@ def _changes_query(
     shared = {
         name: kind for name, kind in kinds.items() if name in before and name not in grid.keys
     }
-    on = " AND ".join(f"_o.{quoted(k)} IS NOT DISTINCT FROM _n.{quoted(k)}" for k in grid.keys)
     keys = ", ".join(f"coalesce(_n.{quoted(k)}, _o.{quoted(k)}) AS {quoted(k)}" for k in grid.keys)
     listed = ", ".join(quoted(key) for key in grid.keys)
     cells = [_cell(place, name, shared) for place, name in enumerate(shared) if name in only] or [
@@ -138,8 +137,7 @@ def _changes_query(
         f" (SELECT {keys}, CASE WHEN _o._m_there IS NULL THEN 'added' WHEN _n._m_there IS NULL"
         f" THEN 'gone' ELSE 'changed' END AS _m_what,"
         f" CAST([{', '.join(cells)}] AS {_CELL}[]) AS _m_cells"
-        f" FROM (SELECT *, true AS _m_there FROM {old}) AS _o"
-        f" FULL JOIN (SELECT *, true AS _m_there FROM {new}) AS _n ON {on}))"
+        f" FROM {versions_joined(old, new, grid.keys)}))"
         f" WHERE _m_what <> 'changed' OR _m_cell IS NOT NULL"
         f" ORDER BY {listed}, _m_what, _m_cell.place"
     )

@@ -1,6 +1,5 @@
 """What computing a grid's query gives, before it is written to the store."""
 
-import re
 import time
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
@@ -8,11 +7,11 @@ from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import version
 from pathlib import Path
-from typing import Final
 
 import duckdb
 
 from midspread.engine.grids.model import Record
+from midspread.engine.inputs.called import named_in
 from midspread.engine.inputs.fingerprints import (
     InputsState,
     InputWatch,
@@ -48,9 +47,6 @@ class Computed:
     record: Record
     reads: tuple[str, ...]
     grouped_by: tuple[str, ...]
-
-
-_WORD: Final = re.compile(r"\w+")
 
 
 class Inquiry:
@@ -107,9 +103,8 @@ class Inquiry:
 
     def record(self) -> Record:
         """What the rows rest on; call it when the query has run."""
-        text = ";".join([*self._script, *self._before.definitions.values()]).lower()
-        words = set(_WORD.findall(text))
-        called = {name: one for name, one in self._functions.items() if name in words}
+        text = ";".join([*self._script, *self._before.definitions.values()])
+        called = named_in(text, self._functions)
         return Record(
             files=files_of(self._before),
             definitions={

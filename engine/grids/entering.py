@@ -16,7 +16,7 @@ from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind, che
 from midspread.engine.grids.restoring import note_rows, note_undo
 from midspread.engine.grids.sources import check_free
 from midspread.engine.grids.tables import computing_steps, key_text
-from midspread.engine.nearest import nearest
+from midspread.engine.nearest import did_you_mean, nearest
 from midspread.engine.store.quoting import quoted
 from midspread.engine.store.store import Store, writing
 
@@ -191,9 +191,7 @@ def grid_to_enter(engine: duckdb.DuckDBPyConnection, name: str) -> Grid:
     grid = grids.get(name.casefold())
     if grid is None:
         meant = nearest(name, [one.name for one in grids.values()])
-        hint = (
-            f"did you mean {meant}?" if meant else f"make it with midspread enter {name} --columns."
-        )
+        hint = did_you_mean(meant, f"make it with midspread enter {name} --columns.")
         raise MidspreadError(f"enter: there is no grid {name}; {hint}")
     if not grid.of_kind(ColumnKind.ENTERED):
         raise MidspreadError(

@@ -9,7 +9,7 @@ from midspread.engine.errors import MidspreadError, UsageError
 from midspread.engine.grids import ledger
 from midspread.engine.grids.model import Column, ColumnKind, Grid
 from midspread.engine.grids.tables import key_text
-from midspread.engine.nearest import nearest
+from midspread.engine.nearest import did_you_mean, nearest
 from midspread.engine.store.quoting import quoted
 
 GIVEN: Final = "temp.main._m_given"
@@ -26,7 +26,7 @@ def columns_given(grid: Grid, names: Sequence[str]) -> list[Column]:
         column = grid.column(name)
         if column is None:
             meant = nearest(name, [c.name for c in grid.columns])
-            hint = f"did you mean {meant}?" if meant else f"it has {_listed(grid.columns)}."
+            hint = did_you_mean(meant, f"it has {_listed(grid.columns)}.")
             raise MidspreadError(f"enter: {grid.name} has no column {name}; {hint}")
         if column in chosen:
             raise UsageError(f"enter: {column.name} is given twice; give it once.")

@@ -13,7 +13,7 @@ import duckdb
 
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind, Record
-from midspread.engine.nearest import nearest
+from midspread.engine.nearest import did_you_mean, nearest
 from midspread.engine.store.answers import EPOCH
 from midspread.engine.store.quoting import quoted
 
@@ -53,7 +53,7 @@ def named(known: Mapping[str, Grid], command: str, name: str) -> Grid:
     grid = known.get(name.casefold())
     if grid is None:
         meant = nearest(name, [one.name for one in known.values()])
-        hint = f"did you mean {meant}?" if meant else "midspread show lists those there are."
+        hint = did_you_mean(meant, "midspread show lists those there are.")
         raise MidspreadError(f"{command}: there is no grid {name}; {hint}")
     return grid
 

@@ -12,7 +12,7 @@ from midspread.engine.grids.computing import Computed
 from midspread.engine.grids.keeping_versions import drop_versions, versions_kept
 from midspread.engine.grids.model import RESULT, Column, ColumnKind, Grid
 from midspread.engine.grids.restoring import note_undo
-from midspread.engine.grids.tables import contents_query, key_text
+from midspread.engine.grids.tables import contents_query, key_text, versions_joined
 from midspread.engine.store.quoting import literal, quoted
 
 _SCRATCH: Final = "_midspread_result"
@@ -145,13 +145,11 @@ def _differs(engine: duckdb.DuckDBPyConnection, grid: Grid, base: str) -> bool:
         return True
     # The same hashes in all likelihood mean the same rows, which is then made sure of.
     if grid.keys:
-        on = " AND ".join(f"_o.{quoted(k)} IS NOT DISTINCT FROM _n.{quoted(k)}" for k in grid.keys)
         rest = [quoted(column.name) for column in derived if column.name not in grid.keys]
         differing = " OR ".join(f"_o.{name} IS DISTINCT FROM _n.{name}" for name in rest)
         query = (
-            f"SELECT EXISTS (FROM (SELECT *, true AS _m_there FROM ({old})) AS _o FULL JOIN"
-            f" (SELECT *, true AS _m_there FROM ({new})) AS _n ON {on} WHERE _o._m_there IS NULL"
-            f" OR _n._m_there IS NULL{' OR ' if rest else ''}{differing})"
+            f"SELECT EXISTS (FROM {versions_joined(f'({old})', f'({new})', grid.keys)}"
+            f" WHERE _o._m_there IS NULL OR _n._m_there IS NULL{' OR ' if rest else ''}{differing})"
         )
     else:
         query = f"SELECT EXISTS (({new}) EXCEPT ALL ({old})) OR EXISTS (({old}) EXCEPT ALL ({new}))"

@@ -8,6 +8,7 @@ import duckdb
 from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
 from midspread.engine.grids.model import Column, ColumnKind, Grid, GridKind
+from midspread.engine.inputs.called import named_in
 from midspread.engine.inputs.scanning import mentions_of
 from midspread.engine.store.quoting import literal, quoted
 
@@ -17,6 +18,18 @@ def key_text(keys: Sequence[str], source: str = "") -> str:
     before = f"{quoted(source)}." if source else ""
     listed = ", ".join(f"CAST({before}{quoted(key)} AS VARCHAR)" for key in keys)
     return f"CAST(to_json([{listed}]) AS VARCHAR)"
+
+
+def versions_joined(old: str, new: str, keys: Sequence[str]) -> str:
+    """Two queries or tables of a grid's rows as _o and _n, joined by key.
+
+    _m_there is NULL on the side that lacks the row.
+    """
+    on = " AND ".join(f"_o.{quoted(k)} IS NOT DISTINCT FROM _n.{quoted(k)}" for k in keys)
+    return (
+        f"(SELECT *, true AS _m_there FROM {old}) AS _o"
+        f" FULL JOIN (SELECT *, true AS _m_there FROM {new}) AS _n ON {on}"
+    )
 
 
 def contents_query(grid: Grid, base: str) -> str:
@@ -100,8 +113,8 @@ def equip(engine: duckdb.DuckDBPyConnection, grid: Grid) -> None:
     """Register our functions where a computed column of a grid calls one."""
     from midspread.udfs import functions
 
-    text = " ".join(column.expression for column in grid.columns).lower()
-    if any(name in text for name in functions()):
+    called = named_in(" ".join(column.expression for column in grid.columns), functions())
+    if called:
         from midspread.udfs import register
 
-        register(engine)
+        register(engine, names=called)

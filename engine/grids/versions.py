@@ -11,7 +11,7 @@ from midspread.engine.errors import MidspreadError
 from midspread.engine.grids import ledger
 from midspread.engine.grids.model import Grid, GridKind
 from midspread.engine.store.quoting import literal, quoted
-from midspread.engine.store.store import Store, reading
+from midspread.engine.store.store import reading
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -19,14 +19,13 @@ if TYPE_CHECKING:
 
 def history(store_path: Path, name: str) -> "pa.Table":
     """What was done to a grid, the latest first: when, what, which cell, and why."""
-    store = Store.open(store_path, create=False)
-    with store.reading() as engine:
+    with reading(store_path) as engine:
         known = engine.execute(
             "SELECT 1 FROM store.ledger.changes WHERE lower(grid) = lower($1) LIMIT 1", [name]
         ).fetchall()
         if not known:
             ledger.found_grid(engine, "history", name)
-        table = engine.sql(
+        table: pa.Table = engine.sql(
             "SELECT c.moment::TIMESTAMP(0) AS moment, c.action, v.version, v.row_count AS rows,"
             " nullif(c.key, '') AS key, nullif(c.name, '') AS column, c.old,"
             " CASE WHEN c.action IN ('keep', 'refresh') THEN NULL ELSE c.new END AS new,"
@@ -40,8 +39,7 @@ def history(store_path: Path, name: str) -> "pa.Table":
             " d.stamp = c.stamp AND d.action IN ('pushed', 'push failed')))"
             " ORDER BY c.stamp DESC, c.key, c.name"
         ).to_arrow_table()
-    store.close()
-    return table
+        return table
 
 
 def version_table(engine: duckdb.DuckDBPyConnection, command: str, grid: Grid, version: int) -> str:

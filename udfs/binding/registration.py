@@ -19,7 +19,7 @@ from midspread.udfs.binding.computing import (
 )
 from midspread.udfs.binding.macros import aggregate_macro, row_macro, shared_macros, table_macro
 from midspread.udfs.binding.profiles import COUNTS_TYPE, PROFILE_MACROS, ProfileFunctions
-from midspread.udfs.catalogue import functions
+from midspread.udfs.catalogue import functions, needed_by
 from midspread.udfs.declaring import Function, helpers
 from midspread.udfs.grouped import Control
 from midspread.udfs.outlying import figures as _outlying  # noqa: F401 - declares helpers
@@ -60,9 +60,8 @@ def register(
         row = connection.execute("SELECT current_setting('threads')").fetchone()
         threads = int(row[0]) if row else 1
     known = functions()  # also imports the modules that declare helpers
-    if names is None or any(known[name].kind == "table" for name in names):
-        names = known
-    listed = [function for name, function in known.items() if name in names]
+    wanted = known if names is None else needed_by(names)
+    listed = [function for name, function in known.items() if name in wanted]
     binding = _Binding(connection, Work(control or Control(), threads))
     binding.register_shared()
     for register_one, kind in (
