@@ -22,6 +22,13 @@ def cut_from_each_tail(n: int, share: float) -> int:
     return int(share * n)
 
 
+@compiled
+def cut_of(n: int, share: float) -> int:
+    """How many values go from each tail; of a median all but the one or two in the middle."""
+    g = cut_from_each_tail(n, share)
+    return (n - 1) // 2 if share == 0.5 or 2 * g >= n else g
+
+
 @aggregate(
     family="location",
     parameters=(SHARE,),

@@ -6,12 +6,12 @@ its j-th draw to ``draws[r, j]``. Resample j has a stream of its own, so it come
 whichever thread or portion draws it. steps is what counts as all of a group's work.
 """
 
-from typing import Any, Final
+from typing import Final
 
 import numpy as np
 import numpy.typing as npt
 
-from midspread.udfs.declaring import Values
+from midspread.udfs.declaring import Values, compiled
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.resampling.randomness import stream
 from midspread.udfs.resampling.resamples import (
@@ -21,6 +21,7 @@ from midspread.udfs.resampling.resamples import (
     resample_into,
     resample_rows,
 )
+from midspread.udfs.resampling.statistics import statistic
 from midspread.udfs.resampling.variates import uniform_rank
 
 Keys = npt.NDArray[np.uint64]
@@ -33,9 +34,13 @@ PAIRS_SIGNATURE: Final = f"void(float64[::1], {SIGNATURE.removeprefix('void(')}"
 RANKS_SIGNATURE: Final = SIGNATURE.removesuffix(")") + ", int64[::1], int64[::1])"
 
 
-def statistic(*_arguments: Any) -> float:
-    """Stands for a statistic of sorted values, or of sorted pairs, with its parameters."""
-    raise TypeError("replaced when a loop is compiled")
+@compiled
+def count_draw(control: Indices, finished: int, steps: int) -> int:
+    """Count what is finished as done, a whole step each; what is left of it."""
+    if finished >= steps:
+        control[DONE] += finished // steps
+        finished %= steps
+    return finished
 
 
 def of_resamples(
@@ -66,10 +71,7 @@ def of_resamples(
                 return
             resample_into(stream(keys[r], j), counts, words, x, room)
             draws[r, j] = statistic(y, parameters)
-            finished += n
-            if finished >= steps:
-                control[DONE] += finished // steps
-                finished %= steps
+            finished = count_draw(control, finished + n, steps)
 
 
 def of_resampled_pairs(
@@ -104,10 +106,7 @@ def of_resampled_pairs(
                 y[i] = values[starts[r] + drawn[i]]
                 x[i] = others[starts[r] + drawn[i]]
             draws[r, j] = statistic(y, x, parameters)
-            finished += n
-            if finished >= steps:
-                control[DONE] += finished // steps
-                finished %= steps
+            finished = count_draw(control, finished + n, steps)
 
 
 def of_drawn_ranks(
@@ -150,7 +149,4 @@ def of_drawn_ranks(
                 before = read[i]
                 y[before - 1] = x[min(int(at * n), n - 1)]
             draws[r, j] = statistic(y[:n], parameters)
-            finished += n
-            if finished >= steps:
-                control[DONE] += finished // steps
-                finished %= steps
+            finished = count_draw(control, finished + n, steps)

@@ -6,13 +6,14 @@ the estimate, the sum of their squared distances from their mean, and the accele
 """
 
 import math
-from typing import Any, Final
+from typing import Final
 
 import numpy as np
 
 from midspread.udfs.arithmetic.sums import compensated_sum
 from midspread.udfs.declaring import NULL, Values, compiled
 from midspread.udfs.drivers import DONE, STOP, Indices
+from midspread.udfs.resampling.statistics import statistic
 
 SIGNATURE: Final = (
     "void(float64[::1], int64[::1], int64[::1], int64[::1], float64[::1], float64[::1], int64, "
@@ -25,11 +26,6 @@ NODES: Final = 400
 """Where not each value is left out in turn, so many are."""
 _OUTER: Final = 64
 """Of these, so many are the outermost at either end."""
-
-
-def statistic(*_arguments: Any) -> float:
-    """Stands for a statistic of sorted values, or of sorted pairs, with its parameters."""
-    raise TypeError("replaced when a loop is compiled")
 
 
 def left_out(

@@ -9,10 +9,10 @@ from typing import Final
 import numpy as np
 
 from midspread.udfs.declaring import NULL, Values, compiled
-from midspread.udfs.drivers import DONE, STOP, Indices
-from midspread.udfs.location.trimming import cut_from_each_tail
+from midspread.udfs.drivers import STOP, Indices
+from midspread.udfs.location.trimming import cut_of
 from midspread.udfs.resampling import drawing_loops
-from midspread.udfs.resampling.drawing_loops import Keys
+from midspread.udfs.resampling.drawing_loops import Keys, count_draw
 from midspread.udfs.resampling.randomness import stream
 from midspread.udfs.resampling.resamples import WORDS, Counts, clear, count_few_draws, sum_draws
 from midspread.udfs.resampling.summed import set_power_sums, summed_draws
@@ -80,7 +80,7 @@ def of_middles(
         n = lengths[r]
         x = values[starts[r] : starts[r] + n]
         v = around_the_middle(x)
-        g = cut(n, parameters[0])
+        g = cut_of(n, parameters[0])
         more, weight, original = weights_of(v, g, figure)
         kept = n - 2 * g
         in_closed_form = n >= _SUMMED and not with_squares()
@@ -125,10 +125,7 @@ def of_middles(
             draws[r, j] = figure_of(figure, mean, spread, n, kept)
             if errors.shape[0] > 0:
                 errors[r, j] = figure_of(ERROR, mean, spread, n, kept)
-            finished += n
-            if finished >= steps:
-                control[DONE] += finished // steps
-                finished %= steps
+            finished = count_draw(control, finished + n, steps)
 
 
 def of_counted_middles(
@@ -153,7 +150,7 @@ def of_counted_middles(
         n = lengths[r]
         x = values[starts[r] : starts[r] + n]
         v = around_the_middle(x)
-        g = cut(n, parameters[0])
+        g = cut_of(n, parameters[0])
         more, weight, original = weights_of(v, g, figure)
         counts = np.empty(n, np.int32)
         finished = (first * n) % steps
@@ -173,10 +170,7 @@ def of_counted_middles(
             draws[r, j] = figure_of(figure, mean, spread, n, n - 2 * g)
             if errors.shape[0] > 0:
                 errors[r, j] = figure_of(ERROR, mean, spread, n, n - 2 * g)
-            finished += n
-            if finished >= steps:
-                control[DONE] += finished // steps
-                finished %= steps
+            finished = count_draw(control, finished + n, steps)
 
 
 @compiled
@@ -186,13 +180,6 @@ def around_the_middle(x: Values) -> Values:
     for i in range(x.size):
         v[i] = x[i] - x[x.size // 2]
     return v
-
-
-@compiled
-def cut(n: int, share: float) -> int:
-    """How many are cut from each tail; a median keeps the one or two values in the middle."""
-    g = cut_from_each_tail(n, share)
-    return (n - 1) // 2 if share == 0.5 or 2 * g >= n else g
 
 
 @compiled

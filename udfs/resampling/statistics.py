@@ -152,8 +152,8 @@ def kernel(*arguments: Any) -> float:
     raise TypeError("replaced when a loop is compiled")
 
 
-def statistic(x: Values, p: Values) -> float:
-    """Stands for a statistic of sorted values with its parameters, in loops to be compiled."""
+def statistic(*_arguments: Any) -> float:
+    """Stands for a statistic of sorted values, or of pairs, in loops to be compiled."""
     raise TypeError("replaced when a loop is compiled")
 
 
@@ -172,7 +172,26 @@ def _statistic_x2(x: Values, p: Values) -> float:
     return kernel(x, p[0], p[1])
 
 
-_ADAPTERS: Final = (_statistic_x0, _statistic_x1, _statistic_x2)
+@compiled
+def _statistic_yx0(y: Values, x: Values, p: Values) -> float:
+    return kernel(y, x)
+
+
+@compiled
+def _statistic_yx1(y: Values, x: Values, p: Values) -> float:
+    return kernel(y, x, p[0])
+
+
+@compiled
+def _statistic_yx2(y: Values, x: Values, p: Values) -> float:
+    return kernel(y, x, p[0], p[1])
+
+
+_ADAPTERS: Final[dict[int, tuple[Callable[..., float], ...]]] = {
+    1: (_statistic_x0, _statistic_x1, _statistic_x2),
+    2: (_statistic_yx0, _statistic_yx1, _statistic_yx2),
+}
+"""By the number of columns, then of parameters."""
 
 
 def compiled_for(
@@ -180,18 +199,20 @@ def compiled_for(
 ) -> Callable[..., Any]:
     """Compile a loop that calls the global name ``statistic(x, p)`` for one statistic.
 
+    For a statistic of two columns it calls ``statistic(y, x, p)``.
+
     Parameters
     ----------
     template : callable
         The loop; its name and the function's make the name it is kept under.
     function : Function
-        A function of one column with a single number as result.
+        A function of one column, or of two, with a single number as result.
     signature : str
         numba's signature of the loop.
     """
     assert function.kernel is not None
     replacements = {
-        "statistic": _ADAPTERS[len(function.parameters)],
+        "statistic": _ADAPTERS[len(function.columns)][len(function.parameters)],
         "kernel": function.kernel,
     }
     name = f"{template.__name__.strip('_')}_{function.name}"

@@ -7,8 +7,7 @@ from typing import Any, Final
 import numpy as np
 import numpy.typing as npt
 
-from midspread.udfs.compiling import compile_driver
-from midspread.udfs.declaring import Values, compiled, declared
+from midspread.udfs.declaring import declared
 from midspread.udfs.drivers import Indices
 from midspread.udfs.grouped import row_numbers
 from midspread.udfs.resampling import middles
@@ -81,33 +80,4 @@ def _ranks_of(statistic: Statistic, n: int) -> Indices:
 @functools.cache
 def loop_for(name: str, template: Callable[..., Any], signature: str) -> Callable[..., Any]:
     """A loop compiled around the kernel of a function."""
-    function = declared()[name]
-    if len(function.columns) == 1:
-        return compiled_for(template, function, signature)
-    assert function.kernel is not None
-    adapter = _PAIR_ADAPTERS[len(function.parameters)]
-    replacements = {"statistic": adapter, "kernel": function.kernel}
-    return compile_driver(template, replacements, f"{template.__name__}_{name}", signature)
-
-
-def kernel(*_arguments: Any) -> float:
-    """Stands for the kernel of a statistic of pairs."""
-    raise TypeError("replaced when a loop is compiled")
-
-
-@compiled
-def _statistic_yx0(y: Values, x: Values, _p: Values) -> float:
-    return kernel(y, x)
-
-
-@compiled
-def _statistic_yx1(y: Values, x: Values, p: Values) -> float:
-    return kernel(y, x, p[0])
-
-
-@compiled
-def _statistic_yx2(y: Values, x: Values, p: Values) -> float:
-    return kernel(y, x, p[0], p[1])
-
-
-_PAIR_ADAPTERS: Final = (_statistic_yx0, _statistic_yx1, _statistic_yx2)
+    return compiled_for(template, declared()[name], signature)

@@ -14,12 +14,13 @@ from midspread.udfs.arithmetic.order_statistics import (
     midpoint,
 )
 from midspread.udfs.arithmetic.quickselect import put_in_place
+from midspread.udfs.arithmetic.windows import first_not_below
 from midspread.udfs.compiling import compile_driver
 from midspread.udfs.declaring import NULL, Values, compiled
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.location.trimming import cut_from_each_tail, trimmed_mean
 from midspread.udfs.scale.winsorized import winsorized_deviation
-from midspread.udfs.sensitivity.pooled import Windows, loses, pool, rank, re_express, split
+from midspread.udfs.sensitivity.pooled import Windows, loses, pool, re_express, split
 
 WIDTH: Final = 6
 """Figures of a choice, at the places below; those of two levels with the baseline first."""
@@ -75,9 +76,9 @@ def _over_choices(
                 if control[STOP] != 0:
                     return
                 first, stop = windows[r, p, rule, 0], windows[r, p, rule, 1]
-                a = rank(baseline_places, first)
-                b = rank(baseline_places, stop)
-                c, d = rank(other_places, first), rank(other_places, stop)
+                a = first_not_below(baseline_places, first)
+                b = first_not_below(baseline_places, stop)
+                c, d = first_not_below(other_places, first), first_not_below(other_places, stop)
                 _figures(of_baseline[a:b], of_other[c:d], size, shares, out[r, choice:])
                 choice += shares.size
         control[DONE] += m + n

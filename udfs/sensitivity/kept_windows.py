@@ -5,22 +5,16 @@ from typing import Final
 
 import numpy as np
 
+from midspread.udfs.arithmetic.windows import first_not_below
 from midspread.udfs.declaring import Values, compiled
 from midspread.udfs.drivers import STOP, Indices
-from midspread.udfs.location.trimming import cut_from_each_tail
+from midspread.udfs.location.trimming import cut_of
 
 TOTAL_SIGNATURE: Final = "void(float64[::1], float64, float64[::1])"
 SIGNATURE: Final = (
     "void(float64[::1], int64[::1], float64[::1], int64[::1], int64[::1], float64[::1], float64, "
     "boolean, int64, int64, float64[:, ::1], int64[::1])"
 )
-
-
-@compiled
-def cut_of(n: int, share: float) -> int:
-    """How many values go from each tail; of a median all but the one or two in the middle."""
-    g = cut_from_each_tail(n, share)
-    return (n - 1) // 2 if share == 0.5 or 2 * g >= n else g
 
 
 @compiled
@@ -166,7 +160,7 @@ def _gone_before(x: Values, gone: Values, rank: int) -> int:
     low, high = 0, gone.size
     while low < high:
         j = (low + high) // 2
-        place = _first_of(x, gone[j]) + (j - _first_of(gone, gone[j]))
+        place = first_not_below(x, gone[j]) + (j - first_not_below(gone, gone[j]))
         if place - j <= rank:
             low = j + 1
         else:
@@ -178,16 +172,3 @@ def total_of(x: Values, small: float, out: Values) -> None:
     """Sum of the finite values, made small, and what rounding took from it."""
     sums, lost = running_sums(x, small)
     out[0], out[1] = sums[x.size], lost[x.size]
-
-
-@compiled
-def _first_of(x: Values, value: float) -> int:
-    """The place of the first of sorted values that is not below a value."""
-    low, high = 0, x.size
-    while low < high:
-        middle = (low + high) // 2
-        if x[middle] < value:
-            low = middle + 1
-        else:
-            high = middle
-    return low

@@ -99,16 +99,3 @@ def split(y: Values, labels: Labels, label: int, own: Values, places: Indices) -
             own[written] = y[i]
             places[written] = i
             written += 1
-
-
-@compiled
-def rank(places: Indices, place: int) -> int:
-    """How many of some ascending places come before one; numba's own takes long to compile."""
-    low, high = 0, places.size
-    while low < high:
-        middle = (low + high) // 2
-        if places[middle] < place:
-            low = middle + 1
-        else:
-            high = middle
-    return low

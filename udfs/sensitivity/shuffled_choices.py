@@ -13,12 +13,13 @@ from typing import Final
 import numpy as np
 
 from midspread.udfs.arithmetic.order_statistics import distance
+from midspread.udfs.arithmetic.windows import first_not_below
 from midspread.udfs.compiling import compile_driver
 from midspread.udfs.declaring import Values, compiled
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.resampling.randomness import below, content_key, stream
 from midspread.udfs.sensitivity.choice_figures import median_place, without_rounding
-from midspread.udfs.sensitivity.pooled import Windows, loses, pool, rank, re_express
+from midspread.udfs.sensitivity.pooled import Windows, loses, pool, re_express
 
 STEPS: Final = 1024
 """Critical values are given for 1 / df = 0, 1/STEPS, …, 1, as logarithms; between, on a line."""
@@ -150,7 +151,7 @@ def deal(key: np.uint64, chosen: Indices, rest: Indices) -> None:
 def _sums_from_the_middle(y: Values, places: Indices, sums: Values, squares: Values) -> None:
     """Running sums of the values at some places, 0 at the middle of all values."""
     n = places.size
-    middle = rank(places, y.size // 2)
+    middle = first_not_below(places, y.size // 2)
     total = square = 0.0
     sums[middle] = squares[middle] = 0.0
     for i in range(middle, n):
@@ -183,8 +184,8 @@ def _count(
     counts: Indices,
 ) -> None:
     """Add what each estimator says of the values in a window: below 0, above 0, excludes 0."""
-    a, b = rank(baseline, window[0]), rank(baseline, window[1])
-    c, d = rank(other, window[0]), rank(other, window[1])
+    a, b = first_not_below(baseline, window[0]), first_not_below(baseline, window[1])
+    c, d = first_not_below(other, window[0]), first_not_below(other, window[1])
     if a == b or c == d:
         return
     for e in range(shares.size):

@@ -13,7 +13,7 @@ from midspread.udfs.declaring import NULL, Values, declared, helper, null_mask
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.grouped import Groups
 from midspread.udfs.resampling.evaluating import evaluate
-from midspread.udfs.resampling.statistics import Statistic, compiled_for, read_statistic
+from midspread.udfs.resampling.statistics import Statistic, compiled_for, read_statistic, statistic
 from midspread.udfs.resampling.ways_of_drawing import reads_few_ranks
 from midspread.udfs.sensitivity.kept_windows import SIGNATURE, means_without
 from midspread.udfs.sensitivity.remainders import (
@@ -33,11 +33,6 @@ _EACH_SIGNATURE: Final = (
     "void(float64[::1], float64[::1], int64[::1], int64[:, ::1], float64[::1], int64, int64, "
     "int64, float64[::1], int64[::1])"
 )
-
-
-def statistic(*_arguments: Any) -> float:
-    """Stands for a statistic of sorted values with its parameters."""
-    raise TypeError("replaced when a loop is compiled")
 
 
 def without_samples(

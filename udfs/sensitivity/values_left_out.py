@@ -21,10 +21,11 @@ from midspread.udfs.declaring import (
 )
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.grouped import Stopped
+from midspread.udfs.location.trimming import cut_of
 from midspread.udfs.resampling.evaluating import evaluate
-from midspread.udfs.resampling.statistics import Statistic, compiled_for, read_statistic
+from midspread.udfs.resampling.statistics import Statistic, compiled_for, read_statistic, statistic
 from midspread.udfs.resampling.ways_of_drawing import FEW_RANKS, ranks_read, reads_few_ranks
-from midspread.udfs.sensitivity.kept_windows import TOTAL_SIGNATURE, cut_of, scale_down, total_of
+from midspread.udfs.sensitivity.kept_windows import TOTAL_SIGNATURE, scale_down, total_of
 from midspread.udfs.sensitivity.remainders import (
     MIDDLES,
     Remainder,
@@ -51,11 +52,6 @@ class _Runs:
     firsts: Indices
     without: Values
     changes: Values
-
-
-def statistic(*_arguments: Any) -> float:
-    """Stands for a statistic of sorted values with its parameters."""
-    raise TypeError("replaced when a loop is compiled")
 
 
 def without_each(

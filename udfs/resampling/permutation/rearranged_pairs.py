@@ -2,42 +2,14 @@
 
 import functools
 from collections.abc import Callable
-from typing import Any, Final
+from typing import Any
 
 import numpy as np
 
-from midspread.udfs.compiling import compile_driver
 from midspread.udfs.declaring import Values, compiled, declared
 from midspread.udfs.drivers import DONE, STOP, Indices
 from midspread.udfs.resampling.permutation.orders import Codes, Words, arrange
-
-
-def kernel(*arguments: Any) -> float:
-    """Stands for the kernel of a statistic."""
-    raise TypeError("replaced when a loop is compiled")
-
-
-def pair_statistic(y: Values, x: Values, p: Values) -> float:
-    """Stands for a statistic of pairs with its parameters."""
-    raise TypeError("replaced when a loop is compiled")
-
-
-@compiled
-def _pairs_p0(y: Values, x: Values, p: Values) -> float:
-    return kernel(y, x)
-
-
-@compiled
-def _pairs_p1(y: Values, x: Values, p: Values) -> float:
-    return kernel(y, x, p[0])
-
-
-@compiled
-def _pairs_p2(y: Values, x: Values, p: Values) -> float:
-    return kernel(y, x, p[0], p[1])
-
-
-_ADAPTERS: Final = (_pairs_p0, _pairs_p1, _pairs_p2)
+from midspread.udfs.resampling.statistics import compiled_for, statistic
 
 
 @compiled
@@ -116,19 +88,16 @@ def _over_pairs(
                 if end > i + 1:
                     sort_in_place(moved[i:end])
                 i = end
-            draws[target[job] + r - first[job]] = pair_statistic(y, moved, p)
+            draws[target[job] + r - first[job]] = statistic(y, moved, p)
             control[DONE] += x.size
 
 
 @functools.cache
 def over_pairs(name: str) -> Callable[..., Any]:
     """The compiled loop over rearranged pairs for one statistic; see `_over_pairs`."""
-    function = declared()[name]
-    assert function.kernel is not None
-    return compile_driver(
+    return compiled_for(
         _over_pairs,
-        {"pair_statistic": _ADAPTERS[len(function.parameters)], "kernel": function.kernel},
-        f"over_pairs_{name}",
+        declared()[name],
         "void(float64[::1], float64[::1], int64[::1], int32[::1], int64[::1], int64[::1], "
         "int64[::1], float64[::1], int64[::1], uint64[::1], int64[::1], int64[::1], int64[::1], "
         "int64[::1], float64[::1], int64[::1])",
